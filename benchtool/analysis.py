@@ -1,0 +1,182 @@
+"""A bench sheet in, the result of the whole bench session out: the one path that every command takes."""
+
+from __future__ import annotations
+
+import datetime
+import os
+from collections.abc import Callable, Sequence
+from dataclasses import replace
+from types import MappingProxyType
+
+import numpy as np
+
+from benchtool import __version__
+from benchtool.compression import MeasuredSweep, choose_reference, compare_drives, signal_to_noise_db
+from benchtool.errors import BenchtoolError, FaultsError, SheetError, SweepFileError
+from benchtool.figures import FigurePlan, plan_figures, target_key
+from benchtool.findings import buried_parameters, device_findings
+from benchtool.model import BenchResult, DeviceResult, Figure, SignalPath, Sweep, SweepResult
+from benchtool.pads import PadBank, de_embed, signal_path
+from benchtool.response import span_of
+from benchtool.sheet import BenchSheet, Device, SweepEntry
+from benchtool.touchstone import read_sweep
+from benchtool.units import format_si
+from benchtool.verdict import judge, summarise
+
+__all__ = ["analyse", "analyse_device", "correct_sweep", "made_at", "read_all"]
+
+Progress = Callable[[str], None]
+
+
+def made_at() -> str:
+    """Return the time a result is stamped with, ISO 8601 UTC; SOURCE_DATE_EPOCH sets it where builds must repeat."""
+    epoch = os.environ.get("SOURCE_DATE_EPOCH")
+    now = datetime.datetime.fromtimestamp(int(epoch), datetime.UTC) if epoch else datetime.datetime.now(datetime.UTC)
+    return now.strftime("%Y-%m-%dT%H:%M:%SZ")
+
+
+def analyse(sheet: BenchSheet, progress: Progress | None = None, *, strict: bool = False) -> BenchResult:
+    """Return everything that can be worked out from a bench sheet and its sweeps.
+
+    Parameters
+    ----------
+    sheet : from :func:`benchtool.sheet.load_sheet` or :func:`benchtool.sheet.sheet_from_files`
+    progress : called with each device's name when that device is done
+    strict : refuse every sweep file that does not follow the standard to the letter
+
+    Raises
+    ------
+    BenchtoolError : a sweep or pad cannot be read or used; all faulty files are named at once.
+    """
+    bank = PadBank.of(sheet)
+    sweeps = read_all(sheet, strict)
+    devices = []
+    for number, device in enumerate(sheet.devices, start=1):
+        devices.append(analyse_device(sheet, device, number, bank, [sweeps[entry.file] for entry in device.sweeps]))
+        if progress is not None:
+            progress(device.name)
+    return BenchResult(
+        sheet.title,
+        sheet.operator,
+        sheet.date,
+        sheet.path,
+        sheet.sha256,
+        __version__,
+        made_at(),
+        tuple(devices),
+    )
+
+
+def read_all(sheet: BenchSheet, strict: bool) -> dict[object, Sweep]:
+    """Return every sweep of the sheet by its path; raises all faults together."""
+    sweeps: dict[object, Sweep] = {}
+    faults: list[BenchtoolError] = []
+    for device in sheet.devices:
+        for entry in device.sweeps:
+            if entry.file in sweeps:
+                continue
+            try:
+                sweep = read_sweep(entry.file, name=entry.name, strict=strict)
+                _check_usable(sweep, entry)
+                sweeps[entry.file] = sweep
+            except SweepFileError as fault:
+                faults.append(fault)
+    if len(faults) == 1:
+        raise faults[0]
+    if faults:
+        raise FaultsError(faults)
+    return sweeps
+
+
+def _check_usable(sweep: Sweep, entry: SweepEntry) -> None:
+    if "S21" not in sweep.measured:
+        raise SweepFileError(
+            entry.file, "S21 was not measured, only " + ", ".join(sweep.measured), "sweep from port 1 to port 2"
+        )
+    if not np.any(sweep.s21):
+        raise SweepFileError(entry.file, "S21 is zero at every frequency", "check the cables, then sweep again")
+    if sweep.frequency_hz.size < 3:
+        raise SweepFileError(
+            entry.file, f"only {sweep.frequency_hz.size} frequencies", "sweep at least 3; 201 or more is usual"
+        )
+
+
+def correct_sweep(sheet: BenchSheet, entry: SweepEntry, sweep: Sweep, bank: PadBank, at_hz: float) -> SweepResult:
+    """Return one sweep at the device's own ports; its path has no level beyond the drive yet."""
+    at_device, findings, into, out = de_embed(sweep, entry, sheet, bank, at_hz)
+    raw = replace(sweep, findings=(*sweep.findings, *findings))
+    return SweepResult(entry.name, raw, at_device, signal_path(entry, sheet, bank, at_hz, None), into, out)
+
+
+def analyse_device(
+    sheet: BenchSheet, device: Device, number: int, bank: PadBank, sweeps: Sequence[Sweep]
+) -> DeviceResult:
+    """Return the result of one device; `number` is its place in the sheet, counted from 1, for messages."""
+    measured = [
+        _measure(sheet, device, number, entry, sweep, bank) for entry, sweep in zip(device.sweeps, sweeps, strict=True)
+    ]
+    reference, reason = choose_reference(measured)
+    at_hz = reference.plan.design_hz
+    compression = compare_drives(measured, reference, reason, at_hz)
+    findings = device_findings(device.kind, device.design_hz, measured, reference, compression, sheet.analyzer)
+    figures = _withhold_buried(reference.plan, reference, sheet)
+    results = tuple(judge(figures[target_key(target)], target) for target in device.targets)
+    return DeviceResult(
+        device.name,
+        device.kind,
+        at_hz,
+        device.design_hz is not None,
+        device.window_hz,
+        reference.file,
+        tuple(sweep.result for sweep in measured),
+        MappingProxyType(figures),
+        results,
+        compression,
+        findings,
+        summarise(results, figures, findings),
+    )
+
+
+def _measure(
+    sheet: BenchSheet, device: Device, number: int, entry: SweepEntry, sweep: Sweep, bank: PadBank
+) -> MeasuredSweep:
+    _check_window(sheet, device, number, sweep)
+    middle = float(np.sqrt(sweep.frequency_hz[0] * sweep.frequency_hz[-1]))
+    result = correct_sweep(sheet, entry, sweep, bank, device.design_hz or middle)
+    plan = plan_figures(result.sweep, device.kind, device.design_hz, device.window_hz, device.targets)
+    if device.design_hz is None:
+        result = correct_sweep(sheet, entry, sweep, bank, plan.design_hz)
+    path = _path(sheet, entry, bank, plan, result.sweep)
+    return MeasuredSweep(replace(result, path=path, noise_db=signal_to_noise_db(result.sweep, plan)), plan)
+
+
+def _check_window(sheet: BenchSheet, device: Device, number: int, sweep: Sweep) -> None:
+    if device.window_hz is None or span_of(sweep.frequency_hz, device.window_hz) > 0:
+        return
+    low, high = (format_si(f, "Hz") for f in device.window_hz)
+    first, last = (format_si(float(sweep.frequency_hz[i]), "Hz") for i in (0, -1))
+    raise SheetError(
+        sheet.path or sweep.name,
+        f"device[{number}].window",
+        f"no sample of {sweep.name} lies between {low} and {high}; the sweep runs from {first} to {last}",
+        "change the window, or sweep there",
+    )
+
+
+def _path(sheet: BenchSheet, entry: SweepEntry, bank: PadBank, plan: FigurePlan, sweep: Sweep) -> SignalPath:
+    f = sweep.frequency_hz
+    inside = f[0] <= plan.design_hz <= f[-1]
+    gain = float(plan.extract(sweep.s)["gain" if plan.kind != "filter" else "insertion_loss"]) if inside else None
+    if gain is not None and plan.kind == "filter":
+        gain = -gain
+    return signal_path(entry, sheet, bank, plan.design_hz, gain)
+
+
+def _withhold_buried(plan: FigurePlan, reference: MeasuredSweep, sheet: BenchSheet) -> dict[str, Figure]:
+    """Return the figures of the reference sweep; a return loss buried under pads is withheld (a finding says why)."""
+    figures = plan.figures(reference.result.sweep.s)
+    buried = buried_parameters(reference, sheet.analyzer)
+    for name, key in (("S11", "input_return_loss"), ("S22", "output_return_loss")):
+        if name in buried and key in figures:
+            figures[key] = replace(figures[key], value=None, bound=None)
+    return figures

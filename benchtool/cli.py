@@ -1,0 +1,223 @@
+"""The command line: the only module that prints, exits or catches. Everything heavy is imported inside a command."""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, NoReturn
+
+import typer
+
+from benchtool import __version__
+
+if TYPE_CHECKING:
+    from collections.abc import Iterator, Sequence
+
+    from benchtool.model import BenchResult
+    from benchtool.sheet import BenchSheet
+
+__all__ = ["app", "main"]
+
+app = typer.Typer(
+    no_args_is_help=True,
+    add_completion=False,
+    pretty_exceptions_enable=False,
+    help="Two-port sweeps in, one measured-vs-target page per device out.",
+)
+
+Bench = Annotated[
+    list[Path],
+    typer.Argument(
+        help="A folder holding bench.toml, a bench sheet, or .s2p files for a quick look.", show_default=False
+    ),
+]
+Out = Annotated[Path | None, typer.Option("--out", help="Folder for the results; made if it is not there.")]
+Strict = Annotated[bool, typer.Option("--strict", help="Refuse sweep files that do not follow the standard.")]
+Design = Annotated[str | None, typer.Option("--design", help="Design frequency of a quick look, such as '21.4 MHz'.")]
+Source = Annotated[float | None, typer.Option("--source", help="Level leaving port 1 in dBm, for a quick look.")]
+InputPad = Annotated[
+    list[float] | None,
+    typer.Option("--input-pad", help="Added input-side pad in dB, for a quick look: once, or once for each file."),
+]
+OutputPad = Annotated[
+    list[float] | None,
+    typer.Option("--output-pad", help="Added output-side pad in dB, for a quick look: once, or once for each file."),
+]
+
+
+def main() -> NoReturn:
+    """Run the command line; a fault of the input is one line on standard error and exit status 2."""
+    from benchtool.errors import BenchtoolError
+
+    try:
+        app(standalone_mode=True)
+    except BenchtoolError as error:
+        for line in error.lines():
+            print(line, file=sys.stderr)
+        sys.exit(2)
+    except KeyboardInterrupt:
+        print("stopped; files already written are whole", file=sys.stderr)
+        sys.exit(130)
+    sys.exit(0)
+
+
+def _version(wanted: bool) -> None:
+    if wanted:
+        print(f"benchtool {__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def _root(
+    version: Annotated[
+        bool, typer.Option("--version", callback=_version, is_eager=True, help="Show it and exit.")
+    ] = False,
+) -> None:
+    pass
+
+
+def _load(
+    bench: Sequence[Path],
+    design: str | None,
+    source: float | None,
+    inputs: list[float] | None,
+    outputs: list[float] | None,
+) -> tuple[BenchSheet, Path]:
+    """Return the sheet that the arguments mean, and the folder that results go to by default."""
+    from benchtool.errors import RequestError
+    from benchtool.sheet import load_sheet, sheet_from_files
+
+    sweeps = [path for path in bench if path.suffix.lower() == ".s2p"]
+    if len(sweeps) == len(bench):
+        sheet = sheet_from_files(
+            sweeps, design=design, source_dbm=source, input_pads_db=inputs or [], output_pads_db=outputs or []
+        )
+        return sheet, sweeps[0].parent / "report"
+    if len(bench) > 1:
+        raise RequestError(
+            f"{len(bench)} arguments that are not all .s2p files", "give one folder, one sheet, or only .s2p files"
+        )
+    quick = {"--design": design, "--source": source, "--input-pad": inputs, "--output-pad": outputs}
+    given = [option for option, value in quick.items() if value]
+    if given:
+        raise RequestError(f"{' and '.join(given)} with a bench sheet", "write it in the sheet instead")
+    sheet = load_sheet(bench[0])
+    return sheet, sheet.folder / "report"
+
+
+def _analyse(sheet: BenchSheet, strict: bool) -> BenchResult:
+    from benchtool.analysis import analyse
+
+    if len(sheet.devices) < 2 or not sys.stderr.isatty():
+        return analyse(sheet, strict=strict)
+    from rich.console import Console
+    from rich.progress import Progress
+
+    with Progress(console=Console(stderr=True), transient=True) as progress:
+        task = progress.add_task("Measuring", total=len(sheet.devices))
+        return analyse(sheet, lambda _name: progress.advance(task), strict=strict)
+
+
+def _pages(result: BenchResult) -> Iterator[tuple[str, bytes]]:
+    """Yield name and content of every page file."""
+    from benchtool.export import unique_stems
+    from benchtool.page import render_page
+
+    stems = unique_stems(device.name for device in result.devices)
+    for stem, device in zip(stems, result.devices, strict=True):
+        pdf, png = render_page(result, device)
+        yield f"{stem}.pdf", pdf
+        yield f"{stem}.png", png
+
+
+@app.command()
+def report(
+    bench: Bench,
+    out: Out = None,
+    no_page: Annotated[bool, typer.Option("--no-page", help="Write the numbers only.")] = False,
+    strict: Strict = False,
+    design: Design = None,
+    source: Source = None,
+    input_pad: InputPad = None,
+    output_pad: OutputPad = None,
+) -> None:
+    """Measure every device, judge it against its targets, and write one page for each.
+
+    Exit status: 0 every target met or none set; 1 a target missed or undecided; 2 the input cannot be used.
+    """
+    from benchtool.export import prepare_folder, results_csv, results_json, write_whole
+    from benchtool.terminal import print_result
+
+    sheet, folder = _load(bench, design, source, input_pad, output_pad)
+    folder = out or folder
+    result = _analyse(sheet, strict)
+    prepare_folder(folder)
+    for name, data in () if no_page else _pages(result):
+        write_whole(folder / name, data)
+    write_whole(folder / "results.csv", results_csv(result))
+    write_whole(folder / "results.json", results_json(result))
+    print_result(result, folder)
+    if any(device.verdict in ("missed", "undecided") for device in result.devices):
+        raise typer.Exit(1)
+
+
+@app.command()
+def draft(folder: Annotated[Path, typer.Argument(help="Folder with .s2p files.", show_default=False)]) -> None:
+    """Write a first bench.toml from the sweeps in a folder, with a comment at every line to fill; never overwrites."""
+    from benchtool.draft import draft_sheet, sweep_files
+    from benchtool.errors import RequestError
+    from benchtool.export import write_whole
+    from benchtool.touchstone import read_sweep
+
+    target = folder / "bench.toml"
+    files = sweep_files(folder)
+    if target.exists():
+        raise RequestError(f"{target} is already there", "edit it, or move it away first")
+    write_whole(target, draft_sheet(folder, [read_sweep(path, name=path.name) for path in files]).encode())
+    print(
+        f"{target}: {len(files)} sweeps; fill in the lines marked with a comment, then run: benchtool report {folder}"
+    )
+
+
+@app.command()
+def inspect(
+    files: Annotated[list[Path], typer.Argument(help="Touchstone files.", show_default=False)], strict: Strict = False
+) -> None:
+    """Show what is in each file, and every finding about it."""
+    from benchtool.errors import BenchtoolError
+    from benchtool.terminal import print_sweep
+    from benchtool.touchstone import read_sweep
+
+    faults = 0
+    for path in files:
+        try:
+            sweep = read_sweep(path, strict=strict)
+        except BenchtoolError as error:
+            print(error, file=sys.stderr)
+            faults += 1
+        else:
+            print_sweep(sweep)
+    if faults:
+        raise typer.Exit(2)
+
+
+@app.command()
+def correct(
+    bench: Bench,
+    out: Out = None,
+    strict: Strict = False,
+    design: Design = None,
+    source: Source = None,
+    input_pad: InputPad = None,
+    output_pad: OutputPad = None,
+) -> None:
+    """Write the sweeps at the device's own ports, added pads taken out, as .s2p files for other programs."""
+    from benchtool.export import corrected_files, prepare_folder, write_whole
+
+    sheet, folder = _load(bench, design, source, input_pad, output_pad)
+    folder = out or folder.parent / "corrected"
+    files = corrected_files(sheet, strict=strict)
+    prepare_folder(folder)
+    for name, text in files:
+        write_whole(folder / name, text.encode())
+        print(folder / name)

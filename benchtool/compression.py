@@ -1,0 +1,153 @@
+"""Sweeps of one device at several drives in; which was compressed, by how much and where out.
+
+At each frequency compression is the reference sweep's gain less this sweep's gain, with the added pads already out.
+The reference is the sweep at the lowest drive that noise allows.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+
+from benchtool.figures import FigurePlan
+from benchtool.fitting import fit_curve
+from benchtool.model import ComplexArray, Compression, CompressionPoint, FloatArray, Sweep, SweepResult
+from benchtool.units import to_db, wrap_degrees
+
+__all__ = ["COMPRESSED_DB", "MeasuredSweep", "choose_reference", "compare_drives", "signal_to_noise_db"]
+
+COMPRESSED_DB: Final = 1.0
+"""A sweep further down than this is called compressed (the 1 dB compression point, common practice)."""
+_REFERENCE_SNR_DB: Final = 30.0
+"""Signal to noise at the peak that a sweep needs to serve as the reference: 0.27 dB on a single sample."""
+_BAND_NODES: Final = 41
+_SAME_DRIVE_DB: Final = 0.01
+
+
+@dataclass(frozen=True, eq=False)
+class MeasuredSweep:
+    """A sweep at the device with its line and the plan of its figures."""
+
+    result: SweepResult
+    plan: FigurePlan
+
+    @property
+    def file(self) -> str:
+        """Name of the sweep's file."""
+        return self.result.file
+
+    @property
+    def drive_dbm(self) -> float | None:
+        """Drive at the design frequency."""
+        return self.result.drive_dbm
+
+
+def signal_to_noise_db(sweep: Sweep, plan: FigurePlan) -> float | None:
+    """Return the signal to noise ratio of S21 at its peak in dB; None where the noise cannot be told or is none."""
+    noise = plan.noise.get("S21")
+    if noise is None:
+        return None
+    peak = 10.0 ** (float(plan.passband.figures(sweep.s21).peak_gain) / 20.0)
+    sigma = float(noise.sigma(np.array(peak)))
+    return None if sigma == 0.0 else to_db(peak / sigma)
+
+
+def choose_reference(sweeps: Sequence[MeasuredSweep]) -> tuple[MeasuredSweep, str]:
+    """Return the sweep to take as small-signal, and why in one sentence.
+
+    It is the lowest drive whose signal stands 30 dB above its noise at the peak; where no sweep does, the one that
+    stands highest above its noise.
+    """
+    if len(sweeps) == 1:
+        return sweeps[0], "it is the only sweep"
+    known = [sweep for sweep in sweeps if sweep.drive_dbm is not None]
+    if len(known) < len(sweeps):
+        # Without levels the order of drives is still known where only pads differ: more input pad is less drive.
+        quiet = max(sweeps, key=lambda sweep: sum(pad.loss_db for pad in sweep.result.path.input_pads))
+        return quiet, "it has the most input pad; the source level is not known, so drives are not known either"
+    ordered = sorted(sweeps, key=lambda sweep: sweep.drive_dbm or 0.0)
+    ratios = [signal_to_noise_db(sweep.result.sweep, sweep.plan) for sweep in ordered]
+    for rank, (sweep, ratio) in enumerate(zip(ordered, ratios, strict=True)):
+        if ratio is None or ratio >= _REFERENCE_SNR_DB:
+            if rank == 0:
+                return sweep, f"it has the lowest drive, {sweep.drive_dbm:.1f} dBm"
+            return sweep, f"it has the lowest drive that noise allows, {sweep.drive_dbm:.1f} dBm"
+    best = int(np.argmax([ratio or 0.0 for ratio in ratios]))
+    return ordered[best], "every sweep is noisy, and this one least"
+
+
+def _over_band(sweep: Sweep, plan: FigurePlan, nodes: FloatArray) -> ComplexArray:
+    """Return S21 of a sweep at the nodes, (g,), from its own smooth curve."""
+    f, noise = sweep.frequency_hz, plan.noise.get("S21")
+    curve = fit_curve(f, sweep.s21, float(nodes[0]), float(nodes[-1]), noise)
+    value, _ = curve.on_grid(sweep.s21)
+    turned = np.unwrap(np.angle(value))
+    level = np.interp(nodes, curve.grid_hz, to_db(value))
+    return np.asarray(10.0 ** (level / 20.0) * np.exp(1j * np.interp(nodes, curve.grid_hz, turned)))
+
+
+def _band(sweeps: Sequence[MeasuredSweep], reference: MeasuredSweep, at_hz: float) -> FloatArray:
+    """Return the nodes over which sweeps are compared: the reference's half-power band that all sweeps cover."""
+    figures = reference.plan.passband.figures(reference.result.sweep.s21)
+    low = max(float(sweep.result.sweep.frequency_hz[0]) for sweep in sweeps)
+    high = min(float(sweep.result.sweep.frequency_hz[-1]) for sweep in sweeps)
+    lower, upper = float(figures.lower_edge), float(figures.upper_edge)
+    low = max(low, lower) if np.isfinite(lower) else low
+    high = min(high, upper) if np.isfinite(upper) else high
+    return np.linspace(low, high, _BAND_NODES) if high > low else np.array([at_hz])
+
+
+def compare_drives(
+    sweeps: Sequence[MeasuredSweep], reference: MeasuredSweep, reason: str, at_hz: float
+) -> Compression | None:
+    """Return every sweep against the reference, lowest drive first; None where there is only one sweep.
+
+    Gain change and phase change are those at `at_hz` and at the reference's peak; the worst is over the reference's
+    half-power band.
+    """
+    if len(sweeps) < 2:
+        return None
+    nodes = _band(sweeps, reference, at_hz)
+    peak_hz = float(reference.plan.passband.figures(reference.result.sweep.s21).peak_frequency)
+    base = _over_band(reference.result.sweep, reference.plan, nodes)
+    base_at, base_peak = _at(reference, at_hz), _at(reference, peak_hz)
+    points = []
+    for sweep in sweeps:
+        path = sweep.result.path
+        here, peak = _at(sweep, at_hz), _at(sweep, peak_hz)
+        change = to_db(base) - to_db(_over_band(sweep.result.sweep, sweep.plan, nodes))
+        worst = int(np.argmax(change))
+        drop = to_db(base_at) - to_db(here)
+        deepest = max(float(change[worst]), drop)
+        points.append(
+            CompressionPoint(
+                sweep.file,
+                path.drive_dbm,
+                path.device_output_dbm,
+                to_db(here),
+                drop,
+                float(wrap_degrees(float(np.degrees(np.angle(here * np.conj(base_at)))))),
+                to_db(base_peak) - to_db(peak),
+                deepest,
+                float(nodes[worst]) if deepest > drop else at_hz,
+                sweep is not reference and deepest > COMPRESSED_DB,
+            )
+        )
+    points.sort(key=lambda point: (point.drive_dbm is None, point.drive_dbm or 0.0, -point.gain_db))
+    return Compression(at_hz, peak_hz, reference.file, reason, tuple(points))
+
+
+def _at(sweep: MeasuredSweep, at_hz: float) -> complex:
+    """Return S21 of a sweep at one frequency from its smooth curve; NaN outside the sweep."""
+    plan, trace = sweep.plan, sweep.result.sweep
+    f = trace.frequency_hz
+    if not f[0] <= at_hz <= f[-1]:
+        return complex("nan")
+    grid = plan.passband.curve.grid_hz
+    if grid[0] <= at_hz <= grid[-1]:
+        return complex(plan.passband.curve.at(trace.s21, at_hz)[0])
+    width = 0.05 * float(f[-1] - f[0])
+    return complex(fit_curve(f, trace.s21, at_hz - width, at_hz + width, plan.noise.get("S21")).at(trace.s21, at_hz)[0])

@@ -1,0 +1,294 @@
+"""Results in; results.json, results.csv and corrected Touchstone files out, each written whole or not at all."""
+
+from __future__ import annotations
+
+import csv
+import io
+import json
+import math
+import os
+import re
+import tempfile
+from collections.abc import Iterable, Mapping
+from pathlib import Path
+from typing import Any, Final
+
+import numpy as np
+
+from benchtool import __version__
+from benchtool.analysis import correct_sweep, read_all
+from benchtool.errors import OutputError
+from benchtool.model import BenchResult, DeviceResult, Figure, SweepResult
+from benchtool.pads import PadBank
+from benchtool.sheet import BenchSheet
+from benchtool.touchstone import format_sweep
+
+__all__ = [
+    "FORMAT",
+    "corrected_files",
+    "file_stem",
+    "prepare_folder",
+    "results_csv",
+    "results_json",
+    "unique_stems",
+    "write_whole",
+]
+
+FORMAT: Final = "benchtool-results/1"
+
+_LONGEST_STEM: Final = 100
+"""Bytes of a file name that leave room for a suffix within the 255 that file systems allow."""
+
+
+def write_whole(path: Path, data: bytes) -> None:
+    """Write a file so that it appears whole or not at all; an existing one is replaced only by a whole one.
+
+    Raises
+    ------
+    OutputError : the disk is full, or the folder cannot be written.
+    """
+    handle, name = -1, ""
+    try:
+        handle, name = tempfile.mkstemp(prefix=".benchtool-", dir=path.parent)
+        with os.fdopen(handle, "wb") as stream:
+            stream.write(data)
+            stream.flush()
+            os.fsync(stream.fileno())
+        # mkstemp makes files for the owner's eyes only; a page is meant to be passed on.
+        umask = os.umask(0)
+        os.umask(umask)
+        Path(name).chmod(0o666 & ~umask)
+        Path(name).replace(path)
+    except OSError as error:
+        raise OutputError(
+            path, f"cannot be written ({error.strerror or error})", "free the disk, or choose another folder with --out"
+        ) from None
+    finally:
+        if name:
+            Path(name).unlink(missing_ok=True)
+
+
+def prepare_folder(folder: Path) -> None:
+    """Make the output folder.
+
+    Raises
+    ------
+    OutputError : it cannot be made, or something that is no folder has its name.
+    """
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise OutputError(
+            folder, f"cannot be made ({error.strerror or error})", "choose another folder with --out"
+        ) from None
+
+
+def file_stem(name: str) -> str:
+    """Return a device name as a file name that every common file system takes, without its suffix.
+
+    >>> file_stem("stage 2: 50% <limiting>")
+    'stage 2_ 50% _limiting_'
+    """
+    stem = re.sub(r'[\x00-\x1f\x7f/\\:*?"<>|]', "_", name).strip(" .") or "device"
+    while len(stem.encode()) > _LONGEST_STEM:
+        stem = stem[:-1]
+    return stem
+
+
+def unique_stems(names: Iterable[str]) -> list[str]:
+    """Return one file stem for each name, no two alike even where file systems ignore case."""
+    taken: set[str] = set()
+    stems = []
+    for name in names:
+        stem = base = file_stem(name)
+        count = 1
+        while stem.casefold() in taken or stem.casefold() == "results":
+            count += 1
+            stem = f"{base} ({count})"
+        taken.add(stem.casefold())
+        stems.append(stem)
+    return stems
+
+
+def _number(value: float | None) -> float | None:
+    """Return a number JSON can hold: NaN and infinities become null."""
+    return value if value is not None and math.isfinite(value) else None
+
+
+def _figure(figure: Figure) -> dict[str, Any]:
+    entry: dict[str, Any] = {
+        "value": _number(figure.value),
+        "unit": figure.unit,
+        "low": _number(figure.low),
+        "high": _number(figure.high),
+        "confidence": figure.confidence,
+        "bound": figure.bound,
+    }
+    if figure.standard_uncertainty is not None:
+        entry["standard_uncertainty"] = _number(figure.standard_uncertainty)
+    if figure.budget:
+        entry["budget"] = {source: _number(share) for source, share in figure.budget.items()}
+    for name, given in figure.parameters.items():
+        entry[name] = list(given) if isinstance(given, tuple) else given
+    return entry
+
+
+def _sweep(result: SweepResult) -> dict[str, Any]:
+    raw = result.raw
+    return {
+        "file": result.file,
+        "sha256": raw.sha256,
+        "points": int(raw.frequency_hz.size),
+        "start_hz": float(raw.frequency_hz[0]),
+        "stop_hz": float(raw.frequency_hz[-1]),
+        "measured": list(raw.measured),
+        "drive_dbm": _number(result.path.drive_dbm),
+        "port2_dbm": _number(result.path.port2_dbm),
+        "input_correction_db": result.input_correction_db,
+        "output_correction_db": result.output_correction_db,
+    }
+
+
+def _compression(device: DeviceResult) -> dict[str, Any]:
+    compression = device.compression
+    if compression is None:
+        return {"at_hz": device.design_hz, "reference": device.reference_sweep, "points": []}
+    return {
+        "at_hz": compression.at_hz,
+        "peak_hz": compression.peak_hz,
+        "reference": compression.reference,
+        "reason": compression.reason,
+        "points": [
+            {
+                "file": point.file,
+                "drive_dbm": _number(point.drive_dbm),
+                "output_dbm": _number(point.output_dbm),
+                "gain_db": _number(point.gain_db),
+                "compression_db": _number(point.compression_db),
+                "phase_change_deg": _number(point.phase_change_deg),
+                "compression_at_peak_db": _number(point.compression_at_peak_db),
+                "worst_db": _number(point.worst_db),
+                "worst_at_hz": _number(point.worst_at_hz),
+                "compressed": point.compressed,
+            }
+            for point in compression.points
+        ],
+    }
+
+
+def _device(device: DeviceResult) -> dict[str, Any]:
+    return {
+        "name": device.name,
+        "kind": device.kind,
+        "verdict": device.verdict,
+        "reason": device.summary.reason,
+        "next_step": device.summary.next_step,
+        "design_hz": device.design_hz,
+        "reference_sweep": device.reference_sweep,
+        "sweeps": [_sweep(sweep) for sweep in device.sweeps],
+        "figures": {key: _figure(figure) for key, figure in device.figures.items()},
+        "targets": [
+            {
+                "figure": target.figure,
+                "min": target.min,
+                "max": target.max,
+                "verdict": target.verdict,
+                "probability": target.probability,
+                **({"advice": target.advice} if target.advice else {}),
+            }
+            for target in device.targets
+        ],
+        "compression": _compression(device),
+        "findings": [
+            {
+                "code": finding.code,
+                "severity": finding.severity,
+                "sweep": finding.sweep,
+                "message": finding.message,
+                "advice": finding.advice,
+            }
+            for finding in device.findings
+        ],
+    }
+
+
+def results_json(bench: BenchResult) -> bytes:
+    """Return results.json: UTF-8, every number in Hz, s, dB, dBm, deg or ohm, null for what is not known."""
+    tree: Mapping[str, Any] = {
+        "format": FORMAT,
+        "title": bench.title,
+        "operator": bench.operator,
+        "date": bench.date,
+        "sheet_sha256": bench.sheet_sha256,
+        "made": {"version": bench.version, "at": bench.made_at},
+        "devices": [_device(device) for device in bench.devices],
+    }
+    return (json.dumps(tree, indent=1, ensure_ascii=False, allow_nan=False) + "\n").encode()
+
+
+_COLUMNS: Final = (
+    "device",
+    "figure",
+    "value",
+    "unit",
+    "low",
+    "high",
+    "confidence",
+    "bound",
+    "target_min",
+    "target_max",
+    "verdict",
+    "probability",
+)
+
+
+def results_csv(bench: BenchResult) -> bytes:
+    """Return results.csv: a row for each figure and target, the same numbers as results.json, RFC 4180, UTF-8."""
+    stream = io.StringIO()
+    writer = csv.writer(stream)
+    writer.writerow(_COLUMNS)
+    for device in bench.devices:
+        for key, figure in device.figures.items():
+            entry = _figure(figure)
+            head = [
+                _literal(device.name),
+                key,
+                *(entry[k] for k in ("value", "unit", "low", "high", "confidence", "bound")),
+            ]
+            targets = [target for target in device.targets if target.figure == key]
+            for target in targets:
+                writer.writerow([*head, target.min, target.max, target.verdict, target.probability])
+            if not targets:
+                writer.writerow([*head, None, None, None, None])
+    return stream.getvalue().encode()
+
+
+def _literal(name: str) -> str:
+    """Return a name that no spreadsheet takes for a formula."""
+    return f"'{name}" if name[:1] in ("=", "+", "-", "@") else name
+
+
+def corrected_files(sheet: BenchSheet, *, strict: bool = False) -> list[tuple[str, str]]:
+    """Return name and Touchstone text of every sweep at the device's own ports, one file for each, names all different.
+
+    Raises
+    ------
+    BenchtoolError : a sweep or pad cannot be read or used.
+    """
+    bank = PadBank.of(sheet)
+    sweeps = read_all(sheet, strict)
+    entries = [(device, entry) for device in sheet.devices for entry in device.sweeps]
+    stems = unique_stems(f"{Path(entry.name).stem}_at_device" for _, entry in entries)
+    files = []
+    for stem, (device, entry) in zip(stems, entries, strict=True):
+        sweep = sweeps[entry.file]
+        middle = float(np.sqrt(sweep.frequency_hz[0] * sweep.frequency_hz[-1]))
+        result = correct_sweep(sheet, entry, sweep, bank, device.design_hz or middle)
+        comments = [
+            f"{entry.name} at the device's own ports; device: {device.name}",
+            f"taken out: {result.input_correction_db:g} dB on the input side, "
+            f"{result.output_correction_db:g} dB on the output side",
+            f"measured: {', '.join(sweep.measured)}; made by benchtool {__version__}",
+        ]
+        files.append((f"{stem}.s2p", format_sweep(result.sweep, comments=comments)))
+    return files

@@ -1,0 +1,370 @@
+"""A sweep at the device's ports and what is asked of it in; every figure of the device out, by its key.
+
+:func:`plan_figures` decides once, on the data as measured, which figures there are and how each is to be extracted.
+:meth:`FigurePlan.extract` then takes the numbers from the sweep, or from any number of perturbed copies of it: it is
+the one extraction, for values and for intervals alike. To add a figure: give it a unit in :mod:`benchtool.sheet`,
+add it in :func:`plan_figures`, and say in the README what it is.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import Final
+
+import numpy as np
+
+from benchtool.fitting import Curve, fit_curve
+from benchtool.match import worst_return_loss
+from benchtool.model import Bound, ComplexArray, Figure, Finding, FloatArray, Kind, Sweep
+from benchtool.noise import NoiseModel, estimate_noise
+from benchtool.phase import delay_variation, phase_linearity
+from benchtool.response import LevelWidth, Passband, plan_level_width, plan_passband
+from benchtool.sheet import FIGURE_UNITS, TargetSpec
+from benchtool.units import HALF_POWER_DB, format_si, to_db, wrap_degrees
+
+__all__ = ["FigurePlan", "phase_toward", "plan_figures", "target_key"]
+
+_REJECTION_REACH: Final = 0.02
+"""Share of the distance to the peak over which the skirt is smoothed around a rejection point."""
+_REJECTION_STEPS: Final = 3.0
+
+Extractor = Callable[["FigurePlan", ComplexArray, Mapping[str, FloatArray]], FloatArray]
+
+
+@dataclass(frozen=True, eq=False)
+class FigurePlan:
+    """How the figures of one sweep are extracted.
+
+    `entries` are the figures in the order they are shown, with their units and bounds but without values; an entry
+    whose extractor is None cannot be known, and one of `findings` says why.
+    """
+
+    kind: Kind
+    design_hz: float
+    passband: Passband
+    design_curve: Curve
+    noise: Mapping[str, NoiseModel | None]
+    """Noise seen in each measured parameter."""
+    entries: tuple[Figure, ...]
+    extractors: Mapping[str, Extractor | None]
+    findings: tuple[Finding, ...] = field(default=())
+
+    def extract(self, s: ComplexArray) -> dict[str, FloatArray]:
+        """Return each figure that can be known, (...,), from scattering parameters (..., 2, 2, n) at the device.
+
+        NaN stands where a copy does not show the figure (an edge that moved out of the sweep).
+        """
+        found = self._passband_figures(s[..., 1, 0, :])
+        for key, extractor in self.extractors.items():
+            if extractor is not None and key not in found:
+                found[key] = extractor(self, s, found)
+        return {entry.key: found[entry.key] for entry in self.entries if self.extractors[entry.key] is not None}
+
+    def figures(self, s: ComplexArray) -> dict[str, Figure]:
+        """Return the figures of one sweep, (2, 2, n), with values and bounds, without intervals."""
+        values = self.extract(s)
+        figures = {}
+        for entry in self.entries:
+            number = float(values[entry.key]) if entry.key in values else float("nan")
+            value = number if np.isfinite(number) else None
+            figures[entry.key] = Figure(
+                entry.id,
+                value,
+                entry.unit,
+                bound=entry.bound if value is not None else None,
+                parameters=entry.parameters,
+            )
+        return figures
+
+    def _passband_figures(self, s21: ComplexArray) -> dict[str, FloatArray]:
+        band = self.passband
+        found = band.figures(s21)
+        lower = found.lower_edge if band.lower_inside else np.full_like(found.peak_gain, band.start_hz)
+        upper = found.upper_edge if band.upper_inside else np.full_like(found.peak_gain, band.stop_hz)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            centre = np.sqrt(lower * upper)
+            loaded_q = centre / (upper - lower)
+        gain, delay = self.design_curve.at(s21, self.design_hz)
+        return {
+            "gain": to_db(gain),
+            "insertion_loss": -to_db(gain),
+            "peak_gain": found.peak_gain,
+            "peak_frequency": found.peak_frequency,
+            "lower_edge": lower,
+            "upper_edge": upper,
+            "bandwidth": upper - lower,
+            "centre_frequency": centre,
+            "loaded_q": loaded_q,
+            "group_delay": delay,
+            "phase": np.degrees(np.angle(gain)),
+        }
+
+
+class _Builder:
+    """Collects the entries of a plan."""
+
+    def __init__(self, sweep: Sweep, kind: Kind, noise: Mapping[str, NoiseModel | None]) -> None:
+        self.sweep = sweep
+        self.kind = kind
+        self.noise = noise
+        self.entries: list[Figure] = []
+        self.extractors: dict[str, Extractor | None] = {}
+        self.findings: list[Finding] = []
+
+    def add(
+        self,
+        figure: str,
+        extractor: Extractor | None,
+        bound: Bound | None = None,
+        parameters: Mapping[str, float | tuple[float, float]] | None = None,
+    ) -> None:
+        entry = Figure(figure, None, FIGURE_UNITS[figure], bound=bound, parameters=parameters or {})
+        if entry.key not in self.extractors:
+            self.entries.append(entry)
+            self.extractors[entry.key] = extractor
+
+    def finding(self, code: str, message: str, advice: str) -> None:
+        self.findings.append(Finding(code, "caution", f"{self.sweep.name}: {message}", advice, self.sweep.name))
+
+    def outside(self, what: str, low_hz: float, high_hz: float) -> bool:
+        """Whether a stretch is not in the sweep; then a finding says so."""
+        f = self.sweep.frequency_hz
+        if f[0] <= low_hz and high_hz <= f[-1]:
+            return False
+        asked = format_si(low_hz, "Hz", 6)
+        if high_hz != low_hz:
+            asked += f" to {format_si(high_hz, 'Hz', 6)}"
+        self.finding(
+            "outside-sweep",
+            f"{what} is asked for at {asked}, but the sweep runs from {format_si(f[0], 'Hz', 6)} to "
+            f"{format_si(f[-1], 'Hz', 6)}",
+            "sweep over that frequency, or change the target",
+        )
+        return True
+
+    def curve(self, parameter: tuple[int, int], low_hz: float, high_hz: float) -> Curve:
+        i, j = parameter
+        noise = self.noise.get(f"S{i + 1}{j + 1}")
+        return fit_curve(self.sweep.frequency_hz, self.sweep.s[i, j], low_hz, high_hz, noise)
+
+
+def _given(name: str) -> Extractor:
+    return lambda _plan, _s, found: found[name]
+
+
+def plan_figures(
+    sweep: Sweep,
+    kind: Kind,
+    design_hz: float | None,
+    window_hz: tuple[float, float] | None,
+    targets: Sequence[TargetSpec] = (),
+) -> FigurePlan:
+    """Return how the figures of one sweep at the device are to be extracted.
+
+    Parameters
+    ----------
+    sweep : at the device's own ports; S21 must have been measured and the window must hold a sample
+    kind : a filter reports insertion loss where others report gain
+    design_hz : design frequency; None takes the peak
+    targets : those whose figures have parameters add figures of their own
+
+    Raises
+    ------
+    ValueError : the window holds no sample.
+    """
+    f = sweep.frequency_hz
+    noise = {name: estimate_noise(f, sweep.s[int(name[1]) - 1, int(name[2]) - 1]) for name in sweep.measured}
+    passband = plan_passband(f, sweep.s21, window_hz, noise.get("S21"))
+    build = _Builder(sweep, kind, noise)
+    peak = passband.figures(sweep.s21)
+    peak_hz = float(peak.peak_frequency)
+    at = design_hz if design_hz is not None else peak_hz
+    inside_sweep = not build.outside("the design frequency", at, at)
+    grid = passband.curve.grid_hz
+    if grid[0] <= at <= grid[-1]:
+        design_curve = passband.curve
+    else:
+        width = float(grid[-1] - grid[0])
+        design_curve = build.curve((1, 0), at - 0.1 * width, at + 0.1 * width)
+    _add_transmission(build, passband, inside_sweep, design_curve, at)
+    _add_match(build, passband, at, inside_sweep)
+    for target in targets:
+        _add_target(build, passband, target, peak_hz)
+    return FigurePlan(
+        kind,
+        at,
+        passband,
+        design_curve,
+        noise,
+        tuple(build.entries),
+        build.extractors,
+        tuple(build.findings),
+    )
+
+
+def _add_transmission(build: _Builder, band: Passband, inside: bool, design_curve: Curve, at_hz: float) -> None:
+    at = {"at_hz": at_hz}
+    headline = "insertion_loss" if build.kind == "filter" else "gain"
+    build.add(headline, _given(headline) if inside else None, parameters=at)
+    # At the end of the window the true peak lies beyond it: the figures are limits.
+    low_end = not band.peak_inside and band.peak_range[0] == _peak_node(build, band)
+    peak_bound: Bound | None = None if band.peak_inside else ("at most" if low_end else "at least")
+    build.add("peak_gain", _given("peak_gain"), None if band.peak_inside else "at least")
+    build.add("peak_frequency", _given("peak_frequency"), peak_bound)
+    both = band.lower_inside and band.upper_inside
+    neither = not band.lower_inside and not band.upper_inside
+    build.add("lower_edge", _given("lower_edge"), None if band.lower_inside else "at most")
+    build.add("upper_edge", _given("upper_edge"), None if band.upper_inside else "at least")
+    build.add("bandwidth", _given("bandwidth"), None if both else "at least")
+    # f1 f2 falls with a lower edge that lies further down, and rises with an upper one further up.
+    centre_bound: Bound | None = None if both else ("at least" if band.lower_inside else "at most")
+    build.add("centre_frequency", None if neither else _given("centre_frequency"), centre_bound)
+    build.add("loaded_q", _given("loaded_q"), None if both else "at most")
+    aperture = {**at, "aperture_hz": design_curve.span_hz}
+    build.add("group_delay", _given("group_delay") if inside else None, parameters=aperture)
+    build.add("phase", _given("phase") if inside else None, parameters=at)
+
+
+def _peak_node(build: _Builder, band: Passband) -> int:
+    value, _ = band.curve.on_grid(build.sweep.s21)
+    start, stop = band.peak_range
+    return int(np.argmax(np.abs(value[start:stop]))) + start
+
+
+def _add_match(build: _Builder, band: Passband, at_hz: float, inside: bool) -> None:
+    edges = band.figures(build.sweep.s21)
+    if band.lower_inside and band.upper_inside and np.isfinite(edges.bandwidth):
+        low, high = float(edges.lower_edge), float(edges.upper_edge)
+        where: dict[str, float | tuple[float, float]] = {"band_hz": (low, high)}
+    else:
+        low = high = at_hz
+        where = {"at_hz": at_hz}
+    for figure, name, (i, j) in (("input_return_loss", "S11", (0, 0)), ("output_return_loss", "S22", (1, 1))):
+        if name not in build.sweep.measured:
+            continue
+        if low == high and not inside:
+            build.add(figure, None, parameters=where)
+        elif low < high:
+            build.add(figure, _worst(build.curve((i, j), low, high), (i, j)), parameters=where)
+        else:
+            build.add(figure, _at_point(build, (i, j), at_hz), parameters=where)
+    if "S12" in build.sweep.measured:
+        extractor = _at_point(build, (0, 1), at_hz) if inside else None
+        build.add("reverse_isolation", extractor, parameters={"at_hz": at_hz})
+
+
+def _worst(curve: Curve, parameter: tuple[int, int]) -> Extractor:
+    i, j = parameter
+    return lambda _plan, s, _found: worst_return_loss(curve, s[..., i, j, :])
+
+
+def _at_point(build: _Builder, parameter: tuple[int, int], at_hz: float) -> Extractor:
+    """Return the extractor of −20 log10 of a parameter's magnitude at one frequency."""
+    i, j = parameter
+    f = build.sweep.frequency_hz
+    reach = max(0.02 * float(f[-1] - f[0]), _REJECTION_STEPS * float(np.max(np.diff(f), initial=0.0)))
+    curve = build.curve(parameter, at_hz - reach, at_hz + reach)
+    return lambda _plan, s, _found: -to_db(curve.at(s[..., i, j, :], at_hz)[0])
+
+
+def target_key(target: TargetSpec) -> str:
+    """Return the key of the figure that a target is about."""
+    parameters = {
+        name: given
+        for name, given in (("at_hz", target.at_hz), ("over_hz", target.over_hz), ("between_db", target.between_db))
+        if given is not None
+    }
+    return Figure(target.figure, None, "", parameters=parameters).key
+
+
+_NEEDS: Final = {"input_return_loss": "S11", "output_return_loss": "S22", "reverse_isolation": "S12"}
+
+
+def _add_target(build: _Builder, band: Passband, target: TargetSpec, peak_hz: float) -> None:
+    if target.at_hz is not None:
+        _add_rejection(build, target.figure, target.at_hz, peak_hz)
+    elif target.over_hz is not None:
+        _add_over(build, target.figure, target.over_hz)
+    elif target.between_db is not None:
+        _add_shape_factor(build, band, target.figure, target.between_db)
+    elif target.figure not in build.extractors:
+        parameter = _NEEDS.get(target.figure)
+        if parameter is not None:
+            build.finding(
+                "one-path",
+                f"{target.figure} has a target, but {parameter} was not measured",
+                "sweep the device in both directions, or drop the target",
+            )
+        build.add(target.figure, None)
+
+
+def _add_rejection(build: _Builder, figure: str, at_hz: float, peak_hz: float) -> None:
+    parameters = {"at_hz": at_hz}
+    if build.outside(figure, at_hz, at_hz):
+        build.add(figure, None, parameters=parameters)
+        return
+    steps = float(np.max(np.diff(build.sweep.frequency_hz), initial=0.0))
+    reach = max(_REJECTION_REACH * abs(at_hz - peak_hz), _REJECTION_STEPS * steps)
+    curve = build.curve((1, 0), at_hz - reach, at_hz + reach)
+
+    def extract(_plan: FigurePlan, s: ComplexArray, found: Mapping[str, FloatArray]) -> FloatArray:
+        return np.asarray(found["peak_gain"] - to_db(curve.at(s[..., 1, 0, :], at_hz)[0]))
+
+    build.add(figure, extract, parameters=parameters)
+
+
+def _add_over(build: _Builder, figure: str, over_hz: tuple[float, float]) -> None:
+    parameters = {"over_hz": over_hz}
+    if build.outside(figure, *over_hz):
+        build.add(figure, None, parameters=parameters)
+        return
+    curve = build.curve((1, 0), *over_hz)
+
+    def ripple(_plan: FigurePlan, s: ComplexArray, _found: Mapping[str, FloatArray]) -> FloatArray:
+        level = to_db(curve.on_grid(s[..., 1, 0, :])[0])
+        return np.asarray(np.max(level, axis=-1) - np.min(level, axis=-1))
+
+    extractors: dict[str, Extractor] = {
+        "ripple": ripple,
+        "delay_variation": lambda _plan, s, _found: delay_variation(curve, s[..., 1, 0, :]),
+        "phase_linearity": lambda _plan, s, _found: phase_linearity(curve, s[..., 1, 0, :]),
+    }
+    build.add(figure, extractors[figure], parameters=parameters)
+
+
+def _add_shape_factor(build: _Builder, band: Passband, figure: str, between_db: tuple[float, float]) -> None:
+    parameters = {"between_db": between_db}
+    f, s21 = build.sweep.frequency_hz, build.sweep.s21
+    # "60 to 3 dB" means the half-power point, not 3.000 dB.
+    depths = sorted((HALF_POWER_DB if depth == 3 else depth for depth in between_db), reverse=True)
+    widths = [plan_level_width(f, s21, band, depth, build.noise.get("S21")) for depth in depths]
+    outer, inner = widths
+    if outer is None or inner is None:
+        lost = depths[0] if outer is None else depths[1]
+        build.finding(
+            "edge-outside-sweep",
+            f"the response does not fall {lost:.4g} dB below its peak on both sides within the sweep, so the shape "
+            "factor cannot be known",
+            "sweep wider, or take the added pads out so that the skirt clears the noise",
+        )
+        build.add(figure, None, parameters=parameters)
+        return
+    build.add(figure, _ratio(outer, inner), parameters=parameters)
+
+
+def _ratio(outer: LevelWidth, inner: LevelWidth) -> Extractor:
+    def extract(_plan: FigurePlan, s: ComplexArray, found: Mapping[str, FloatArray]) -> FloatArray:
+        s21, peak = s[..., 1, 0, :], found["peak_gain"]
+        return np.asarray(outer.width(s21, peak) / inner.width(s21, peak))
+
+    return extract
+
+
+def phase_toward(phase_deg: float, low: float | None, high: float | None) -> float:
+    """Return the phase turned by whole circles to where it is nearest a target's middle."""
+    limits = [limit for limit in (low, high) if limit is not None]
+    if not limits:
+        return phase_deg
+    middle = sum(limits) / len(limits)
+    return middle + wrap_degrees(phase_deg - middle)

@@ -1,0 +1,280 @@
+"""A device's sweeps, plans and comparison in; every doubt about the set-up out, each with what to do about it.
+
+The codes are stable: other people's scripts look for them. To add one, write a function that returns findings, call it
+in :func:`device_findings`, and list the code in the README.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from typing import Final
+
+import numpy as np
+
+from benchtool.compression import MeasuredSweep, signal_to_noise_db
+from benchtool.match import BURIED_UNCERTAINTY, buried_uncertainty
+from benchtool.model import Compression, Finding, Kind
+from benchtool.phase import ambiguous_steps
+from benchtool.sheet import Analyzer
+from benchtool.units import HALF_POWER_DB, format_si
+
+__all__ = ["SEVERITIES", "buried_parameters", "device_findings"]
+
+SEVERITIES: Final = ("fault", "caution", "note")
+
+_FEW_POINTS: Final = 8
+_NEAR_LIMIT_DB: Final = 3.0
+_PASSIVE_SLACK_DB: Final = 0.1
+_OFF_DESIGN: Final = 0.25
+"""Distance of the peak from the design frequency, as a share of the half-power band, that is worth a word."""
+_Q_DISAGREES: Final = 0.05
+_NOISY_SNR_DB: Final = 20.0
+_AGREE_DB: Final = 0.1
+
+
+def device_findings(
+    kind: Kind,
+    design_hz: float | None,
+    sweeps: Sequence[MeasuredSweep],
+    reference: MeasuredSweep,
+    compression: Compression | None,
+    analyzer: Analyzer,
+) -> tuple[Finding, ...]:
+    """Return the findings of one device, worst first, in the order of the sweeps within one severity."""
+    found: list[Finding] = []
+    for sweep in sweeps:
+        found += sweep.result.raw.findings
+        found += _receiver_level(sweep)
+        found += _noise(sweep)
+    found += reference.plan.findings
+    found += _drive(kind, sweeps, reference, compression)
+    found += _shape(reference)
+    found += _against_design(kind, design_hz, reference)
+    found += _cross_checks(kind, reference)
+    for sweep in sweeps:
+        found += _buried(sweep, analyzer)
+    unique = dict.fromkeys(found)
+    return tuple(sorted(unique, key=lambda finding: SEVERITIES.index(finding.severity)))
+
+
+def _receiver_level(sweep: MeasuredSweep) -> Iterator[Finding]:
+    path = sweep.result.path
+    level = path.port2_dbm
+    if level is None:
+        return
+    damage, limit = path.port2_damage_dbm, path.port2_compression_dbm
+    if damage is not None and level > damage - _NEAR_LIMIT_DB:
+        yield Finding(
+            "receiver-near-limit",
+            "fault",
+            f"{sweep.file}: {level:.1f} dBm reaches port 2, whose damage limit is {damage:g} dBm",
+            "switch the source off and add output pads before anything else is measured",
+            sweep.file,
+        )
+    elif limit is not None and level > limit - _NEAR_LIMIT_DB:
+        more = int(np.ceil(level - limit + 10.0))
+        yield Finding(
+            "receiver-near-limit",
+            "caution",
+            f"{sweep.file}: {level:.1f} dBm reaches port 2, whose receiver compresses from {limit:g} dBm; part of any "
+            "gain drop may be the analyzer's",
+            f"sweep again with {more} dB more output pad and enter it in the sheet",
+            sweep.file,
+        )
+
+
+def _noise(sweep: MeasuredSweep) -> Iterator[Finding]:
+    ratio = signal_to_noise_db(sweep.result.sweep, sweep.plan)
+    if ratio is not None and ratio < _NOISY_SNR_DB:
+        yield Finding(
+            "noise-limited",
+            "caution",
+            f"{sweep.file}: S21 stands only {ratio:.0f} dB above its noise at the peak",
+            "narrow the measuring bandwidth, average, or take pads out where the levels allow",
+            sweep.file,
+        )
+
+
+def _drive(
+    kind: Kind, sweeps: Sequence[MeasuredSweep], reference: MeasuredSweep, compression: Compression | None
+) -> Iterator[Finding]:
+    if any(sweep.drive_dbm is None for sweep in sweeps):
+        yield Finding(
+            "source-level-unknown",
+            "caution" if kind == "amplifier" else "note",
+            "the source level is not known, so no drive and no level at port 2 can be worked out",
+            "enter analyzer.source_dbm in the sheet (the level leaving port 1, before any pad)",
+        )
+    for point in compression.points if compression else ():
+        if point.compressed:
+            drive = "its drive" if point.drive_dbm is None else f"{point.drive_dbm:.1f} dBm drive"
+            yield Finding(
+                "compressed-sweep",
+                "caution",
+                f"{point.file}: gain is {point.worst_db:.1f} dB down at {format_si(point.worst_at_hz, 'Hz')} at "
+                f"{drive} against {compression.reference if compression else ''}; its peak, bandwidth and Q are not "
+                "the device's and were not used",
+                f"take figures from sweeps with at least {point.worst_db + 10.0:.0f} dB more input pad",
+                point.file,
+            )
+    if kind != "amplifier":
+        return
+    if len(sweeps) == 1:
+        yield Finding(
+            "drive-unproven",
+            "caution",
+            f"{reference.file} is the only drive, so nothing shows that the device was not compressed: its gain may "
+            "read low and its band wide",
+            "sweep again with 10 dB more input pad; if the gain agrees, this sweep stands",
+            reference.file,
+        )
+    elif compression is not None and not _proven(compression, reference):
+        yield Finding(
+            "drive-unproven",
+            "caution",
+            f"no second sweep agrees with {reference.file} within {_AGREE_DB} dB, so it may itself be compressed",
+            "sweep again with 10 dB more input pad; if the gain agrees, the reference stands",
+            reference.file,
+        )
+
+
+def _proven(compression: Compression, reference: MeasuredSweep) -> bool:
+    """Whether a second sweep, at another drive, shows the reference's gain."""
+    others = [point for point in compression.points if point.file != reference.file]
+    return any(abs(point.compression_db) <= _AGREE_DB and point.worst_db <= 2 * _AGREE_DB for point in others)
+
+
+def _shape(reference: MeasuredSweep) -> Iterator[Finding]:
+    band, file = reference.plan.passband, reference.file
+    if band.points_inside < _FEW_POINTS and band.lower_inside and band.upper_inside:
+        yield Finding(
+            "too-few-points",
+            "caution",
+            f"{file}: only {band.points_inside} samples lie inside the half-power band, so peak, bandwidth and Q rest "
+            "on the curve drawn between them",
+            "sweep a narrower span, or more points",
+            file,
+        )
+    if not band.lower_inside or not band.upper_inside:
+        missing = " and ".join(
+            name for name, inside in (("lower", band.lower_inside), ("upper", band.upper_inside)) if not inside
+        )
+        yield Finding(
+            "edge-outside-sweep",
+            "caution",
+            f"{file}: the {missing} half-power edge lies outside the sweep ({format_si(band.start_hz, 'Hz')} to "
+            f"{format_si(band.stop_hz, 'Hz')}), so bandwidth and Q are bounds",
+            "sweep wider if the bandwidth matters",
+            file,
+        )
+    if not band.peak_inside:
+        yield Finding(
+            "peak-at-window-edge",
+            "caution",
+            f"{file}: the gain is still rising at the end of the window or sweep, so the peak found there is a bound",
+            "widen the window, or sweep wider",
+            file,
+        )
+    if band.other_humps:
+        where = ", ".join(format_si(hump, "Hz") for hump in band.other_humps[:3])
+        yield Finding(
+            "several-peaks",
+            "caution",
+            f"{file}: other peaks within {HALF_POWER_DB:.2f} dB of the highest stand at {where}; the figures are "
+            "those of the highest alone",
+            "set `window` in the sheet round the peak that is meant",
+            file,
+        )
+    sweep = reference.result.sweep
+    level = float(np.max(np.abs(sweep.s21)))
+    steps = ambiguous_steps(sweep.frequency_hz, sweep.s21, 0.1 * level)
+    if steps:
+        yield Finding(
+            "phase-ambiguous",
+            "caution",
+            f"{file}: the phase turns by more than 150° from one sample to the next in {steps} places, so phase and "
+            "delay could be out by whole turns",
+            "sweep a narrower span, or more points",
+            file,
+        )
+
+
+def _against_design(kind: Kind, design_hz: float | None, reference: MeasuredSweep) -> Iterator[Finding]:
+    band = reference.plan.passband.figures(reference.result.sweep.s21)
+    peak, width = float(band.peak_frequency), float(band.bandwidth)
+    file = reference.file
+    if (
+        design_hz is not None
+        and kind != "network"
+        and np.isfinite(width)
+        and abs(peak - design_hz) > _OFF_DESIGN * width
+    ):
+        yield Finding(
+            "peak-off-design",
+            "caution",
+            f"{file}: the peak is at {format_si(peak, 'Hz', 5)}, {format_si(abs(peak - design_hz), 'Hz', 3)} "
+            f"{'above' if peak > design_hz else 'below'} the design frequency, "
+            f"{abs(peak - design_hz) / width:.0%} of the half-power band",
+            "retune, or correct design_frequency in the sheet",
+            file,
+        )
+    gain = float(band.peak_gain)
+    if kind == "filter" and gain > _PASSIVE_SLACK_DB:
+        yield Finding(
+            "passive-shows-gain",
+            "fault",
+            f"{file}: a passive device shows {gain:.2f} dB of gain",
+            "check which pads were in line at calibration and at the sweep: one is probably counted twice or missing",
+            file,
+        )
+
+
+def _cross_checks(kind: Kind, reference: MeasuredSweep) -> Iterator[Finding]:
+    band = reference.plan.passband
+    if not (band.lower_inside and band.upper_inside and band.peak_inside):
+        return
+    figures = band.figures(reference.result.sweep.s21)
+    by_width, by_delay, by_phase = float(figures.loaded_q), float(figures.delay_q), float(figures.phase_q)
+    rivals = [q for q in (by_delay, by_phase) if np.isfinite(q)]
+    if not np.isfinite(by_width) or all(abs(q / by_width - 1.0) <= _Q_DISAGREES for q in rivals):
+        return
+    shown = ", ".join(
+        f"{q:.3g} from {how}"
+        for q, how in ((by_width, "bandwidth"), (by_delay, "group delay"), (by_phase, "the 45° phase points"))
+        if np.isfinite(q)
+    )
+    yield Finding(
+        "q-disagrees",
+        "note" if kind != "amplifier" else "caution",
+        f"{reference.file}: loaded Q is {shown}; a single-tuned response has one Q",
+        "expected of a filter with several resonators; else look for compression, a second resonance, a cable left in "
+        "line, or too few samples",
+        reference.file,
+    )
+
+
+def buried_parameters(sweep: MeasuredSweep, analyzer: Analyzer) -> dict[str, float]:
+    """Return which reflections of a sweep are buried under added pads: parameter and uncertainty of its magnitude."""
+    if analyzer.directivity_db is None:
+        return {}
+    result = sweep.result
+    buried = {}
+    for name, correction in (("S11", result.input_correction_db), ("S22", result.output_correction_db)):
+        doubt = buried_uncertainty(correction, analyzer.directivity_db)
+        if name in result.raw.measured and correction > 0 and doubt > BURIED_UNCERTAINTY:
+            buried[name] = doubt
+    return buried
+
+
+def _buried(sweep: MeasuredSweep, analyzer: Analyzer) -> Iterator[Finding]:
+    for name, doubt in buried_parameters(sweep, analyzer).items():
+        side = "input" if name == "S11" else "output"
+        yield Finding(
+            "return-loss-buried",
+            "caution",
+            f"{sweep.file}: {name} was read through the added {side} pads twice, so its magnitude is uncertain by "
+            f"{doubt:.2g} and the {side} return loss is withheld",
+            f"sweep {name} once without the added {side} pad (the device unpowered or at a drive it stands), or "
+            "calibrate with the pad in line",
+            sweep.file,
+        )

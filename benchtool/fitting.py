@@ -1,0 +1,281 @@
+"""Samples of one trace in, a smooth curve between the samples out, as a linear operator for any number of copies.
+
+A stretch of a trace is fitted by a polynomial in frequency, after a delay is taken out: either S itself or 1/S.
+Away from transmission zeros the response of coupled resonators is one over a polynomial (a single-tuned circuit:
+1/S = (1 + jx)/g, a straight line), so 1/S needs few coefficients, and its fit is unbiased by circular noise. Form,
+delay and degree are chosen on the data as measured, by the corrected Akaike criterion [1]_, one degree more than it
+asks being taken to keep the bias below the noise. Where no degree leaves residuals as small as the noise seen in
+the trace, the stretch is split in two. The choice is then fixed: applied to perturbed copies the fit is a matrix
+product.
+
+.. [1] C. M. Hurvich, C.-L. Tsai, "Regression and time series model selection in small samples", Biometrika 76(2),
+   1989, 297-307.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from itertools import pairwise
+from typing import Final
+
+import numpy as np
+from numpy.polynomial import legendre
+
+from benchtool.model import ComplexArray, FloatArray
+from benchtool.noise import NOISE_FREE, NoiseModel, line_delay, rotation, trend_delay
+
+__all__ = ["Curve", "Fit", "fit_curve"]
+
+MAX_DEGREE: Final = 10
+_MIN_POINTS: Final = 5
+_WORTH_SPLITTING: Final = 14
+_ACCEPTED_EXCESS: Final = 1.6
+"""Residual variance over noise variance up to which a fit is taken to describe the trace."""
+_ROUNDING: Final = 1e-11
+_GOOD_ENOUGH: Final = 2e-5
+"""Misfit, as a share of the largest sample, below which no fit is split: 0.0002 dB."""
+_INVERSE_NEEDS_SNR: Final = 6.0
+"""1/S is fitted only where every sample stands this far above the noise (a ratio of amplitudes)."""
+
+
+@dataclass(frozen=True, eq=False)
+class Fit:
+    """One polynomial over ``samples[start:stop]``, valid between `low_hz` and `high_hz`."""
+
+    start: int
+    stop: int
+    low_hz: float
+    high_hz: float
+    centre_hz: float
+    scale_hz: float
+    inverse: bool
+    delay_s: float
+    turn: ComplexArray
+    solve: FloatArray
+    """(degree + 1, stop - start)."""
+    excess: float
+    """Residual variance over the variance that noise explains."""
+
+    @property
+    def degree(self) -> int:
+        """Degree of the polynomial."""
+        return int(self.solve.shape[0]) - 1
+
+    def coefficients(self, s: ComplexArray) -> ComplexArray:
+        """Return the Legendre coefficients, (..., degree + 1), of a trace or of copies of it, (..., n)."""
+        turned = s[..., self.start : self.stop] * self.turn
+        if self.inverse:
+            turned = 1.0 / turned
+        solved: ComplexArray = turned @ self.solve.T
+        return solved
+
+    def basis(self, frequency_hz: FloatArray) -> FloatArray:
+        """Return the basis functions at frequencies (...,), (..., degree + 1)."""
+        return np.asarray(legendre.legvander((frequency_hz - self.centre_hz) / self.scale_hz, self.degree))
+
+    def slope_basis(self, frequency_hz: FloatArray) -> FloatArray:
+        """Return the derivative of the basis with frequency, (..., degree + 1), per Hz."""
+        u = (frequency_hz - self.centre_hz) / self.scale_hz
+        columns = [legendre.legval(u, legendre.legder(unit)) for unit in np.eye(self.degree + 1)]
+        return np.asarray(np.stack([np.broadcast_to(c, u.shape) for c in columns], axis=-1) / self.scale_hz)
+
+    def evaluate(self, coefficients: ComplexArray, frequency_hz: FloatArray) -> tuple[ComplexArray, FloatArray]:
+        """Return S (its mean delay put back) and the group delay in s, both (..., g), at frequencies (g,)."""
+        polynomial = coefficients @ self.basis(frequency_hz).T
+        slope = coefficients @ self.slope_basis(frequency_hz).T
+        with np.errstate(divide="ignore", invalid="ignore"):
+            angle_slope = np.imag(slope / polynomial) / (2 * np.pi)
+            value = 1.0 / polynomial if self.inverse else polynomial
+        delay = self.delay_s + (angle_slope if self.inverse else -angle_slope)
+        return value * np.conj(rotation(frequency_hz, self.delay_s)), delay
+
+
+@dataclass(frozen=True, eq=False)
+class Curve:
+    """A stretch of a trace as one fit or several side by side."""
+
+    fits: tuple[Fit, ...]
+    grid_hz: FloatArray
+    """(g,) rising, dense enough that a parabola through three neighbours is exact for every purpose here."""
+
+    @property
+    def span_hz(self) -> float:
+        """Width in Hz of the samples that the narrowest fit rests on."""
+        return min(2.0 * fit.scale_hz for fit in self.fits)
+
+    @property
+    def accepted(self) -> bool:
+        """Whether every fit describes the trace down to its noise."""
+        return all(fit.excess <= _ACCEPTED_EXCESS for fit in self.fits)
+
+    def on_grid(self, s: ComplexArray) -> tuple[ComplexArray, FloatArray]:
+        """Return S and group delay in s on `grid_hz`, both (..., g), of a trace or copies of it, (..., n)."""
+        return self._evaluate(s, self.grid_hz)
+
+    def at(self, s: ComplexArray, frequency_hz: float) -> tuple[ComplexArray, FloatArray]:
+        """Return S and group delay in s at one frequency, both (...,)."""
+        value, delay = self._evaluate(s, np.array([frequency_hz]))
+        return value[..., 0], delay[..., 0]
+
+    def _evaluate(self, s: ComplexArray, frequency_hz: FloatArray) -> tuple[ComplexArray, FloatArray]:
+        borders = [fit.low_hz for fit in self.fits[1:]]
+        owner = np.searchsorted(borders, frequency_hz, side="right")
+        values, delays = [], []
+        for index, fit in enumerate(self.fits):
+            mine = frequency_hz[owner == index]
+            if mine.size:
+                value, delay = fit.evaluate(fit.coefficients(s), mine)
+                values.append(value)
+                delays.append(delay)
+        return np.concatenate(values, axis=-1), np.concatenate(delays, axis=-1)
+
+
+@dataclass(frozen=True)
+class _Context:
+    """What every fit of one trace needs to know."""
+
+    noise: NoiseModel | None
+    points: int
+    line_delay_s: float
+
+
+def _widen(frequency_hz: FloatArray, low_hz: float, high_hz: float, points: int) -> tuple[int, int]:
+    """Return the slice of samples in [low, high], widened evenly to at least `points` samples."""
+    start = int(np.searchsorted(frequency_hz, low_hz, side="left"))
+    stop = int(np.searchsorted(frequency_hz, high_hz, side="right"))
+    count = frequency_hz.size
+    while stop - start < min(points, count):
+        left = low_hz - frequency_hz[start - 1] if start > 0 else np.inf
+        right = frequency_hz[stop] - high_hz if stop < count else np.inf
+        if left <= right:
+            start -= 1
+        else:
+            stop += 1
+    return start, stop
+
+
+def _score(residual: float, samples: int, degree: int, floor: float) -> float:
+    """Return the corrected Akaike criterion of a complex fit; both parts of a sample count."""
+    observed, free = 2 * samples, 2 * (degree + 1) + 1
+    return float(observed * np.log(residual + floor) + 2 * free + 2 * free * (free + 1) / (observed - free - 1))
+
+
+def _solver(basis: FloatArray, weight: FloatArray) -> FloatArray:
+    """Return the matrix that takes samples to the coefficients of their weighted least-squares polynomial."""
+    scaled = weight / np.max(weight)
+    return np.asarray(np.linalg.pinv(basis * scaled[:, None], rcond=1e-14) * scaled)
+
+
+@dataclass(frozen=True)
+class _Form:
+    """A way to fit a stretch, and its score; the smallest score wins."""
+
+    score: float
+    inverse: bool
+    delay_s: float
+    degree: int
+
+
+def _best_form(
+    f: FloatArray,
+    trace: ComplexArray,
+    full: FloatArray,
+    sigma: FloatArray,
+    inverse_allowed: bool,
+    line_delay_s: float,
+) -> _Form:
+    """Return the form, delay and degree with the smallest criterion; `full` is the basis of the highest degree."""
+    magnitude = np.abs(trace)
+    floor = max((_ROUNDING * float(np.max(magnitude / sigma))) ** 2, 1e-300)
+    best: _Form | None = None
+    # A resonance must keep its own delay (1/S is a straight line only then), a cable must lose it: try each.
+    for delay in dict.fromkeys((0.0, line_delay_s, trend_delay(f, trace))):
+        turned = trace * rotation(f, delay)
+        for inverse in (True, False) if inverse_allowed else (False,):
+            weight = magnitude**2 / sigma if inverse else 1.0 / sigma
+            target = weight / turned if inverse else weight * turned
+            # One orthogonal basis serves every degree: the residual falls by the power of each new direction.
+            axes, _ = np.linalg.qr(full * (weight / np.max(weight))[:, None])
+            left = target - axes @ (axes.T @ target)
+            tail = np.abs(axes.T @ target) ** 2
+            rest = float(np.sum(np.abs(left) ** 2)) + np.append(np.cumsum(tail[::-1])[-2::-1], 0.0)
+            for degree in range(full.shape[1]):
+                score = _score(float(rest[degree]) / f.size, f.size, degree, floor)
+                if best is None or score < best.score:
+                    best = _Form(score, inverse, delay, degree)
+    assert best is not None
+    return best
+
+
+def _fit(frequency_hz: FloatArray, s: ComplexArray, low_hz: float, high_hz: float, context: _Context) -> Fit:
+    start, stop = _widen(frequency_hz, low_hz, high_hz, context.points)
+    f, trace = frequency_hz[start:stop], s[start:stop]
+    centre = 0.5 * float(f[0] + f[-1])
+    scale = max(0.5 * float(f[-1] - f[0]), 1e-12 * max(centre, 1.0))
+    magnitude = np.abs(trace)
+    noise = context.noise if context.noise is not None else NOISE_FREE
+    noisy = noise.additive > 0.0 or noise.proportional > 0.0
+    sigma = noise.sigma(magnitude) if noisy else np.ones_like(magnitude)
+    smallest = _INVERSE_NEEDS_SNR * float(np.max(sigma)) if noisy else 1e-9 * float(np.max(magnitude))
+    full = np.asarray(legendre.legvander((f - centre) / scale, max(min(MAX_DEGREE, f.size - 3), 0)), np.float64)
+    form = _best_form(f, trace, full, sigma, float(np.min(magnitude)) > smallest, context.line_delay_s)
+    turn = rotation(f, form.delay_s)
+    target = 1.0 / (trace * turn) if form.inverse else trace * turn
+    degree = min(form.degree + 1, full.shape[1] - 1)
+    basis = np.asarray(full[:, : degree + 1])
+    # The weights come from the smooth curve, not from the noisy samples, or they would pull it: once is enough.
+    smooth = magnitude
+    for _ in range(2):
+        level = noise.sigma(smooth) if noisy else np.ones_like(smooth)
+        solve = _solver(basis, smooth**2 / level if form.inverse else 1.0 / level)
+        fitted = target @ solve.T @ basis.T
+        fitted = 1.0 / fitted if form.inverse else fitted
+        smooth = np.maximum(np.abs(fitted), 1e-6 * np.max(magnitude))
+    allowed = np.hypot(noise.sigma(smooth), _GOOD_ENOUGH * np.max(magnitude))
+    excess = float(np.sum((np.abs(fitted - trace * turn) / allowed) ** 2)) / max(f.size - degree - 1, 1)
+    return Fit(start, stop, low_hz, high_hz, centre, scale, form.inverse, form.delay_s, turn, solve, excess)
+
+
+def _pieces(frequency_hz: FloatArray, s: ComplexArray, low_hz: float, high_hz: float, context: _Context) -> list[Fit]:
+    # A fit is poorest at its ends, so the samples it rests on reach a little beyond the stretch it speaks for.
+    margin = 0.1 * (high_hz - low_hz)
+    fit = _fit(frequency_hz, s, low_hz - margin, high_hz + margin, context)
+    enough = fit.stop - fit.start >= _WORTH_SPLITTING
+    if fit.excess > _ACCEPTED_EXCESS and enough:
+        middle = 0.5 * (low_hz + high_hz)
+        return [
+            *_pieces(frequency_hz, s, low_hz, middle, context),
+            *_pieces(frequency_hz, s, middle, high_hz, context),
+        ]
+    return [replace(fit, low_hz=low_hz, high_hz=high_hz)]
+
+
+def fit_curve(
+    frequency_hz: FloatArray,
+    s: ComplexArray,
+    low_hz: float,
+    high_hz: float,
+    noise: NoiseModel | None,
+    *,
+    points: int = _MIN_POINTS,
+    grid: int = 241,
+) -> Curve:
+    """Return the smooth curve of one trace between two frequencies.
+
+    Parameters
+    ----------
+    frequency_hz, s : (n,) rising frequencies, and the trace as measured
+    low_hz, high_hz : the stretch wanted; samples a little beyond it are used where there are any
+    noise : what :func:`benchtool.noise.estimate_noise` found in the trace; None where that is not known
+    points : samples that each fit must rest on at least, as far as the sweep has them
+    grid : nodes of the dense grid
+    """
+    context = _Context(noise, points, line_delay(frequency_hz, s))
+    low_hz, high_hz = max(low_hz, float(frequency_hz[0])), min(high_hz, float(frequency_hz[-1]))
+    if high_hz <= low_hz:
+        return Curve((_fit(frequency_hz, s, low_hz, low_hz, context),), np.array([low_hz]))
+    fits = _pieces(frequency_hz, s, low_hz, high_hz, context)
+    each = max(33, grid // len(fits)) if len(fits) > 1 else grid
+    borders = [low_hz, *(fit.low_hz for fit in fits[1:]), high_hz]
+    nodes = [np.linspace(a, b, each)[: (None if b == high_hz else -1)] for a, b in pairwise(borders)]
+    return Curve(tuple(fits), np.concatenate(nodes))

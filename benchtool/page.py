@@ -1,0 +1,120 @@
+"""A bench and one of its devices in; one A4 page out, as a matplotlib figure or as PDF and PNG.
+
+The page reads from top to bottom as its reader thinks: verdict and next step, signal path, gain against frequency,
+gain against drive or group delay beside match, measured against target, findings, cautions, origin of the data.
+Every part knows its height before it is drawn; the diagrams and the findings share what the others leave.
+"""
+
+from __future__ import annotations
+
+import io
+from datetime import datetime
+from typing import Final
+
+from matplotlib import rc_context
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.backends.backend_pdf import FigureCanvasPdf
+from matplotlib.figure import Figure as Canvas
+
+from benchtool.model import BenchResult, DeviceResult
+from benchtool.page_gain import draw_gain
+from benchtool.page_notes import cautions, findings_block, provenance
+from benchtool.page_panels import draw_panels
+from benchtool.page_paper import HEIGHT_PT, STYLE, Block, Paper
+from benchtool.page_path import path_strip
+from benchtool.page_scales import view_of
+from benchtool.page_sweeps import sweep_list
+from benchtool.page_table import other_figures, target_table
+from benchtool.page_text import literal
+from benchtool.page_traces import traces
+from benchtool.page_verdict import head
+
+__all__ = ["draw_page", "render_page"]
+
+_GAP_PT: Final = 5.0
+_GAPS: Final = 9
+_LEAST_GAIN_PT: Final = 116.0
+_LEAST_PANELS_PT: Final = 84.0
+_MOST_GAIN_PT: Final = 230.0
+_MOST_PANELS_PT: Final = 150.0
+_LEAST_FINDINGS_PT: Final = 46.0
+_PNG_DPI: Final = 150
+
+
+def _compose(bench: BenchResult, device: DeviceResult) -> Canvas:
+    """Return the page; the house style must be in force."""
+    paper = Paper()
+    looks, view = traces(device), view_of(device)
+    top_parts = [head(bench, device), path_strip(device), sweep_list(device, looks)]
+    foot_parts = [cautions(), provenance(bench, device)]
+    free = HEIGHT_PT - _GAP_PT * _GAPS - sum(part.height for part in [*top_parts, *foot_parts])
+    free -= _LEAST_GAIN_PT + _LEAST_PANELS_PT
+    tables, findings = _numbers_and_findings(device, free)
+    free -= sum(part.height for part in [*tables, findings])
+    gain = _LEAST_GAIN_PT + min(0.6 * max(free, 0.0), _MOST_GAIN_PT - _LEAST_GAIN_PT)
+    panels = _LEAST_PANELS_PT + min(0.4 * max(free, 0.0), _MOST_PANELS_PT - _LEAST_PANELS_PT)
+
+    y = _put(paper, top_parts, 0.0)
+    draw_gain(paper, device, looks, view, y, gain)
+    y += gain + _GAP_PT
+    draw_panels(paper, device, view, y, panels)
+    y += panels + _GAP_PT
+    _put(paper, [*tables, findings], y)
+    _put(paper, foot_parts, HEIGHT_PT - sum(part.height for part in foot_parts) - _GAP_PT)
+    return paper.canvas
+
+
+def _put(paper: Paper, parts: list[Block], y: float) -> float:
+    """Draw parts below one another and return where the next begins."""
+    for part in parts:
+        if part.height > 0.0:
+            part.draw(paper, y)
+            y += part.height + _GAP_PT
+    return y
+
+
+def _numbers_and_findings(device: DeviceResult, room: float) -> tuple[list[Block], Block]:
+    """Return the tables and the findings for `room` points.
+
+    Whole if they fit. Else the advice of single targets goes first, as the findings give it too, then figures without
+    a target, then the last of the findings; targets go only when nothing else is left to go.
+    """
+    wanted = findings_block(device.findings, float("inf")).height
+    tables: list[Block] = []
+    for advise, rows in ((True, 12), (False, 12), (False, 8), (False, 5), (False, 3)):
+        others = other_figures(device, rows)
+        tables = [target_table(device, room - others.height - _LEAST_FINDINGS_PT, advise), others]
+        left = room - sum(part.height for part in tables)
+        if left >= min(wanted, _LEAST_FINDINGS_PT if rows < 8 else wanted):
+            break
+    return tables, findings_block(device.findings, room - sum(part.height for part in tables))
+
+
+def draw_page(bench: BenchResult, device: DeviceResult) -> Canvas:
+    """Return the page of `device` as a matplotlib figure, A4 portrait."""
+    with rc_context(STYLE):
+        return _compose(bench, device)
+
+
+def _made_at(bench: BenchResult) -> datetime | None:
+    try:
+        return datetime.fromisoformat(bench.made_at)
+    except ValueError:
+        return None
+
+
+def render_page(bench: BenchResult, device: DeviceResult) -> tuple[bytes, bytes]:
+    """Return the page of `device` as (PDF, PNG).
+
+    The same result gives the same bytes: the date in the PDF is the one of the result, not of the clock.
+    """
+    pdf, png = io.BytesIO(), io.BytesIO()
+    title = literal(device.name)
+    with rc_context(STYLE):
+        canvas = _compose(bench, device)
+        maker = f"benchtool {bench.version}"
+        about = {"Title": title, "Subject": literal(bench.title), "Creator": maker, "CreationDate": _made_at(bench)}
+        FigureCanvasPdf(canvas).print_pdf(pdf, metadata=about)
+        canvas.set_dpi(_PNG_DPI)
+        FigureCanvasAgg(canvas).print_png(png, metadata={"Software": maker})
+    return pdf.getvalue(), png.getvalue()

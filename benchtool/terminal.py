@@ -1,0 +1,104 @@
+"""Results in, plain tables on standard output: readable with colour off and when piped."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Final
+
+from rich.console import Console
+from rich.table import Table
+from rich.text import Text
+
+from benchtool.model import BenchResult, DeviceResult, Sweep
+from benchtool.units import format_si, to_db
+from benchtool.verdict import format_figure
+
+__all__ = ["print_result", "print_sweep"]
+
+_PIPED_WIDTH: Final = 160
+_STYLES: Final = {"met": "green", "missed": "red", "undecided": "yellow", "none": "dim"}
+
+
+def _console() -> Console:
+    console = Console(highlight=False, emoji=False, markup=False)
+    if not console.is_terminal:
+        console = Console(highlight=False, emoji=False, markup=False, width=_PIPED_WIDTH)
+    return console
+
+
+def _literal(text: str) -> Text:
+    """Return text that is shown as it is: no markup, control characters as escapes."""
+    return Text("".join(c if c.isprintable() else c.encode("unicode_escape").decode() for c in text))
+
+
+def _limits(low: float | None, high: float | None, unit: str) -> str:
+    if low is not None and high is not None:
+        return f"{format_figure(low, unit)} … {format_figure(high, unit)}"
+    if low is not None:
+        return f"≥ {format_figure(low, unit)}"
+    return f"≤ {format_figure(high, unit)}" if high is not None else ""
+
+
+def _device_table(device: DeviceResult) -> Table:
+    table = Table(box=None, pad_edge=False)
+    for column in ("figure", "value", "interval", "target", "verdict"):
+        table.add_column(column, no_wrap=True, justify="right" if column == "value" else "left")
+    judged = {target.figure for target in device.targets}
+    for target in device.targets:
+        table.add_row(*_row(device, target.figure, _limits(target.min, target.max, target.unit), target.verdict))
+    for key in device.figures:
+        if key not in judged:
+            table.add_row(*_row(device, key, "", None))
+    return table
+
+
+def _row(device: DeviceResult, key: str, target: str, verdict: str | None) -> list[Text | str]:
+    figure = device.figures[key]
+    value = "not known" if figure.value is None else format_figure(figure.value, figure.unit)
+    if figure.bound is not None:
+        value = f"{figure.bound} {value}"
+    interval = ""
+    if figure.low is not None and figure.high is not None:
+        interval = f"{format_figure(figure.low, figure.unit)} … {format_figure(figure.high, figure.unit)}"
+    mark = Text(verdict, style=_STYLES[verdict]) if verdict else ""
+    return [key.replace("_", " "), value, interval, target, mark]
+
+
+def print_result(result: BenchResult, folder: Path) -> None:
+    """Print every device's verdict, table and findings, and where the pages are."""
+    console = _console()
+    for device in result.devices:
+        head = Text.assemble(_literal(device.name), ": ", (device.verdict, _STYLES[device.verdict]))
+        console.print(head, soft_wrap=True)
+        console.print(f"  {device.summary.reason}", soft_wrap=True)
+        console.print(f"  Next: {device.summary.next_step}", soft_wrap=True)
+        console.print(_device_table(device))
+        for finding in device.findings:
+            line = f"  {finding.severity}: {finding.code}: {finding.message}; {finding.advice}"
+            console.print(_literal(line), soft_wrap=True)
+        console.print()
+    console.print(_literal(f"Written to {folder}"), soft_wrap=True)
+
+
+def print_sweep(sweep: Sweep) -> None:
+    """Print what is in one file, and every finding about it."""
+    console = _console()
+    f = sweep.frequency_hz
+    console.print(_literal(str(sweep.path or sweep.name)), soft_wrap=True)
+    span = f"{format_si(float(f[0]), 'Hz', 6)} to {format_si(float(f[-1]), 'Hz', 6)}"
+    references = " and ".join(f"{r:g} ohm" for r in dict.fromkeys(sweep.reference_ohm))
+    console.print(
+        f"  {f.size} frequencies, {span}, {references}; measured: {', '.join(sweep.measured)}", soft_wrap=True
+    )
+    for i, j in ((0, 0), (1, 0), (0, 1), (1, 1)):
+        name = f"S{i + 1}{j + 1}"
+        if name in sweep.measured:
+            level = to_db(sweep.s[i, j])
+            top = int(level.argmax())
+            where = format_si(float(f[top]), "Hz", 6)
+            console.print(f"  {name}: {level.min():.2f} to {level.max():.2f} dB, largest at {where}", soft_wrap=True)
+    if sweep.noise is not None:
+        console.print(f"  noise parameters at {sweep.noise.frequency_hz.size} frequencies", soft_wrap=True)
+    for finding in sweep.findings:
+        line = f"  {finding.severity}: {finding.code}: {finding.message}; {finding.advice}"
+        console.print(_literal(line), soft_wrap=True)
