@@ -6,22 +6,23 @@ import datetime
 import os
 from collections.abc import Callable, Sequence
 from dataclasses import replace
-from types import MappingProxyType
 
 import numpy as np
 
 from benchtool import __version__
 from benchtool.compression import MeasuredSweep, choose_reference, compare_drives, signal_to_noise_db
+from benchtool.doubts import SweepDoubts, assumptions, pads_that_count, sweep_doubts
 from benchtool.errors import BenchtoolError, FaultsError, SheetError, SweepFileError
 from benchtool.figures import FigurePlan, plan_figures, target_key
-from benchtool.findings import buried_parameters, device_findings
+from benchtool.findings import buried_parameters, device_findings, in_order
 from benchtool.model import BenchResult, DeviceResult, Figure, SignalPath, Sweep, SweepResult
 from benchtool.pads import PadBank, de_embed, signal_path
 from benchtool.response import span_of
 from benchtool.sheet import BenchSheet, Device, SweepEntry
 from benchtool.touchstone import read_sweep
+from benchtool.uncertainty import figure_trials
 from benchtool.units import format_si
-from benchtool.verdict import judge, summarise
+from benchtool.verdict import judge, remedy, summarise
 
 __all__ = ["analyse", "analyse_device", "correct_sweep", "made_at", "read_all"]
 
@@ -35,7 +36,9 @@ def made_at() -> str:
     return now.strftime("%Y-%m-%dT%H:%M:%SZ")
 
 
-def analyse(sheet: BenchSheet, progress: Progress | None = None, *, strict: bool = False) -> BenchResult:
+def analyse(
+    sheet: BenchSheet, progress: Progress | None = None, *, strict: bool = False, trials: int | None = None
+) -> BenchResult:
     """Return everything that can be worked out from a bench sheet and its sweeps.
 
     Parameters
@@ -43,6 +46,7 @@ def analyse(sheet: BenchSheet, progress: Progress | None = None, *, strict: bool
     sheet : from :func:`benchtool.sheet.load_sheet` or :func:`benchtool.sheet.sheet_from_files`
     progress : called with each device's name when that device is done
     strict : refuse every sweep file that does not follow the standard to the letter
+    trials : how many the intervals rest on; None runs until they have settled
 
     Raises
     ------
@@ -52,7 +56,8 @@ def analyse(sheet: BenchSheet, progress: Progress | None = None, *, strict: bool
     sweeps = read_all(sheet, strict)
     devices = []
     for number, device in enumerate(sheet.devices, start=1):
-        devices.append(analyse_device(sheet, device, number, bank, [sweeps[entry.file] for entry in device.sweeps]))
+        mine = [sweeps[entry.file] for entry in device.sweeps]
+        devices.append(analyse_device(sheet, device, number, bank, mine, trials))
         if progress is not None:
             progress(device.name)
     return BenchResult(
@@ -109,18 +114,48 @@ def correct_sweep(sheet: BenchSheet, entry: SweepEntry, sweep: Sweep, bank: PadB
 
 
 def analyse_device(
-    sheet: BenchSheet, device: Device, number: int, bank: PadBank, sweeps: Sequence[Sweep]
+    sheet: BenchSheet,
+    device: Device,
+    number: int,
+    bank: PadBank,
+    sweeps: Sequence[Sweep],
+    trials: int | None = None,
 ) -> DeviceResult:
-    """Return the result of one device; `number` is its place in the sheet, counted from 1, for messages."""
+    """Return the result of one device.
+
+    `number` is its place in the sheet, counted from 1: messages name it, and it seeds the trials.
+    """
     measured = [
         _measure(sheet, device, number, entry, sweep, bank) for entry, sweep in zip(device.sweeps, sweeps, strict=True)
     ]
     reference, reason = choose_reference(measured)
     at_hz = reference.plan.design_hz
     compression = compare_drives(measured, reference, reason, at_hz)
-    findings = device_findings(device.kind, device.design_hz, measured, reference, compression, sheet.analyzer)
-    figures = _withhold_buried(reference.plan, reference, sheet)
-    results = tuple(judge(figures[target_key(target)], target) for target in device.targets)
+    doubts = [
+        sweep_doubts(sweep.result.raw, entry, sheet, bank, at_hz)
+        for sweep, entry in zip(measured, device.sweeps, strict=True)
+    ]
+    findings = device_findings(device.kind, device.design_hz, measured, reference, compression, doubts)
+    used = {pad for entry in device.sweeps for pad in pads_that_count(entry, sheet)}
+    own = doubts[measured.index(reference)]
+    confidence = sheet.decision.confidence
+    keys = [target_key(target) for target in device.targets]
+    trial = figure_trials(
+        reference,
+        own,
+        bank,
+        _withhold_buried(reference, own),
+        confidence,
+        trials=trials,
+        seed=number,
+        deciding=keys or [next(iter(reference.plan.extractors))],
+    )
+    figures = trial.figures
+    results = tuple(
+        judge(figures[key], target, trial.values.get(key), confidence, remedy(figures[key], bank))
+        for key, target in zip(keys, device.targets, strict=True)
+    )
+    findings = in_order((*findings, *trial.findings))
     return DeviceResult(
         device.name,
         device.kind,
@@ -129,11 +164,13 @@ def analyse_device(
         device.window_hz,
         reference.file,
         tuple(sweep.result for sweep in measured),
-        MappingProxyType(figures),
+        figures,
         results,
         compression,
         findings,
         summarise(results, figures, findings),
+        tuple(f"{item.what} {item.value_db:g} dB" for item in assumptions(sheet, used, bank)),
+        trial.trials,
     )
 
 
@@ -172,11 +209,11 @@ def _path(sheet: BenchSheet, entry: SweepEntry, bank: PadBank, plan: FigurePlan,
     return signal_path(entry, sheet, bank, plan.design_hz, gain)
 
 
-def _withhold_buried(plan: FigurePlan, reference: MeasuredSweep, sheet: BenchSheet) -> dict[str, Figure]:
+def _withhold_buried(reference: MeasuredSweep, doubts: SweepDoubts) -> dict[str, Figure]:
     """Return the figures of the reference sweep; a return loss buried under pads is withheld (a finding says why)."""
-    figures = plan.figures(reference.result.sweep.s)
-    buried = buried_parameters(reference, sheet.analyzer)
-    for name, key in (("S11", "input_return_loss"), ("S22", "output_return_loss")):
-        if name in buried and key in figures:
+    figures = reference.plan.figures(reference.result.sweep.s)
+    for name in buried_parameters(reference, doubts):
+        key = "input_return_loss" if name == "S11" else "output_return_loss"
+        if key in figures:
             figures[key] = replace(figures[key], value=None, bound=None)
     return figures

@@ -6,19 +6,20 @@ in :func:`device_findings`, and list the code in the README.
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterable, Iterator, Sequence
+from dataclasses import replace
 from typing import Final
 
 import numpy as np
 
 from benchtool.compression import MeasuredSweep, signal_to_noise_db
-from benchtool.match import BURIED_UNCERTAINTY, buried_uncertainty
+from benchtool.doubts import SweepDoubts
+from benchtool.match import BURIED_UNCERTAINTY
 from benchtool.model import Compression, Finding, Kind
 from benchtool.phase import ambiguous_steps
-from benchtool.sheet import Analyzer
 from benchtool.units import HALF_POWER_DB, format_si
 
-__all__ = ["SEVERITIES", "buried_parameters", "device_findings"]
+__all__ = ["SEVERITIES", "buried_parameters", "device_findings", "in_order"]
 
 SEVERITIES: Final = ("fault", "caution", "note")
 
@@ -38,7 +39,7 @@ def device_findings(
     sweeps: Sequence[MeasuredSweep],
     reference: MeasuredSweep,
     compression: Compression | None,
-    analyzer: Analyzer,
+    doubts: Sequence[SweepDoubts],
 ) -> tuple[Finding, ...]:
     """Return the findings of one device, worst first, in the order of the sweeps within one severity."""
     found: list[Finding] = []
@@ -51,10 +52,30 @@ def device_findings(
     found += _shape(reference)
     found += _against_design(kind, design_hz, reference)
     found += _cross_checks(kind, reference)
-    for sweep in sweeps:
-        found += _buried(sweep, analyzer)
-    unique = dict.fromkeys(found)
-    return tuple(sorted(unique, key=lambda finding: SEVERITIES.index(finding.severity)))
+    found += _buried(reference, doubts[sweeps.index(reference)])
+    return in_order(_together(list(dict.fromkeys(found))))
+
+
+def in_order(findings: Iterable[Finding]) -> tuple[Finding, ...]:
+    """Return findings worst first, otherwise in the order they came."""
+    return tuple(sorted(findings, key=lambda finding: SEVERITIES.index(finding.severity)))
+
+
+def _together(findings: Sequence[Finding]) -> list[Finding]:
+    """Return the findings with notes that say the same of several sweeps made one."""
+    merged: dict[tuple[str, str, str], list[Finding]] = {}
+    for finding in findings:
+        said = finding.message.removeprefix(f"{finding.sweep}: ") if finding.severity == "note" else finding.message
+        merged.setdefault((finding.code, said, finding.advice), []).append(finding)
+    result = []
+    for (_, said, _), group in merged.items():
+        names = [finding.sweep for finding in group if finding.sweep is not None]
+        if len(names) < 2:
+            result.append(group[0])
+        else:
+            listed = f"{', '.join(names[:-1])} and {names[-1]}"
+            result.append(replace(group[0], message=f"{listed}: {said}", sweep=None))
+    return result
 
 
 def _receiver_level(sweep: MeasuredSweep) -> Iterator[Finding]:
@@ -253,21 +274,26 @@ def _cross_checks(kind: Kind, reference: MeasuredSweep) -> Iterator[Finding]:
     )
 
 
-def buried_parameters(sweep: MeasuredSweep, analyzer: Analyzer) -> dict[str, float]:
-    """Return which reflections of a sweep are buried under added pads: parameter and uncertainty of its magnitude."""
-    if analyzer.directivity_db is None:
-        return {}
+def buried_parameters(sweep: MeasuredSweep, doubts: SweepDoubts) -> dict[str, float]:
+    """Return which reflections of a sweep are buried under added pads: parameter and doubt of its magnitude.
+
+    The rule is that of :func:`benchtool.match.buried_uncertainty`, with the pads' own reflection added to the
+    directivity, since a matched pad that is not quite matched is read as part of the device.
+    """
     result = sweep.result
-    buried = {}
-    for name, correction in (("S11", result.input_correction_db), ("S22", result.output_correction_db)):
-        doubt = buried_uncertainty(correction, analyzer.directivity_db)
-        if name in result.raw.measured and correction > 0 and doubt > BURIED_UNCERTAINTY:
-            buried[name] = doubt
-    return buried
+    sides = (
+        ("S11", result.input_correction_db, doubts.input_vector),
+        ("S22", result.output_correction_db, doubts.output_vector),
+    )
+    return {
+        name: vector
+        for name, correction, vector in sides
+        if name in result.raw.measured and correction > 0.0 and vector > BURIED_UNCERTAINTY
+    }
 
 
-def _buried(sweep: MeasuredSweep, analyzer: Analyzer) -> Iterator[Finding]:
-    for name, doubt in buried_parameters(sweep, analyzer).items():
+def _buried(sweep: MeasuredSweep, doubts: SweepDoubts) -> Iterator[Finding]:
+    for name, doubt in buried_parameters(sweep, doubts).items():
         side = "input" if name == "S11" else "output"
         yield Finding(
             "return-loss-buried",

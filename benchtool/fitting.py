@@ -55,6 +55,8 @@ class Fit:
     """(degree + 1, stop - start)."""
     excess: float
     """Residual variance over the variance that noise explains."""
+    misfit: float
+    """What the residuals leave over beyond the noise: an rms complex error, in units of S."""
 
     @property
     def degree(self) -> int:
@@ -232,8 +234,13 @@ def _fit(frequency_hz: FloatArray, s: ComplexArray, low_hz: float, high_hz: floa
         fitted = 1.0 / fitted if form.inverse else fitted
         smooth = np.maximum(np.abs(fitted), 1e-6 * np.max(magnitude))
     allowed = np.hypot(noise.sigma(smooth), _GOOD_ENOUGH * np.max(magnitude))
-    excess = float(np.sum((np.abs(fitted - trace * turn) / allowed) ** 2)) / max(f.size - degree - 1, 1)
-    return Fit(start, stop, low_hz, high_hz, centre, scale, form.inverse, form.delay_s, turn, solve, excess)
+    error = np.abs(fitted - trace * turn) ** 2
+    freedom = max(f.size - degree - 1, 1)
+    excess = float(np.sum(error / allowed**2)) / freedom
+    beyond = max(float(np.sum(error)) / freedom - float(np.mean(noise.sigma(smooth) ** 2)), 0.0)
+    # Residuals scatter round the noise by their own uncertainty; only what stands clear of that is misfit.
+    misfit = float(np.sqrt(beyond)) if excess > _ACCEPTED_EXCESS else 0.0
+    return Fit(start, stop, low_hz, high_hz, centre, scale, form.inverse, form.delay_s, turn, solve, excess, misfit)
 
 
 def _pieces(frequency_hz: FloatArray, s: ComplexArray, low_hz: float, high_hz: float, context: _Context) -> list[Fit]:

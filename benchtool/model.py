@@ -294,6 +294,10 @@ class DeviceResult:
     compression: Compression | None
     findings: tuple[Finding, ...]
     summary: Summary
+    assumptions: tuple[str, ...] = ()
+    """Widths of doubts that the sheet does not state and that were assumed, a phrase for each."""
+    trials: int = 0
+    """Trials behind the intervals; 0 where there are none."""
 
     @property
     def verdict(self) -> Verdict:

@@ -35,8 +35,8 @@ _GAP_PT: Final = 5.0
 _GAPS: Final = 9
 _LEAST_GAIN_PT: Final = 116.0
 _LEAST_PANELS_PT: Final = 84.0
-_MOST_GAIN_PT: Final = 230.0
-_MOST_PANELS_PT: Final = 150.0
+_MOST_GAIN_PT: Final = 250.0
+_MOST_PANELS_PT: Final = 170.0
 _LEAST_FINDINGS_PT: Final = 46.0
 _PNG_DPI: Final = 150
 
@@ -46,7 +46,7 @@ def _compose(bench: BenchResult, device: DeviceResult) -> Canvas:
     paper = Paper()
     looks, view = traces(device), view_of(device)
     top_parts = [head(bench, device), path_strip(device), sweep_list(device, looks)]
-    foot_parts = [cautions(), provenance(bench, device)]
+    foot_parts = [cautions(), provenance(bench, looks)]
     free = HEIGHT_PT - _GAP_PT * _GAPS - sum(part.height for part in [*top_parts, *foot_parts])
     free -= _LEAST_GAIN_PT + _LEAST_PANELS_PT
     tables, findings = _numbers_and_findings(device, free)
@@ -81,11 +81,14 @@ def _numbers_and_findings(device: DeviceResult, room: float) -> tuple[list[Block
     """
     wanted = findings_block(device.findings, float("inf")).height
     tables: list[Block] = []
-    for advise, rows in ((True, 12), (False, 12), (False, 8), (False, 5), (False, 3)):
+    every_target = target_table(device, float("inf"), advise=False).height
+    for advise, rows in ((True, 12), (False, 12), (False, 8), (False, 5), (False, 3), (False, 0)):
         others = other_figures(device, rows)
-        tables = [target_table(device, room - others.height - _LEAST_FINDINGS_PT, advise), others]
-        left = room - sum(part.height for part in tables)
-        if left >= min(wanted, _LEAST_FINDINGS_PT if rows < 8 else wanted):
+        table = target_table(device, room - others.height - _LEAST_FINDINGS_PT, advise)
+        tables = [table, others]
+        left = room - table.height - others.height
+        enough = wanted if rows > 5 else min(wanted, 2 * _LEAST_FINDINGS_PT)
+        if table.height >= every_target and left >= enough:
             break
     return tables, findings_block(device.findings, room - sum(part.height for part in tables))
 
@@ -114,7 +117,9 @@ def render_page(bench: BenchResult, device: DeviceResult) -> tuple[bytes, bytes]
         canvas = _compose(bench, device)
         maker = f"benchtool {bench.version}"
         about = {"Title": title, "Subject": literal(bench.title), "Creator": maker, "CreationDate": _made_at(bench)}
-        FigureCanvasPdf(canvas).print_pdf(pdf, metadata=about)
-        canvas.set_dpi(_PNG_DPI)
-        FigureCanvasAgg(canvas).print_png(png, metadata={"Software": maker})
+        FigureCanvasPdf(canvas).print_figure(pdf, format="pdf", metadata=about)
+        quick = {"compress_level": 3}
+        FigureCanvasAgg(canvas).print_figure(
+            png, format="png", dpi=_PNG_DPI, metadata={"Software": maker}, pil_kwargs=quick
+        )
     return pdf.getvalue(), png.getvalue()

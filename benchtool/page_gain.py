@@ -1,7 +1,8 @@
 """A device in; its gain against frequency out, for every sweep, with the targets as shaded zones.
 
 The zones say where a target wants the curve: a column at the design frequency or at a rejection frequency, a bar at
-the height of the half-power points or of the peak. Words stand beside the diagram, never over the curves.
+the height of the half-power points, a bar on the frequency axis for the peak. Words stand beside the diagram, never
+over the curves.
 """
 
 from __future__ import annotations
@@ -15,7 +16,7 @@ from matplotlib.axes import Axes
 from matplotlib.patches import Rectangle
 
 from benchtool.model import DeviceResult, Figure, TargetResult
-from benchtool.page_numbers import level_text, quantity
+from benchtool.page_numbers import level_text, stated
 from benchtool.page_paper import GREEN, HEADING_PT, INK, LIGHT, WIDTH_PT, ZONE, Paper
 from benchtool.page_scales import View, decibels_of, frame, widened
 from benchtool.page_traces import Trace
@@ -39,6 +40,8 @@ class _Zone:
     high_hz: float
     low_db: float | None
     high_db: float | None
+    limits_hz: tuple[float, ...] = ()
+    """The limits, where they are frequencies and not gains."""
 
 
 def _value(device: DeviceResult, key: str) -> float | None:
@@ -46,7 +49,7 @@ def _value(device: DeviceResult, key: str) -> float | None:
     return None if figure is None or figure.value is None or figure.bound else figure.value
 
 
-def _zones(device: DeviceResult, view: View, height_db: float) -> Iterator[_Zone]:
+def _zones(device: DeviceResult, view: View, shown_db: tuple[float, float]) -> Iterator[_Zone]:
     """Yield the zones of all targets that can be shown against frequency."""
     sliver = 0.008 * (view.high_hz - view.low_hz)
     peak = _value(device, "peak_gain")
@@ -62,41 +65,50 @@ def _zones(device: DeviceResult, view: View, height_db: float) -> Iterator[_Zone
         elif target.id == "rejection" and peak is not None and target.min is not None:
             yield _Zone(at_hz - sliver, at_hz + sliver, None, peak - target.min)
         elif peak is not None:
-            yield from _frequency_zones(device, target, view, peak, height_db)
+            yield from _frequency_zones(device, target, view, peak, shown_db)
 
 
 def _frequency_zones(
-    device: DeviceResult, target: TargetResult, view: View, peak_db: float, height_db: float
+    device: DeviceResult, target: TargetResult, view: View, peak_db: float, shown_db: tuple[float, float]
 ) -> Iterator[_Zone]:
-    """Yield bars at the height of the peak or of the half-power points."""
-    half = 0.035 * height_db
+    """Yield bars at the height of the half-power points, or on the frequency axis."""
+    bottom_db = shown_db[0]
+    half = 0.035 * (shown_db[1] - bottom_db)
     low = view.low_hz if target.min is None else target.min
     high = view.high_hz if target.max is None else target.max
     edge_db = peak_db - HALF_POWER_DB
+    stated_hz = tuple(v for v in (target.min, target.max) if v is not None)
     if target.id in ("peak_frequency", "centre_frequency"):
-        yield _Zone(low, high, peak_db - half / 2, peak_db + half / 2)
+        # A wish about frequency alone: a bar on the frequency axis.
+        yield _Zone(low, high, None, bottom_db + half, stated_hz)
     elif target.id in ("lower_edge", "upper_edge"):
-        yield _Zone(low, high, edge_db - half, edge_db + half)
+        yield _Zone(low, high, edge_db - half, edge_db + half, stated_hz)
     elif target.id == "bandwidth":
         centre = _value(device, "centre_frequency") or _value(device, "peak_frequency")
         if centre is None:
             return
         narrow = 0.0 if target.min is None else target.min
         wide = narrow * 1.5 if target.max is None else target.max
-        for near, far in ((-narrow / 2, -wide / 2), (narrow / 2, wide / 2)):
-            yield _Zone(centre + min(near, far), centre + max(near, far), edge_db - half, edge_db + half)
+        for side in (-0.5, 0.5):
+            low, high = sorted((centre + side * narrow, centre + side * wide))
+            ends = tuple(centre + side * v for v in stated_hz)
+            yield _Zone(low, high, edge_db - half, edge_db + half, ends)
 
 
 def _shade(axes: Axes, view: View, zone: _Zone) -> None:
     bottom, top = axes.get_ylim()
     low = bottom if zone.low_db is None else zone.low_db
     high = top if zone.high_db is None else zone.high_db
-    left, right = (float(view.scaled(v)) for v in (zone.low_hz, zone.high_hz))
-    axes.add_patch(Rectangle((left, low), right - left, high - low, facecolor=ZONE, edgecolor=GREEN, linewidth=0.4, zorder=1))
+    left, right = (v / view.factor for v in (zone.low_hz, zone.high_hz))
+    axes.add_patch(
+        Rectangle((left, low), right - left, high - low, facecolor=ZONE, edgecolor=GREEN, linewidth=0.4, zorder=1)
+    )
     # A heavy line on each limit, so that the zone's open side is told from its closed one in grey too.
-    for limit in (zone.low_db, zone.high_db):
-        if limit is not None:
-            axes.plot([left, right], [limit, limit], color=GREEN, linewidth=1.3, zorder=1.5)
+    for limit_hz in zone.limits_hz:
+        axes.plot([limit_hz / view.factor] * 2, [low, high], color=GREEN, linewidth=1.3, zorder=1.5)
+    for limit_db in () if zone.limits_hz else (zone.low_db, zone.high_db):
+        if limit_db is not None:
+            axes.plot([left, right], [limit_db, limit_db], color=GREEN, linewidth=1.3, zorder=1.5)
 
 
 def _mark_figures(axes: Axes, device: DeviceResult, view: View) -> None:
@@ -107,13 +119,13 @@ def _mark_figures(axes: Axes, device: DeviceResult, view: View) -> None:
     bottom, top = axes.get_ylim()
     if peak_hz is not None:
         lift = 0.025 * (top - bottom)
-        axes.plot([view.scaled(peak_hz)], [peak_db + lift], "v", color=INK, markersize=4, zorder=4)
+        axes.plot([peak_hz / view.factor], [peak_db + lift], "v", color=INK, markersize=4, zorder=4)
     edges = [edge for key in ("lower_edge", "upper_edge") if (edge := _value(device, key)) is not None]
     level = peak_db - HALF_POWER_DB
     if len(edges) == 2:
-        axes.plot([view.scaled(e) for e in edges], [level, level], color=INK, linewidth=0.6, zorder=3)
+        axes.plot([e / view.factor for e in edges], [level, level], color=INK, linewidth=0.6, zorder=3)
     if edges:
-        axes.plot([view.scaled(e) for e in edges], [level] * len(edges), "|", color=INK, markersize=8, zorder=4)
+        axes.plot([e / view.factor for e in edges], [level] * len(edges), "|", color=INK, markersize=8, zorder=4)
 
 
 def _limits(device: DeviceResult, looks: Sequence[Trace], view: View) -> tuple[float, float]:
@@ -151,7 +163,9 @@ def _spread(wanted: list[float], step: float, low: float, high: float) -> list[f
     return placed
 
 
-def _end_labels(paper: Paper, axes: Axes, looks: Sequence[Trace], view: View, frame_pt: tuple[float, float, float]) -> None:
+def _end_labels(
+    paper: Paper, axes: Axes, looks: Sequence[Trace], view: View, frame_pt: tuple[float, float, float]
+) -> None:
     """Write number and drive beside the right end of each trace, apart from one another, with a thin leader."""
     right, upper, tall = frame_pt
     bottom, top = axes.get_ylim()
@@ -168,8 +182,8 @@ def _end_labels(paper: Paper, axes: Axes, looks: Sequence[Trace], view: View, fr
     for (y, trace), place in zip(ends, places, strict=True):
         paper.stroke([right + 1.5, right + 7.0, right + 10.0], [y, place, place], trace.color, 0.6)
         drive = "" if trace.sweep.drive_dbm is None else level_text(trace.sweep.drive_dbm)
-        paper.text(right + 12.0, place + 2.3, str(trace.number), 6.5, bold=True)
-        paper.text(right + 22.0, place + 2.3, drive or "drive ?", 6.0, color=LIGHT)
+        paper.text(right + 21.0, place + 2.3, str(trace.number), 6.5, bold=True, align="right")
+        paper.text(right + 24.0, place + 2.3, drive or "drive ?", 6.0, color=LIGHT)
 
 
 def _key(paper: Paper, top: float) -> None:
@@ -178,31 +192,37 @@ def _key(paper: Paper, top: float) -> None:
     paper.text(x, top + 9.0, "wanted by a target", 6.5, color=LIGHT, align="right")
     paper.box(x - 75.0, y - 3.0, 9.0, 6.0, fill=ZONE, edge=GREEN, line=0.4)
     paper.text(x - 85.0, top + 9.0, "half-power band", 6.5, color=LIGHT, align="right")
-    paper.stroke([x - 156.0, x - 142.0], [y, y], INK, 0.6)
-    paper.stroke([x - 156.0, x - 156.0], [y - 3, y + 3], INK, 0.7)
-    paper.stroke([x - 142.0, x - 142.0], [y - 3, y + 3], INK, 0.7)
-    paper.text(x - 166.0, top + 9.0, "peak", 6.5, color=LIGHT, align="right")
-    paper.marker(x - 189.0, y, "v", 4, INK)
-    paper.text(x - 199.0, top + 9.0, "compressed", 6.5, color=LIGHT, align="right")
-    paper.stroke([x - 257.0, x - 242.0], [y, y], LIGHT, 0.9, (0.0, (4.0, 1.6)))
+    paper.stroke([x - 159.0, x - 145.0], [y, y], INK, 0.6)
+    paper.stroke([x - 159.0, x - 159.0], [y - 3, y + 3], INK, 0.7)
+    paper.stroke([x - 145.0, x - 145.0], [y - 3, y + 3], INK, 0.7)
+    paper.text(x - 169.0, top + 9.0, "peak", 6.5, color=LIGHT, align="right")
+    paper.marker(x - 192.0, y, "v", 4, INK)
+    paper.text(x - 202.0, top + 9.0, "compressed", 6.5, color=LIGHT, align="right")
+    paper.stroke([x - 260.0, x - 245.0], [y, y], LIGHT, 0.9, (0.0, (4.0, 1.6)))
 
 
-def draw_gain(paper: Paper, device: DeviceResult, looks: Sequence[Trace], view: View, top: float, height: float) -> None:
+def draw_gain(
+    paper: Paper, device: DeviceResult, looks: Sequence[Trace], view: View, top: float, height: float
+) -> None:
     """Draw the diagram into `height` points below `top`."""
     paper.heading(top, f"Gain at the device, dB against {view.unit}")
+    if not view.whole:
+        frequency = device.reference.sweep.frequency_hz
+        span = f"of {stated(float(frequency[0]), 'Hz')} to {stated(float(frequency[-1]), 'Hz')} swept"
+        paper.text(155.0, top + 9.0, span, 6.5, color=LIGHT)
     _key(paper, top)
     upper, tall = top + HEADING_PT + 2.0, height - HEADING_PT - 2.0 - _BELOW_PT
     wide = WIDTH_PT - _LEFT_PT - _RIGHT_PT
     axes = paper.axes(_LEFT_PT, upper, wide, tall)
     limits = _limits(device, looks, view)
-    frame(axes, (view.low_hz / view.factor, view.high_hz / view.factor), limits, 10, 6 if tall > 90 else 4)
-    for zone in _zones(device, view, limits[1] - limits[0]):
+    frame(axes, (view.low_hz / view.factor, view.high_hz / view.factor), limits, 10, tall)
+    for zone in _zones(device, view, limits):
         _shade(axes, view, zone)
     for trace in reversed(looks):
         sweep = trace.sweep.sweep
         shown = view.inside(sweep.frequency_hz)
         axes.plot(
-            view.scaled(sweep.frequency_hz[shown]),
+            sweep.frequency_hz[shown] / view.factor,
             decibels_of(sweep.s21[shown]),
             color=trace.color,
             linewidth=trace.width,
@@ -211,7 +231,3 @@ def draw_gain(paper: Paper, device: DeviceResult, looks: Sequence[Trace], view: 
         )
     _mark_figures(axes, device, view)
     _end_labels(paper, axes, looks, view, (_LEFT_PT + wide, upper, tall))
-    if not view.whole:
-        frequency = device.reference.sweep.frequency_hz
-        span = f"the sweep goes on, {quantity(float(frequency[0]), 'Hz')} to {quantity(float(frequency[-1]), 'Hz')}"
-        paper.text(WIDTH_PT, upper + tall + 9.0, span, 6.0, color=LIGHT, align="right")

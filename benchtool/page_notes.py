@@ -5,10 +5,11 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import Final
 
-from benchtool.model import BenchResult, DeviceResult, Finding, Severity
-from benchtool.page_numbers import quantity
+from benchtool.model import BenchResult, Finding, Severity
+from benchtool.page_numbers import stated
 from benchtool.page_paper import BLUE, HEADING_PT, INK, LIGHT, ORANGE, VERMILLION, WIDTH_PT, Block, Paper
 from benchtool.page_text import Lines, fit
+from benchtool.page_traces import Trace
 
 __all__ = ["CAUTIONS", "cautions", "findings_block", "provenance"]
 
@@ -24,7 +25,10 @@ _MARK: Final[dict[Severity, tuple[str, float, str]]] = {
     "caution": ("^", 5.6, ORANGE),
     "note": ("o", 4.0, BLUE),
 }
-_TEXT_PT: Final = 124.0
+_TEXT_PT: Final = 132.0
+_MOST_HASHES: Final = 12
+_LONG_NAMES: Final = 240
+"""Letters in all file names together above which the origin of the data gives their numbers instead."""
 
 
 def _setting(finding: Finding) -> tuple[Lines, Lines]:
@@ -85,24 +89,31 @@ def cautions() -> Block:
     return Block(said.height_pt(1.18) + 3.0, draw)
 
 
-def _spans(device: DeviceResult) -> list[str]:
+def _spans(looks: Sequence[Trace]) -> list[str]:
     """Return points and span of each sweep."""
     texts = []
-    for sweep in device.sweeps:
-        frequency = sweep.raw.frequency_hz
-        span = f"{quantity(float(frequency[0]), 'Hz')} to {quantity(float(frequency[-1]), 'Hz')}"
+    for look in looks:
+        frequency = look.sweep.raw.frequency_hz
+        span = f"{stated(float(frequency[0]), 'Hz')} to {stated(float(frequency[-1]), 'Hz')}"
         texts.append(f"{len(frequency)} points, {span}")
     return texts
 
 
-def provenance(bench: BenchResult, device: DeviceResult) -> Block:
+def provenance(bench: BenchResult, looks: Sequence[Trace]) -> Block:
     """Return where every number came from: files with the start of their SHA-256, span, version, time."""
-    spans = _spans(device)
+    spans = _spans(looks)
     same = len(set(spans)) == 1 and len(spans) > 1
-    files = []
-    for sweep, span in zip(device.sweeps, spans, strict=True):
-        digest = sweep.raw.sha256[:12] or "no hash"
-        files.append(f"{sweep.file} ({digest}{'' if same else f'; {span}'})")
+    digests = [sweep.sweep.raw.sha256[:12] or "no hash" for sweep in looks[:_MOST_HASHES]]
+    names = [look.sweep.file for look in looks]
+    if sum(map(len, names)) > _LONG_NAMES:
+        # The list of sweeps above has the names in full.
+        names = [str(look.number) for look in looks]
+    files = [
+        f"{name} ({digest}{'' if same else f'; {span}'})"
+        for name, digest, span in zip(names, digests, spans, strict=False)
+    ]
+    if len(looks) > len(files):
+        files.append(f"{len(looks) - len(files)} more in results.json")
     parts = [f"Sweeps, SHA-256: {', '.join(files)}{f'; each {spans[0]}' if same else ''}."]
     if bench.sheet is not None or bench.sheet_sha256:
         name = bench.sheet.name if bench.sheet is not None else "bench sheet"

@@ -7,17 +7,23 @@ careful bench measurement can carry.
 from __future__ import annotations
 
 import math
+import re
 from typing import Final
 
 from benchtool.model import Figure, TargetResult
 
-__all__ = ["decibels", "figure_label", "interval_text", "level_text", "limits_text", "quantity", "value_text"]
+__all__ = ["decibels", "figure_label", "interval_text", "level_text", "limits_text", "quantity", "stated", "value_text"]
 
 _PREFIXES: Final = ((1e9, "G"), (1e6, "M"), (1e3, "k"), (1.0, ""), (1e-3, "m"), (1e-6, "µ"), (1e-9, "n"), (1e-12, "p"))
 _SCALED: Final = ("Hz", "s", "ohm")
 _SIGNIFICANT: Final = {"Hz": 5, "s": 4, "ohm": 4, "": 3}
 _DECIMALS: Final = {"dB": 2, "dBm": 1, "deg": 1}
 _SPELLING: Final = {"loaded_q": "loaded Q", "input_p1db": "input P1dB", "output_p1db": "output P1dB"}
+_FIGURE_DIGITS: Final = {
+    **dict.fromkeys(("input_return_loss", "output_return_loss", "reverse_isolation", "rejection"), 1),
+    "bandwidth": 4,
+}
+"""Figures that are known less well, or wanted less finely, than their unit would have it."""
 _UNIT_SIGN: Final = {"deg": "°", "ohm": "Ω"}
 
 
@@ -26,9 +32,13 @@ def figure_label(key: str) -> str:
 
     >>> figure_label("rejection at 10.7 MHz"), figure_label("loaded_q")
     ('rejection at 10.7 MHz', 'loaded Q')
+    >>> figure_label("ripple over 21 MHz to 22 MHz")
+    'ripple over 21 to 22 MHz'
     """
     name, _, rest = key.partition(" ")
     words = _SPELLING.get(name, name.replace("_", " "))
+    # '21 MHz to 22 MHz' says MHz twice.
+    rest = re.sub(r" (\w+) to (\S+) \1$", r" to \2 \1", rest)
     return f"{words} {rest}" if rest else words
 
 
@@ -43,13 +53,14 @@ def _scale(value: float, unit: str) -> tuple[float, str]:
     return factor, prefix + sign
 
 
-def _decimals(value: float, unit: str, factor: float, uncertainty: float | None) -> int:
+def _decimals(value: float, unit: str, factor: float, uncertainty: float | None, digits: int | None = None) -> int:
     if uncertainty is not None and uncertainty > 0 and math.isfinite(uncertainty):
         return min(6, 1 - math.floor(math.log10(uncertainty / factor)))
     if unit in _DECIMALS:
-        return _DECIMALS[unit]
-    size = abs(value) / factor
-    return max(0, _SIGNIFICANT.get(unit, 4) - 1 - (math.floor(math.log10(size)) if size else 0))
+        return _DECIMALS[unit] if digits is None else digits
+    size = float(f"{abs(value) / factor:.5g}")
+    significant = _SIGNIFICANT.get(unit, 4) if digits is None else digits
+    return max(0, significant - 1 - (math.floor(math.log10(size)) if size else 0))
 
 
 def _plain(value: float, decimals: int) -> str:
@@ -61,21 +72,31 @@ def _join(number: str, unit: str) -> str:
     return f"{number}{unit}" if unit in ("", "°") else f"{number} {unit}"
 
 
-def quantity(value: float, unit: str, uncertainty: float | None = None) -> str:
-    """Return a value with its unit.
+def _short(value: float) -> str:
+    return f"{value:.6g}".replace("-", "−")
+
+
+def stated(value: float, unit: str) -> str:
+    """Return a value that somebody stated, with the digits that it has: '21.4 MHz'."""
+    factor, sign = _scale(value, unit)
+    return _join(_short(value / factor), sign)
+
+
+def quantity(value: float, unit: str, uncertainty: float | None = None, digits: int | None = None) -> str:
+    """Return a measured value with its unit; `digits` overrides the usual decimals (dB) or significant digits.
 
     >>> quantity(21.4e6, "Hz"), quantity(-3.0, "dBm"), quantity(40.123, "dB", 0.21), quantity(1.487e-6, "s")
     ('21.400 MHz', '−3.0 dBm', '40.12 dB', '1.487 µs')
     """
     factor, sign = _scale(value, unit)
-    return _join(_plain(value / factor, _decimals(value, unit, factor, uncertainty)), sign)
+    return _join(_plain(value / factor, _decimals(value, unit, factor, uncertainty, digits)), sign)
 
 
 def value_text(figure: Figure | None) -> str:
     """Return the value of a figure: '40.12 dB', 'at least 1.2000 MHz', or 'not known'."""
     if figure is None or figure.value is None or not math.isfinite(figure.value):
         return "not known"
-    text = quantity(figure.value, figure.unit, figure.standard_uncertainty)
+    text = quantity(figure.value, figure.unit, figure.standard_uncertainty, _FIGURE_DIGITS.get(figure.id))
     return f"{figure.bound} {text}" if figure.bound else text
 
 
@@ -88,10 +109,6 @@ def interval_text(figure: Figure | None) -> str:
     decimals = _decimals(figure.value, figure.unit, factor, spread)
     low, high = (_plain(v / factor, decimals) for v in (figure.low, figure.high))
     return f"{low} to {high}"
-
-
-def _short(value: float) -> str:
-    return f"{value:.6g}".replace("-", "−")
 
 
 def limits_text(target: TargetResult) -> str:

@@ -11,6 +11,7 @@ from dataclasses import dataclass
 from typing import Any, Final, Literal
 
 import matplotlib
+from matplotlib.artist import Artist
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure as Canvas
 from matplotlib.lines import Line2D
@@ -18,7 +19,7 @@ from matplotlib.patches import Polygon, Rectangle
 from matplotlib.text import Text
 from matplotlib.transforms import Affine2D
 
-from benchtool.page_text import FAMILY, Lines, families, literal
+from benchtool.page_text import FAMILY, Lines, families, in_reading_order, literal
 
 __all__ = [
     "BLUE",
@@ -62,12 +63,14 @@ VERMILLION: Final = "#D55E00"
 PURPLE: Final = "#CC79A7"
 ZONE: Final = "#cfe9df"
 
-Dash = str | tuple[float, tuple[float, ...]]
+Dash = Literal["-"] | tuple[float, tuple[float, ...]]
 
 STYLE: Final[dict[Any, Any]] = {
     **{key: value for key, value in matplotlib.rcParamsDefault.items() if not key.startswith("backend")},
     "font.family": [FAMILY],
     "text.parse_math": False,
+    # Hinting would stretch lines on screen past the widths that they have in print.
+    "text.hinting": "no_hinting",
     "axes.unicode_minus": True,
     "pdf.fonttype": 42,
     "axes.linewidth": 0.6,
@@ -101,6 +104,14 @@ class Paper:
             Affine2D().translate(LEFT_PT, TOP_PT).scale(1.0 / 72.0, -1.0 / 72.0).translate(0.0, SHEET_HEIGHT_PT / 72.0)
             + self.canvas.dpi_scale_trans
         )
+        self._laid = 0
+
+    def _lay(self, artist: Artist) -> None:
+        """Lay a mark over those that were laid before it."""
+        self._laid += 1
+        artist.set_zorder(1.0 + self._laid)
+        artist.set_transform(self._points)
+        self.canvas.add_artist(artist, clip=False)
 
     def text(
         self,
@@ -118,7 +129,7 @@ class Paper:
         artist = Text(
             x,
             y,
-            shown,
+            in_reading_order(shown),
             size=size,
             color=color,
             family=list(families(shown)),
@@ -126,9 +137,11 @@ class Paper:
             ha=align,
             va="baseline",
             parse_math=False,
-            transform=self._points,
         )
-        self.canvas.add_artist(artist, clip=False)
+        if hasattr(artist, "set_fontfeatures"):
+            # A ligature is one glyph for two letters: names are shown, and found in the PDF, letter by letter.
+            artist.set_fontfeatures(("-liga", "-clig", "-kern"))
+        self._lay(artist)
 
     def lines(
         self,
@@ -161,9 +174,8 @@ class Paper:
             linestyle=dash,
             solid_capstyle="butt",
             dash_capstyle="butt",
-            transform=self._points,
         )
-        self.canvas.add_artist(line, clip=False)
+        self._lay(line)
 
     def marker(self, x: float, y: float, shape: Any, size: float, color: str, fill: str | None = None) -> None:
         """Draw one of matplotlib's marker shapes centred on a point."""
@@ -176,9 +188,8 @@ class Paper:
             markerfacecolor=fill or color,
             markeredgewidth=0.7,
             linestyle="none",
-            transform=self._points,
         )
-        self.canvas.add_artist(line, clip=False)
+        self._lay(line)
 
     def box(
         self,
@@ -201,14 +212,13 @@ class Paper:
             edgecolor=edge,
             linewidth=line,
             linestyle=dash,
-            transform=self._points,
         )
-        self.canvas.add_artist(patch, clip=False)
+        self._lay(patch)
 
     def shape(self, corners: Sequence[tuple[float, float]], fill: str, edge: str = "none", line: float = 0.8) -> None:
         """Draw a closed polygon."""
-        patch = Polygon(corners, closed=True, facecolor=fill, edgecolor=edge, linewidth=line, transform=self._points)
-        self.canvas.add_artist(patch, clip=False)
+        patch = Polygon(corners, closed=True, facecolor=fill, edgecolor=edge, linewidth=line)
+        self._lay(patch)
 
     def axes(self, x: float, y: float, width: float, height: float) -> Axes:
         """Return axes whose plotting area has its top left corner at (x, y)."""

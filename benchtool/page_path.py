@@ -11,9 +11,9 @@ from dataclasses import dataclass
 from typing import Final, Literal
 
 from benchtool.model import DeviceResult, PadInLine, SignalPath
-from benchtool.page_numbers import decibels, quantity
+from benchtool.page_numbers import decibels, quantity, stated
 from benchtool.page_paper import BLUE, FAINT, INK, LIGHT, VERMILLION, WIDTH_PT, Block, Paper
-from benchtool.page_text import Lines, fit, literal, width_pt
+from benchtool.page_text import Lines, fit, width_pt
 
 __all__ = ["path_strip"]
 
@@ -40,8 +40,8 @@ class _Slot:
 
 def _sides(path: SignalPath) -> list[_Slot]:
     """Return everything in line from port 1 to port 2."""
-    behind_in = [p for p in _leading(path.input_pads)]
-    behind_out = [p for p in _leading(path.output_pads)]
+    behind_in = _leading(path.input_pads)
+    behind_out = _leading(path.output_pads)
     level = path.source_dbm
     slots = [_Slot("source", "source", None, level)]
     for pad in behind_in:
@@ -108,17 +108,15 @@ def _level_lines(level_dbm: float | None, width: float) -> Lines:
 
 
 def _caption(device: DeviceResult) -> str:
-    """Return one sentence on the strip: the sweep, what was taken out, the limits of port 2."""
-    sweep, path = device.reference, device.reference.path
-    taken = f"taken out of the data: {decibels(sweep.input_correction_db)} input side, "
-    taken += f"{decibels(sweep.output_correction_db)} output side"
+    """Return one sentence on the strip: where the levels hold, and the limits of port 2."""
+    path = device.reference.path
     limits = [
         f"{word} {quantity(level, 'dBm')}"
         for word, level in (("compresses at", path.port2_compression_dbm), ("is damaged at", path.port2_damage_dbm))
         if level is not None
     ]
     port2 = f"port 2 {' and '.join(limits)}" if limits else "limits of port 2 not given"
-    return f"Levels at {quantity(path.at_hz, 'Hz')}  ·  {taken}  ·  {port2}"
+    return f"Levels at {stated(path.at_hz, 'Hz')}  ·  {port2}"
 
 
 def path_strip(device: DeviceResult) -> Block:
@@ -139,7 +137,10 @@ def path_strip(device: DeviceResult) -> Block:
             key.append(f"{letter} = {slot.name}")
             name = Lines((letter,), 7.0)
         names.append(name)
-    levels = [_level_lines(slot.level_dbm, (right - left) * 0.96) for slot, left, right in zip(slots, edges, edges[1:], strict=False)]
+    levels = [
+        _level_lines(slot.level_dbm, (right - left) * 0.96)
+        for slot, left, right in zip(slots, edges, edges[1:], strict=False)
+    ]
     drive = _level_lines(path.drive_dbm, unit * 1.0)
     tall_names = max(name.height_pt(1.15) for name in names)
     tall_levels = max(lines.height_pt(1.1) for lines in [*levels, drive])
@@ -149,9 +150,9 @@ def path_strip(device: DeviceResult) -> Block:
     height = under + tall_levels + 3.0 + caption.height_pt()
 
     def draw(paper: Paper, top: float) -> None:
-        paper.heading(top, "Signal path", aside=literal(f"of the reference sweep, {device.reference_sweep}"))
+        paper.heading(top, "Signal path", aside="of the reference sweep")
         line_y = top + middle
-        paper.stroke([edges[0] + 4, edges[-1] - 4], [line_y, line_y], INK, 1.0)
+        paper.stroke([edges[1] / 2, (edges[-2] + edges[-1]) / 2], [line_y, line_y], INK, 1.0)
         for index, slot in enumerate(slots):
             left, right = edges[index], edges[index + 1]
             _draw_slot(paper, device, slot, names[index], (left, right), line_y)
@@ -181,8 +182,12 @@ def _draw_slot(
     if slot.pad is None:
         text = {"source": "port 1", "receiver": "port 2"}.get(slot.role, device.kind)
         if slot.role == "device":
-            corners = [(centre - width / 2, upper - 2), (centre + width / 2 - 7, upper - 2), (centre + width / 2, line_y)]
-            corners += [(centre + width / 2 - 7, upper + _BOX_PT + 2), (centre - width / 2, upper + _BOX_PT + 2)]
+            corners = [
+                (centre - width / 2, upper),
+                (centre + width / 2 - 7, upper),
+                (centre + width / 2, line_y),
+            ]
+            corners += [(centre + width / 2 - 7, upper + _BOX_PT), (centre - width / 2, upper + _BOX_PT)]
             paper.shape(corners, "white", INK, 1.4)
         else:
             paper.box(centre - width / 2, upper, width, _BOX_PT, fill="white", edge=INK)
@@ -192,7 +197,14 @@ def _draw_slot(
         start, end, low = centre - width / 2 - 2, centre + width / 2 + 2, upper + _BOX_PT
         paper.stroke([start, start, end, end], [line_y, low, low, line_y], INK, 1.0)
         text = ""
-        paper.text(centre, line_y + 0.8, _first_that_fits(_loss_options(slot.pad), 6.5, width - 2), 6.5, align="center", color=LIGHT)
+        paper.text(
+            centre,
+            line_y + 0.8,
+            _first_that_fits(_loss_options(slot.pad), 6.5, width - 2),
+            6.5,
+            align="center",
+            color=LIGHT,
+        )
     else:
         fill, edge, weight = (FAINT, LIGHT, 0.7) if slot.pad.calibrated else ("white", BLUE, 1.6)
         paper.box(centre - width / 2, upper, width, _BOX_PT, fill=fill, edge=edge, line=weight)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from matplotlib.axes import Axes
@@ -13,7 +13,7 @@ from matplotlib.ticker import MaxNLocator
 
 from benchtool.model import DeviceResult, FloatArray
 
-__all__ = ["View", "decibels_of", "frame", "ticks", "view_of", "widened"]
+__all__ = ["View", "decibels_of", "frame", "near_band", "ticks", "view_of", "widened"]
 
 _FLOOR_DB = 200.0
 
@@ -28,10 +28,6 @@ class View:
     unit: str
     whole: bool
     """Whether that is the whole of the reference sweep."""
-
-    def scaled(self, frequency_hz: float | FloatArray) -> float | FloatArray:
-        """Return frequencies in the view's unit."""
-        return frequency_hz / self.factor
 
     def inside(self, frequency_hz: FloatArray) -> slice:
         """Return the samples that the view shows, with one more at each end so that lines run to the frame."""
@@ -76,6 +72,16 @@ def view_of(device: DeviceResult) -> View:
     return View(low, high, factor, unit, whole)
 
 
+def near_band(device: DeviceResult, view: View) -> View:
+    """Return the part of a view within three bandwidths of the peak, where match and delay are worth reading."""
+    bandwidth, peak = _known(device, "bandwidth"), _known(device, "peak_frequency")
+    if not bandwidth or not peak:
+        return view
+    reach = 3.0 * bandwidth
+    low, high = max(view.low_hz, peak - reach), min(view.high_hz, peak + reach)
+    return replace(view, low_hz=low, high_hz=high, whole=False) if high > low else view
+
+
 def widened(values: Iterable[float], margin: float = 0.08, least: float = 1.0) -> tuple[float, float]:
     """Return limits around the finite values, with a margin, never closer together than `least`."""
     finite = [v for v in values if math.isfinite(v)]
@@ -101,8 +107,9 @@ def ticks(axis: Axis, limits: Sequence[float], most: int) -> None:
     axis.set_ticks(values, labels=[t if t.strip("−0.") else t.replace("−", "") for t in labels])
 
 
-def frame(axes: Axes, x: tuple[float, float], y: tuple[float, float], columns: int, rows: int) -> None:
-    """Set the limits, ticks and frame of a diagram."""
+def frame(axes: Axes, x: tuple[float, float], y: tuple[float, float], columns: int, height_pt: float) -> None:
+    """Set the limits, ticks and frame of a diagram; the higher it is, the more ticks it gets up its side."""
+    rows = min(max(int(height_pt / 20.0), 3), 9)
     axes.set_xlim(*x)
     axes.set_ylim(*y)
     ticks(axes.xaxis, x, columns)

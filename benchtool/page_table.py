@@ -13,16 +13,18 @@ from typing import Final
 from benchtool.model import DeviceResult, Figure, TargetResult, Verdict
 from benchtool.page_numbers import figure_label, interval_text, limits_text, value_text
 from benchtool.page_paper import FAINT, GREEN, HEADING_PT, INK, LIGHT, RULE, WIDTH_PT, ZONE, Block, Paper
-from benchtool.page_text import Lines, fit
+from benchtool.page_text import Lines, fit, width_pt
 from benchtool.page_verdict import VERDICT_COLOUR, VERDICT_MARK
 
 __all__ = ["other_figures", "target_table"]
 
-_VALUE_PT: Final = 150.0
-_TARGET_PT: Final = 274.0
-_STRIP_PT: Final = 376.0
-_STRIP_WIDE_PT: Final = 76.0
-_VERDICT_PT: Final = 459.0
+_VALUE_PT: Final = 132.0
+_TARGET_PT: Final = 268.0
+_STRIP_PT: Final = 360.0
+_STRIP_WIDE_PT: Final = 74.0
+_VERDICT_PT: Final = 442.0
+_CALM_TARGETS: Final = 7
+"""Up to this many rows have air between them."""
 _ORDER: Final[dict[Verdict, int]] = {"missed": 0, "undecided": 1, "met": 2, "none": 3}
 
 
@@ -32,27 +34,29 @@ class _Row:
     figure: Figure | None
     name: Lines
     value: Lines
+    interval: str
     limits: Lines
     advice: Lines | None
+    air: float
 
     @property
     def height(self) -> float:
-        text = max(self.name.height_pt(1.12), self.value.height_pt(1.12), self.limits.height_pt(1.12), 8.2) + 2.2
-        return text + (self.advice.height_pt(1.15) if self.advice else 0.0)
+        text = max(self.name.height_pt(1.12), self.value.height_pt(1.12), self.limits.height_pt(1.12), 8.2) + self.air
+        return text + (self.advice.height_pt(1.15) + 1.6 if self.advice else 0.0)
 
 
 def _row(device: DeviceResult, target: TargetResult, advise: bool) -> _Row:
     figure = device.figures.get(target.figure)
-    interval = interval_text(figure)
-    value = value_text(figure) + (f"  ({interval})" if interval else "")
     advice = fit(f"→ {target.advice}", (6.5, 6.0), WIDTH_PT - 12.0, most=1) if advise and target.advice else None
     return _Row(
         target,
         figure,
         fit(figure_label(target.figure), (7.5, 7.0, 6.5, 6.0), _VALUE_PT - 6.0),
-        fit(value, (7.5, 7.0, 6.5, 6.0), _TARGET_PT - _VALUE_PT - 6.0, bold=True),
+        fit(value_text(figure), (7.5, 7.0, 6.5, 6.0), _TARGET_PT - _VALUE_PT - 6.0, bold=True),
+        interval_text(figure),
         fit(limits_text(target), (7.5, 7.0, 6.5, 6.0), _STRIP_PT - _TARGET_PT - 6.0),
         advice,
+        4.2 if len(device.targets) <= _CALM_TARGETS else 2.4,
     )
 
 
@@ -90,7 +94,7 @@ def _strip(paper: Paper, row: _Row, y: float) -> None:
         if limit is not None:
             paper.stroke([at(limit)] * 2, [y - 4.2, y + 4.2], GREEN, 1.2)
     if figure is None or figure.value is None or not math.isfinite(figure.value):
-        paper.text((left + right) / 2, y + 2.2, "?", 6.5, align="center")
+        paper.text(left + 6.0, y + 2.4, "?", 6.5, bold=True, align="center")
         return
     if figure.low is not None and figure.high is not None:
         ends = [at(figure.low), at(figure.high)]
@@ -113,7 +117,8 @@ def target_table(device: DeviceResult, room: float, advise: bool) -> Block:
         return Block(0.0, lambda _paper, _top: None)
     head = HEADING_PT + 1.0
     kept = sorted(range(len(rows)), key=lambda k: (_ORDER[rows[k].target.verdict], k))
-    used, chosen = head, []
+    used = head
+    chosen: list[int] = []
     for position, k in enumerate(kept):
         note = 9.0 if position + 1 < len(kept) else 0.0
         if chosen and used + rows[k].height + note > room:
@@ -126,11 +131,16 @@ def target_table(device: DeviceResult, room: float, advise: bool) -> Block:
 
     def draw(paper: Paper, top: float) -> None:
         paper.heading(top, "Measured against target")
-        interval = f"value  ({100 * confidence:.0f} % interval)" if confidence else "value"
-        for x, word in ((_VALUE_PT, interval), (_TARGET_PT, "target"), (_STRIP_PT, "zone and value"), (_VERDICT_PT, "verdict")):
+        interval = f"value, {100 * confidence:.0f} % interval" if confidence else "value"
+        for x, word in (
+            (_VALUE_PT, interval),
+            (_TARGET_PT, "target"),
+            (_STRIP_PT, "zone and value"),
+            (_VERDICT_PT, "verdict"),
+        ):
             paper.text(x, top + 9.0, word, 6.5, color=LIGHT)
         if any(row.target.probability is not None for row in shown):
-            paper.text(WIDTH_PT, top + 9.0, "p", 6.5, color=LIGHT, align="right")
+            paper.text(WIDTH_PT, top + 9.0, "p(met)", 6.5, color=LIGHT, align="right")
         y = top + head
         for row in shown:
             _draw_row(paper, row, y)
@@ -142,8 +152,14 @@ def target_table(device: DeviceResult, room: float, advise: bool) -> Block:
 
 
 def _draw_row(paper: Paper, row: _Row, y: float) -> None:
+    bottom = y + row.height
+    y += row.air / 2.0
     paper.lines(0, y + 0.4, row.name, leading=1.12)
     paper.lines(_VALUE_PT, y + 0.4, row.value, bold=True, leading=1.12)
+    if row.interval:
+        start = _VALUE_PT + width_pt(row.value.lines[-1], row.value.size_pt, bold=True) + 4.0
+        interval = fit(row.interval, (6.5, 6.2, 6.0), _TARGET_PT - start - 3.0)
+        paper.text(start, y + 7.9, " ".join(interval.lines), interval.size_pt, color=LIGHT)
     paper.lines(_TARGET_PT, y + 0.4, row.limits, leading=1.12)
     _strip(paper, row, y + 4.9)
     verdict = row.target.verdict
@@ -151,9 +167,10 @@ def _draw_row(paper: Paper, row: _Row, y: float) -> None:
     paper.text(_VERDICT_PT + 10.5, y + 7.6, verdict if verdict != "none" else "no target", 7.0, bold=True)
     if row.target.probability is not None:
         paper.text(WIDTH_PT, y + 7.6, _probability(row.target.probability), 6.5, color=LIGHT, align="right")
-    bottom = y + row.height - 1.2
     if row.advice:
-        paper.lines(12.0, bottom - row.advice.height_pt(1.15) - 0.6, row.advice, color=LIGHT, leading=1.15)
+        paper.lines(
+            12.0, bottom - row.advice.height_pt(1.15) - row.air / 2.0 + 0.8, row.advice, color=LIGHT, leading=1.15
+        )
     paper.stroke([0, WIDTH_PT], [bottom, bottom], RULE, 0.25)
 
 
@@ -180,16 +197,24 @@ def other_figures(device: DeviceResult, most_rows: int) -> Block:
             return
         if not device.targets:
             paper.heading(top, "Measured; no targets were set")
-        half = (WIDTH_PT - 16.0) / 2.0
         for index, (key, figure) in enumerate(shown):
-            x, y = (index // rows) * (half + 16.0), top + head + (index % rows) * step
+            # The columns of the table above go on.
+            x, value_x = ((0.0, _VALUE_PT), (_TARGET_PT + 8.0, 400.0))[index // rows]
+            y = top + head + (index % rows) * step
             interval = interval_text(figure)
-            name = fit(figure_label(key), (7.0, 6.5, 6.0), 118.0)
+            name = fit(figure_label(key), (7.0, 6.5, 6.0), value_x - x - 4.0)
             paper.text(x, y + 6.6, " ".join(name.lines), name.size_pt if len(name.lines) == 1 else 6.0, color=LIGHT)
             text = value_text(figure) + (f"  ({interval})" if interval else "")
-            value = fit(text, (7.0, 6.5, 6.0), half - 122.0)
-            paper.text(x + half, y + 6.6, " ".join(value.lines), value.size_pt, color=LIGHT if figure.value is None else INK, align="right")
+            value = fit(text, (7.0, 6.5, 6.0), 120.0)
+            color = LIGHT if figure.value is None else INK
+            paper.text(value_x, y + 6.6, " ".join(value.lines), value.size_pt, color=color)
         if left_over:
-            paper.text(0, top + head + rows * step + 6.5, f"{left_over} more in results.json", 6.5, color=LIGHT)
+            paper.text(
+                0,
+                top + head + rows * step + 6.5,
+                f"{left_over} figures without a target in results.json",
+                6.5,
+                color=LIGHT,
+            )
 
     return Block(height, draw)

@@ -11,11 +11,12 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cache
 from typing import Final
+from unicodedata import bidirectional
 
 from matplotlib.font_manager import FontProperties, findfont, fontManager, get_font, is_opentype_cff_font
 from matplotlib.ft2font import FT2Font
 
-__all__ = ["FAMILY", "MIN_SIZE_PT", "Lines", "families", "fit", "literal", "width_pt", "wrap"]
+__all__ = ["FAMILY", "MIN_SIZE_PT", "Lines", "families", "fit", "in_reading_order", "literal", "width_pt", "wrap"]
 
 FAMILY: Final = "DejaVu Sans"
 """Comes with matplotlib, so the page looks the same everywhere."""
@@ -75,6 +76,17 @@ def literal(text: str) -> str:
     if text.isascii() and text.isprintable():
         return text
     return "".join(map(_shown, text))
+
+
+def in_reading_order(text: str) -> str:
+    """Return a literal text that reads from left to right as a line, whatever the direction of a name in it.
+
+    The mark that says so, U+200E, has no width and no ink. Without it a line that begins with a right-to-left name
+    would be set from the right, and the words around the name would change places.
+    """
+    if text.isascii() or not any(bidirectional(c) in ("R", "AL") for c in text):
+        return text
+    return f"\u200e{text}"
 
 
 def families(text: str) -> tuple[str, ...]:

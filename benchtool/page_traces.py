@@ -14,8 +14,9 @@ from benchtool.page_paper import BLUE, GREEN, INK, ORANGE, PURPLE, SKY, VERMILLI
 __all__ = ["Trace", "traces"]
 
 _COLOURS: Final = (BLUE, VERMILLION, GREEN, PURPLE, ORANGE, SKY)
-_COMPRESSED: Final[Dash] = (0.0, (4.0, 1.6))
-_UNPROVEN: Final[Dash] = (0.0, (1.2, 1.0))
+_COMPRESSED: Final[tuple[Dash, ...]] = ((0.0, (4.0, 1.6)), (0.0, (7.0, 1.8)), (0.0, (2.4, 1.2)))
+_STRAIGHT: Final[tuple[Dash, ...]] = ("-", (0.0, (6.0, 1.2, 1.0, 1.2)), (0.0, (1.0, 0.9)))
+"""Dash and dot for sweeps that are not compressed, so that grey print tells them apart too."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -44,15 +45,12 @@ def traces(device: DeviceResult) -> tuple[Trace, ...]:
         device.sweeps,
         key=lambda s: (s.file != device.reference_sweep, unknown if s.drive_dbm is None else s.drive_dbm),
     )
-    looks = []
+    looks: list[Trace] = []
     for index, sweep in enumerate(ordered):
         reference = index == 0
         point = points.get(sweep.file)
-        dash: Dash = "-"
-        if point is not None and point.compressed:
-            dash = _COMPRESSED
-        elif not reference and index > len(_COLOURS):
-            dash = _UNPROVEN
+        dashes = _COMPRESSED if point is not None and point.compressed else _STRAIGHT
+        dash = "-" if reference else dashes[(index - 1) % len(dashes)]
         color = INK if reference else _COLOURS[(index - 1) % len(_COLOURS)]
         looks.append(Trace(index + 1, sweep, reference, point, color, 1.5 if reference else 0.9, dash))
     return tuple(looks)

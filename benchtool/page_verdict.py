@@ -9,7 +9,7 @@ from math import cos, pi, sin
 from typing import Final
 
 from benchtool.model import BenchResult, DeviceResult, Verdict
-from benchtool.page_numbers import quantity
+from benchtool.page_numbers import quantity, stated
 from benchtool.page_paper import GREEN, INK, LIGHT, ORANGE, RULE, VERMILLION, WIDTH_PT, Block, Paper
 from benchtool.page_text import Lines, fit
 
@@ -33,7 +33,12 @@ def _sign(paper: Paper, verdict: Verdict, x: float, y: float, radius: float) -> 
     colour = VERDICT_COLOUR[verdict]
     if verdict == "met":
         paper.shape(_ring(x, y, radius, 40), colour)
-        paper.stroke([x - 0.45 * radius, x - 0.1 * radius, x + 0.5 * radius], [y, y + 0.38 * radius, y - 0.38 * radius], "white", 3.2)
+        paper.stroke(
+            [x - 0.45 * radius, x - 0.1 * radius, x + 0.5 * radius],
+            [y, y + 0.38 * radius, y - 0.38 * radius],
+            "white",
+            3.2,
+        )
     elif verdict == "missed":
         paper.shape(_ring(x, y, radius, 8, pi / 8), colour)
         arm = 0.42 * radius
@@ -49,8 +54,10 @@ def _sign(paper: Paper, verdict: Verdict, x: float, y: float, radius: float) -> 
 
 def _what(device: DeviceResult) -> str:
     """Return kind, design frequency and reference sweep in one line."""
-    at = quantity(device.design_hz, "Hz")
-    design = f"design frequency {at}" if device.design_stated else f"no design frequency given: figures at the peak, {at}"
+    at = stated(device.design_hz, "Hz") if device.design_stated else quantity(device.design_hz, "Hz")
+    design = (
+        f"design frequency {at}" if device.design_stated else f"no design frequency given: figures at the peak, {at}"
+    )
     return f"{device.kind}  ·  {design}  ·  reference sweep {device.reference_sweep}"
 
 
@@ -69,7 +76,10 @@ def head(bench: BenchResult, device: DeviceResult) -> Block:
     sentences: list[tuple[str, Lines, bool]] = []
     for label, sentence, bold in (("Why", device.summary.reason, True), ("Next", device.summary.next_step, False)):
         if sentence:
-            sentences.append((label, fit(sentence, (9, 8.5, 8, 7.5), room - _LABEL_PT, bold=bold, most=2), bold))
+            lines = fit(sentence, (9, 8.5, 8), room - _LABEL_PT, bold=bold)
+            if len(lines.lines) > 1:
+                lines = fit(sentence, (9, 8.5, 8, 7.5), room - _LABEL_PT, bold=bold, most=2)
+            sentences.append((label, lines, bold))
     leading = 1.22
     height = name.height_pt(1.15) + what.height_pt() + session.height_pt() + 9.0
     height += sum(lines.height_pt(leading) + 3.0 for _, lines, _ in sentences)

@@ -1,5 +1,7 @@
 """A figure and its target in; met, missed or undecided out, and what a reader must know first.
 
+A target is met where the probability that the true value meets it is at least the confidence asked for, and missed
+where it is at most one less that (JCGM 106:2012); else it is undecided, and comes with advice on what would decide it.
 A figure that is only a bound decides what it can: at least 1.2 MHz meets a minimum of 1 MHz and misses a maximum of
 1.1 MHz, and leaves everything else undecided. A figure that cannot be known leaves its target undecided.
 """
@@ -7,37 +9,87 @@ A figure that is only a bound decides what it can: at least 1.2 MHz meets a mini
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
+from typing import Final
 
+import numpy as np
+
+from benchtool.doubts import ASSUMED, pad_doubt_db
 from benchtool.figures import phase_toward
-from benchtool.model import Figure, Finding, Summary, TargetResult, Verdict
+from benchtool.model import Figure, Finding, FloatArray, Summary, TargetResult, Verdict
+from benchtool.pads import PadBank
+from benchtool.propagation import rectangular_u
 from benchtool.sheet import TargetSpec
 from benchtool.units import format_si
 
-__all__ = ["format_figure", "judge", "overall", "summarise"]
+__all__ = ["format_figure", "judge", "overall", "remedy", "summarise"]
 
 
-def judge(figure: Figure, target: TargetSpec) -> TargetResult:
-    """Return how a figure stands against its target."""
-    verdict = _by_value(figure, target.min, target.max)
-    return TargetResult(figure.key, figure.id, figure.unit, target.min, target.max, verdict)
+def judge(
+    figure: Figure, target: TargetSpec, values: FloatArray | None = None, confidence: float = 0.95, remedy: str = ""
+) -> TargetResult:
+    """Return how a figure stands against its target.
 
+    Parameters
+    ----------
+    figure, target : of the same id
+    values : the values the figure may truly have, (trials,), infinite where it left the sweep; None judges by value
+    confidence : probability from which a target counts as met; at one less that much it counts as missed
+    remedy : what would narrow the figure, for the advice that an undecided target comes with
 
-def _by_value(figure: Figure, low: float | None, high: float | None) -> Verdict:
-    value = figure.value
-    if value is None:
-        return "undecided"
+    Source: JCGM 106:2012, clause 7: the conformance probability is the share of possible true values within limits.
+    """
+    low = -np.inf if target.min is None else target.min
+    high = np.inf if target.max is None else target.max
+    result = TargetResult(figure.key, figure.id, figure.unit, target.min, target.max, "undecided")
+    name = figure.key.replace("_", " ")
+    if figure.value is None:
+        return replace(result, advice=f"make {name} measurable: see the findings")
+    possible = np.array([figure.value]) if values is None else values
     if figure.id == "phase":
-        value = phase_toward(value, low, high)
-    # What the bound leaves possible: the figure lies somewhere in [at_least, at_most].
-    at_least = float("-inf") if figure.bound == "at most" else value
-    at_most = float("inf") if figure.bound == "at least" else value
-    wanted_low = float("-inf") if low is None else low
-    wanted_high = float("inf") if high is None else high
-    if at_most < wanted_low or at_least > wanted_high:
-        return "missed"
-    if wanted_low <= at_least and at_most <= wanted_high:
-        return "met"
-    return "undecided"
+        possible = possible + phase_toward(figure.value, target.min, target.max) - figure.value
+    # A bound leaves open how far the figure lies beyond it.
+    least = np.full_like(possible, -np.inf) if figure.bound == "at most" else possible
+    most = np.full_like(possible, np.inf) if figure.bound == "at least" else possible
+    surely = float(np.mean((least >= low) & (most <= high)))
+    perhaps = float(np.mean((most >= low) & (least <= high)))
+    if surely >= confidence:
+        return replace(result, verdict="met", probability=None if values is None else surely)
+    if perhaps <= 1.0 - confidence:
+        return replace(result, verdict="missed", probability=None if values is None else perhaps)
+    if figure.bound is not None:
+        advice = f"sweep wider, so that {name} is more than a bound"
+        return replace(result, advice=advice)
+    return replace(result, probability=surely, advice=remedy or None)
+
+
+_CURES: Final = {
+    "mismatch": (0.5, "fit better matched pads, or put a 6 dB pad inside the calibration on each port"),
+    "reading": (0.5, "calibrate again and sweep at once, with tightened connectors"),
+    "directivity": (0.1, "sweep the reflection once more without the added pad"),
+    "noise": (0.32, "average ten sweeps, or take a measuring bandwidth ten times narrower"),
+    "interpolation": (0.2, "sweep more points over a narrower span"),
+}
+"""What would shrink a source of doubt, and to what share of its standard uncertainty (common practice, no source)."""
+
+
+def remedy(figure: Figure, bank: PadBank) -> str:
+    """Return what would narrow a figure most, with what it would come to; empty where its budget is empty."""
+    if not figure.budget or not figure.standard_uncertainty or figure.low is None or figure.high is None:
+        return ""
+    source, share = max(figure.budget.items(), key=lambda item: item[1])
+    if source.startswith("pad "):
+        name = source.removeprefix("pad ")
+        width, is_limit = pad_doubt_db(name, bank)
+        was = rectangular_u(width) if is_limit else width
+        left = min(ASSUMED["measured pad, standard uncertainty"] / was, 1.0) if was > 0.0 else 1.0
+        action = f"measure pad {name} as a .s2p file"
+    else:
+        left, action = _CURES[source]
+    half = 0.5 * (figure.high - figure.low)
+    better = half * float(np.sqrt(1.0 - share + share * left**2))
+    shown = [format_figure(width, figure.unit, 2) for width in (half, better)]
+    return f"{action}: interval of {figure.key.replace('_', ' ')} ±{shown[0]} → ±{shown[1]}"
 
 
 def overall(verdicts: Sequence[Verdict]) -> Verdict:

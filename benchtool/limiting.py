@@ -1,0 +1,144 @@
+"""Level at a device in, drop of its gain out: the laws of soft limiting, and their inverses.
+
+Three memoryless laws for the fundamental, each written as drop of gain in dB against level in dB over the law's own
+reference level:
+
+* Rapp, |y| = g|x| / (1 + (g|x|/Vs)^2p)^(1/2p), level over Vs/g; p about 0.7 is a soft bipolar stage, 5 a hard clipper.
+  C. Rapp, "Effects of HPA-nonlinearity on a 4-DPSK/OFDM-signal ...", 2nd European Conf. on Satellite Communications,
+  1991, 179-184 (formula from memory);
+* tanh(v/2VT), the differential pair, fundamental of a sine of peak V, level over VT;
+* cubic, 1 - (x/x3)^2, level over the input third-order intercept x3; past the level of its largest output, where a
+  polynomial means nothing, the output is held.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cache
+from typing import Final, Literal, TypeAlias
+
+import numpy as np
+
+from benchtool.model import FloatArray
+
+__all__ = [
+    "HARDEST_P",
+    "LAWS",
+    "SOFTEST_P",
+    "Law",
+    "cubic_drop_db",
+    "cubic_level_db",
+    "rapp_drop_db",
+    "rapp_level_db",
+    "tanh_drop_db",
+    "tanh_level_db",
+]
+
+SOFTEST_P: Final = 0.7
+HARDEST_P: Final = 5.0
+"""Bounds of Rapp's p where the sweeps do not fix it: a soft bipolar stage and a hard clipper."""
+
+_ANGLES: Final = 64
+"""Angles in a quarter of the period; enough for tanh driven 30 dB past its 1 dB point (drop known to 1e-3 dB)."""
+_CUBIC_TOP_DB: Final = 10.0 * float(np.log10(1.0 / 3.0))
+_CUBIC_TOP_DROP_DB: Final = -20.0 * float(np.log10(2.0 / 3.0))
+_HALVINGS: Final = 60
+
+LawName: TypeAlias = Literal["rapp", "tanh", "cubic"]
+
+
+def rapp_drop_db(level_db: FloatArray, p: float) -> FloatArray:
+    """Return the drop of gain in dB by Rapp's law at levels in dB over Vs/g, any shape."""
+    scale = p * np.log(10.0) / 10.0
+    return np.asarray(np.logaddexp(0.0, scale * np.asarray(level_db)) / scale)
+
+
+def rapp_level_db(drop_db: FloatArray | float, p: float) -> FloatArray:
+    """Return the level in dB over Vs/g at which Rapp's law has dropped by `drop_db`; minus infinity for no drop."""
+    scale = p * np.log(10.0) / 10.0
+    with np.errstate(divide="ignore"):
+        return np.asarray(np.log(np.expm1(scale * np.asarray(drop_db))) / scale)
+
+
+def tanh_drop_db(level_db: FloatArray) -> FloatArray:
+    """Return the drop of the fundamental of tanh(v/2VT) in dB at peak levels in dB over VT, any shape."""
+    peak = 0.5 * 10.0 ** (np.asarray(level_db, np.float64) / 20.0)
+    cosine = np.cos((np.arange(_ANGLES) + 0.5) * np.pi / (2 * _ANGLES))
+    # Mean of cos²θ over the same angles is exactly one half, so the ratio is one for a vanishing level.
+    fundamental = 2.0 * np.mean(np.tanh(peak[..., None] * cosine) * cosine, axis=-1)
+    return np.asarray(-20.0 * np.log10(fundamental / peak))
+
+
+def tanh_level_db(drop_db: FloatArray | float) -> FloatArray:
+    """Return the peak level in dB over VT at which the fundamental of tanh(v/2VT) has dropped by `drop_db`."""
+    drop = np.asarray(drop_db, np.float64)
+    low, high = np.full(drop.shape, -80.0), 20.0 + drop
+    for _ in range(_HALVINGS):
+        middle = 0.5 * (low + high)
+        short = tanh_drop_db(middle) < drop
+        low, high = np.where(short, middle, low), np.where(short, high, middle)
+    return np.asarray(0.5 * (low + high))
+
+
+def cubic_drop_db(level_db: FloatArray) -> FloatArray:
+    """Return the drop of gain in dB by the cubic law at levels in dB over the input third-order intercept."""
+    level = np.asarray(level_db, np.float64)
+    below = np.minimum(level, _CUBIC_TOP_DB)
+    return np.asarray(-20.0 * np.log10(1.0 - 10.0 ** (below / 10.0)) + (level - below))
+
+
+def cubic_level_db(drop_db: FloatArray | float) -> FloatArray:
+    """Return the level in dB over the input third-order intercept at which the cubic law has dropped by `drop_db`."""
+    drop = np.asarray(drop_db, np.float64)
+    below = np.minimum(drop, _CUBIC_TOP_DROP_DB)
+    with np.errstate(divide="ignore"):
+        return np.asarray(10.0 * np.log10(-np.expm1(-below * np.log(10.0) / 20.0)) + (drop - below))
+
+
+@dataclass(frozen=True)
+class Law:
+    """One law of limiting, with its share of belief before any sweep was seen."""
+
+    name: LawName
+    p: float | None = None
+    share: float = 1.0
+
+    def drop_db(self, level_db: FloatArray) -> FloatArray:
+        """Return the drop of gain in dB at levels in dB over the law's own reference level."""
+        if self.name == "rapp":
+            assert self.p is not None
+            return rapp_drop_db(level_db, self.p)
+        return tanh_drop_db(level_db) if self.name == "tanh" else cubic_drop_db(level_db)
+
+    def level_db(self, drop_db: FloatArray | float) -> FloatArray:
+        """Return the level in dB over the law's own reference level at which gain has dropped by `drop_db`."""
+        if self.name == "rapp":
+            assert self.p is not None
+            return rapp_level_db(drop_db, self.p)
+        return tanh_level_db(drop_db) if self.name == "tanh" else cubic_level_db(drop_db)
+
+    def drop_past_p1db(self, excess_db: FloatArray) -> FloatArray:
+        """Return the drop of gain in dB at levels in dB over the law's 1 dB compression point."""
+        return self.drop_db(np.asarray(excess_db) + _at_one_db(self))
+
+    def excess_over_p1db(self, drop_db: FloatArray | float) -> FloatArray:
+        """Return the level in dB over the 1 dB compression point at which gain has dropped by `drop_db`."""
+        return self.level_db(drop_db) - _at_one_db(self)
+
+
+@cache
+def _at_one_db(law: Law) -> float:
+    return float(law.level_db(1.0))
+
+
+def _laws() -> tuple[Law, ...]:
+    """Return Rapp's law with p spread evenly in its logarithm, and the other two."""
+    ps = np.geomspace(SOFTEST_P, HARDEST_P, 13)
+    # End points stand for half a cell each, so that the sum is an integral over log p.
+    cells = np.where((ps == ps[0]) | (ps == ps[-1]), 0.5, 1.0)
+    rapp = [Law("rapp", float(p), float(0.8 * cell / cells.sum())) for p, cell in zip(ps, cells, strict=True)]
+    return (*rapp, Law("tanh", share=0.1), Law("cubic", share=0.1))
+
+
+LAWS: Final = _laws()
+"""The laws a device may follow where nothing is known of it; their shares sum to one."""

@@ -1,0 +1,145 @@
+"""Sources of doubt in, intervals out: Monte Carlo propagation (JCGM 101:2008) and coverage intervals.
+
+:func:`propagate` draws, evaluates and stops when the interval's ends have settled (JCGM 101, clause 7.9).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Collection
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+
+from benchtool.model import FloatArray
+
+__all__ = [
+    "BLOCK",
+    "MOST_TRIALS",
+    "Interval",
+    "coverage_interval",
+    "mismatch_limits_db",
+    "mismatch_u_db",
+    "propagate",
+    "rectangular_u",
+    "run_blocks",
+    "settled",
+]
+
+BLOCK: Final = 250
+MOST_TRIALS: Final = 4000
+_FEWEST_TRIALS: Final = 1000
+_SETTLED: Final = 0.05
+"""Ends of an interval have settled when they are known to this share of the standard uncertainty."""
+
+
+@dataclass(frozen=True)
+class Interval:
+    """A coverage interval with the standard uncertainty and the number of trials behind it."""
+
+    low: float
+    high: float
+    standard_uncertainty: float
+    trials: int
+
+
+def coverage_interval(values: FloatArray, confidence: float, *, shortest: bool = False) -> tuple[float, float]:
+    """Return the interval that holds a share `confidence` of trials, probabilistically symmetric or the shortest one.
+
+    Source: JCGM 101:2008, clauses 7.7.2 and 5.3.3 to 5.3.4.
+    """
+    ordered = np.sort(values)
+    count = ordered.size
+    held = min(max(round(confidence * count), 1), count - 1) if count > 1 else 0
+    widths = ordered[held:] - ordered[: count - held]
+    start = int(np.argmin(widths)) if shortest else (count - held) // 2
+    return float(ordered[start]), float(ordered[min(start + held, count - 1)])
+
+
+def propagate(
+    model: Callable[[np.random.Generator, int], FloatArray],
+    confidence: float,
+    *,
+    trials: int | None = None,
+    seed: int = 0,
+    shortest: bool = False,
+) -> Interval:
+    """Return the interval of a quantity from trials of its model.
+
+    Parameters
+    ----------
+    model : takes a generator and a number of trials, returns that many values of the quantity
+    confidence : coverage probability, between 0 and 1
+    trials : how many; None runs blocks until both ends are known to 5 % of the standard uncertainty
+    seed : of numpy's PCG64; the same seed gives the same interval
+    shortest : the shortest interval instead of the probabilistically symmetric one
+    """
+    rng = np.random.default_rng(seed)
+
+    def block(count: int) -> dict[str, FloatArray]:
+        return {"": model(rng, count)}
+
+    values = run_blocks(block, confidence, trials=trials, deciding=[""])[""]
+    low, high = coverage_interval(values, confidence, shortest=shortest)
+    return Interval(low, high, float(np.std(values, ddof=1)), values.size)
+
+
+def run_blocks(
+    block: Callable[[int], dict[str, FloatArray]],
+    confidence: float,
+    *,
+    trials: int | None,
+    deciding: Collection[str],
+    size: int = BLOCK,
+    most: int = MOST_TRIALS,
+) -> dict[str, FloatArray]:
+    """Return trials of several quantities made together, each (trials,), run block after block.
+
+    Parameters
+    ----------
+    block : takes a number of trials, returns that many values of each quantity
+    trials : how many in all; None stops when the intervals of the `deciding` quantities have settled, or at `most`
+    size : trials of one block, which bounds the memory
+    """
+    wanted = most if trials is None else trials
+    done: list[dict[str, FloatArray]] = []
+    count = 0
+    while count < wanted:
+        step = min(size, wanted - count)
+        done.append(block(step))
+        count += step
+        enough = trials is None and count >= _FEWEST_TRIALS and len(done) > 2
+        if enough and all(settled([b[key] for b in done], confidence) for key in deciding):
+            break
+    return {key: np.concatenate([b[key] for b in done]) for key in done[0]}
+
+
+def settled(blocks: list[FloatArray], confidence: float) -> bool:
+    """Whether the ends of the interval, as means over the blocks, are known well enough (JCGM 101, 7.9.4).
+
+    Trials that did not show the quantity (NaN) never settle it.
+    """
+    if any(np.isnan(block).any() for block in blocks):
+        return False
+    ends = np.array([coverage_interval(block, confidence) for block in blocks])
+    spread = np.std(ends, axis=0, ddof=1) / np.sqrt(len(blocks))
+    return bool(np.all(2.0 * spread <= _SETTLED * np.std(np.concatenate(blocks), ddof=1) + 1e-300))
+
+
+def rectangular_u(half_width: float) -> float:
+    """Return the standard uncertainty of a quantity known to lie within ± `half_width` (JCGM 100:2008, 4.3.7)."""
+    return half_width / float(np.sqrt(3.0))
+
+
+def mismatch_limits_db(first: float, second: float) -> tuple[float, float]:
+    """Return the limits 20 log10(1 ± |Γ1 Γ2|) in dB of the error at a joint of two reflections.
+
+    Source: EA-4/02 M:2022, example S7; the form is that of JCGM 100 for a known magnitude and an unknown phase.
+    """
+    product = abs(first * second)
+    return float(20 * np.log10(1 - product)), float(20 * np.log10(1 + product))
+
+
+def mismatch_u_db(first: float, second: float) -> float:
+    """Return the standard uncertainty 8.686 |Γ1 Γ2|/√2 in dB of the error at a joint: U-shaped, phase unknown."""
+    return float(20 / np.log(10) * abs(first * second) / np.sqrt(2.0))

@@ -1,0 +1,57 @@
+"""Time to read a sweep: this reader, scikit-rf, and a bare NumPy parse of the same text, side by side in one run.
+
+Run it as `python tests/benchmarks/bench_reading.py`. The smallest of several runs is shown, in ms, and its ratios.
+"""
+
+import sys
+import tempfile
+import timeit
+from pathlib import Path
+
+import numpy as np
+import skrf
+
+sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
+from benchtool.touchstone import read_sweep
+
+REPEATS = 7
+FORMATS = {"9 digits": "{:.8e}", "17 digits": "{!r}"}
+
+
+def write_sweep(path: Path, points: int, number: str, form: str) -> None:
+    """Write a file of `points` rows of noise, whose digits cost most to read."""
+    values = np.random.default_rng(1).normal(size=(points, 8))
+    rows = np.column_stack([np.linspace(1e6, 1e9, points), values]).tolist()
+    lines = [" ".join(number.format(value) for value in row) for row in rows]
+    path.write_text(f"# Hz S {form} R 50\n" + "\n".join(lines) + "\n", encoding="utf-8")
+
+
+def parse_bare(path: Path) -> np.ndarray:
+    """Return the numbers of a file that is known to be sound, with nothing checked."""
+    text = path.read_text(encoding="utf-8").partition("\n")[2]
+    return np.array(text.split(), dtype=float).reshape(-1, 9)
+
+
+def milliseconds(read, path: Path, points: int) -> float:
+    number = max(1, 4000 // points)
+    return min(timeit.repeat(lambda: read(path), number=number, repeat=REPEATS)) / number * 1e3
+
+
+def main() -> None:
+    readers = {"benchtool": read_sweep, "scikit-rf": lambda path: skrf.Network(str(path)), "bare NumPy": parse_bare}
+    heads = ["points", "numbers", "format", *readers, "scikit-rf / benchtool", "benchtool / bare"]
+    print("  ".join(f"{head:>10}" for head in heads))
+    with tempfile.TemporaryDirectory() as folder:
+        path = Path(folder) / "sweep.s2p"
+        for points in (401, 10001):
+            for digits, number in FORMATS.items():
+                for form in ("RI", "MA", "DB"):
+                    write_sweep(path, points, number, form)
+                    ours, other, bare = times = [milliseconds(read, path, points) for read in readers.values()]
+                    cells = [points, digits, form, *(f"{time:.3f}" for time in times)]
+                    cells += [f"{other / ours:.2f}", f"{ours / bare:.2f}"]
+                    print("  ".join(f"{cell:>{max(10, len(head))}}" for cell, head in zip(cells, heads, strict=True)))
+
+
+if __name__ == "__main__":
+    main()

@@ -1,0 +1,419 @@
+"""The page: one A4 sheet, nothing clipped or over anything else, every name literal, every number in its place."""
+
+from __future__ import annotations
+
+import importlib.util
+import re
+import subprocess
+import sys
+from collections.abc import Iterator
+from dataclasses import replace
+from functools import cache
+from itertools import combinations
+from pathlib import Path
+from types import ModuleType
+
+import matplotlib
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from matplotlib.axes import Axes
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.figure import Figure as Canvas
+from matplotlib.lines import Line2D
+from matplotlib.text import Text
+from matplotlib.transforms import Bbox
+from numpy.testing import assert_allclose
+
+from benchtool.model import DeviceResult, Figure, FloatArray, TargetResult, Verdict
+from benchtool.page import draw_page, render_page
+from benchtool.page_numbers import figure_label, interval_text, limits_text, quantity, value_text
+from benchtool.page_paper import STYLE
+from benchtool.page_text import MIN_SIZE_PT, fit, literal, width_pt, wrap
+
+
+def _load(name: str) -> ModuleType:
+    spec = importlib.util.spec_from_file_location(name, Path(__file__).with_name(f"{name}.py"))
+    assert spec is not None and spec.loader is not None
+    module = importlib.util.module_from_spec(spec)
+    sys.modules[name] = module
+    spec.loader.exec_module(module)
+    return module
+
+
+examples = _load("page_examples")
+CASES: list[str] = list(examples.CASES)
+
+
+def _device(case: str) -> DeviceResult:
+    device = examples.CASES[case]()
+    assert isinstance(device, DeviceResult)
+    return device
+
+
+def _page(device: DeviceResult) -> Canvas:
+    canvas = draw_page(examples.make_bench(device), device)
+    with matplotlib.rc_context(STYLE):
+        FigureCanvasAgg(canvas).draw()  # type: ignore[no-untyped-call]
+    return canvas
+
+
+@cache
+def _page_of(case: str) -> Canvas:
+    """Return the page of a case, for tests that only look at it."""
+    return _page(_device(case))
+
+
+def _texts(canvas: Canvas) -> Iterator[tuple[Text, Bbox]]:
+    """Yield every visible text with the box of its letters: the box of the line less its empty top and bottom."""
+    renderer = canvas.canvas.get_renderer()  # type: ignore[attr-defined]
+    for text in canvas.findobj(Text):
+        if isinstance(text, Text) and text.get_visible() and text.get_text().strip():
+            box = text.get_window_extent(renderer)
+            yield text, Bbox.from_extents(box.x0, box.y0 + 0.2 * box.height, box.x1, box.y1 - 0.2 * box.height)
+
+
+def _words(canvas: Canvas) -> list[str]:
+    return [text.get_text() for text, _ in _texts(canvas)]
+
+
+def _letters(canvas: Canvas) -> str:
+    """Return all that is written, in the order of writing, without blanks: line breaks take blanks away."""
+    return "".join("".join(text.get_text().split()).replace("\u200e", "") for text in canvas.findobj(Text))
+
+
+def _strokes(canvas: Canvas) -> list[Line2D]:
+    """Return the lines and marks outside the diagrams."""
+    return [artist for artist in canvas.artists if isinstance(artist, Line2D)]
+
+
+def _x(line: Line2D) -> FloatArray:
+    return np.asarray(line.get_xdata(), dtype=float)
+
+
+def _y(line: Line2D) -> FloatArray:
+    return np.asarray(line.get_ydata(), dtype=float)
+
+
+def _share(one: Bbox, other: Bbox) -> float:
+    """Return the area that two boxes share, in square pixels."""
+    wide = min(one.x1, other.x1) - max(one.x0, other.x0)
+    tall = min(one.y1, other.y1) - max(one.y0, other.y0)
+    return float(max(wide, 0.0) * max(tall, 0.0))
+
+
+def _curve(axes: Axes, width: float) -> Line2D:
+    return next(line for line in axes.get_lines() if line.get_linewidth() == width and len(_x(line)) > 50)
+
+
+# --- the sheet ------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("case", CASES)
+def test_no_text_is_small_clipped_or_over_another(case: str) -> None:
+    canvas = _page_of(case)
+    found = list(_texts(canvas))
+    assert len(found) > 60
+    width, height = canvas.get_size_inches() * canvas.dpi
+    for text, box in found:
+        assert float(text.get_fontsize()) >= MIN_SIZE_PT, text.get_text()
+        assert box.x0 > 30 and box.y0 > 30 and box.x1 < width - 30 and box.y1 < height - 30, text.get_text()
+    for (one, first), (other, second) in combinations(found, 2):
+        assert _share(first, second) < 1.0, (one.get_text(), other.get_text())
+
+
+@pytest.mark.parametrize("case", CASES)
+def test_no_word_or_key_stands_over_data(case: str) -> None:
+    canvas = _page_of(case)
+    assert canvas.get_axes()
+    assert not canvas.legends
+    for axes in canvas.get_axes():
+        assert axes.get_legend() is None
+        for text, box in _texts(canvas):
+            assert _share(axes.bbox, box) < 1.0, text.get_text()
+
+
+def test_overlap_is_noticed() -> None:
+    canvas = _page(_device("one_path"))
+    canvas.text(0.5, 0.5, "over the data")
+    canvas.text(0.5, 0.5, "over the words")
+    boxes = {text.get_text(): box for text, box in _texts(canvas)}
+    assert _share(boxes["over the data"], boxes["over the words"]) > 100.0
+    assert any(_share(axes.bbox, boxes["over the data"]) > 100.0 for axes in canvas.get_axes())
+
+
+@pytest.mark.parametrize("case", ["one_path", "crowded", "evil_2", "evil_4", "evil_6", "evil_7", "evil_8"])
+def test_pdf_is_one_a4_page_with_its_fonts_embedded(case: str) -> None:
+    device = _device(case)
+    pdf, png = render_page(examples.make_bench(device), device)
+    assert len(re.findall(rb"/Type /Page\b(?!s)", pdf)) == 1
+    box = re.search(rb"/MediaBox \[ ?([\d. ]+?) ?\]", pdf)
+    assert box is not None
+    assert_allclose([float(v) for v in box[1].split()], [0, 0, 210 / 25.4 * 72, 297 / 25.4 * 72], rtol=0, atol=0.01)
+    assert b"/Type3" not in pdf
+    assert pdf.count(b"/FontFile2") == pdf.count(b"/Type /FontDescriptor") > 0
+    assert png.startswith(b"\x89PNG")
+    assert [int.from_bytes(png[k : k + 4], "big") for k in (16, 20)] == [1240, 1753]
+
+
+def test_same_result_same_bytes_whatever_the_settings(monkeypatch: pytest.MonkeyPatch) -> None:
+    device = _device("three_drives")
+    bench = examples.make_bench(device)
+    monkeypatch.setenv("SOURCE_DATE_EPOCH", "1700000000")
+    first = render_page(bench, device)
+    with matplotlib.rc_context({"font.size": 25, "lines.linewidth": 9, "text.parse_math": True, "pdf.fonttype": 3}):
+        before = dict(matplotlib.rcParams)
+        assert render_page(bench, device) == first
+        assert dict(matplotlib.rcParams) == before
+    assert render_page(replace(bench, version="9.9"), device)[0] != first[0]
+    assert b"(D:20261128162000" in first[0]
+
+
+def test_page_needs_neither_pyplot_nor_scikit_rf() -> None:
+    code = "import sys, benchtool.page; print([m for m in ('matplotlib.pyplot', 'skrf') if m in sys.modules])"
+    root = Path(__file__).parents[1]
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True, cwd=root)
+    assert done.stdout.strip() == "[]"
+
+
+# --- what it says ---------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("name", [*examples.EVIL_NAMES, examples.NAME_40, examples.NAME_60])
+def test_names_are_literal(name: str) -> None:
+    canvas = _page(examples.named(name)())
+    letters = _letters(canvas)
+    shown = "".join(literal(name).split())
+    # In the heading, in the strip or its key, in the list of sweeps, in a finding: no letter lost.
+    assert letters.count(shown) >= 5
+    assert all(not text.get_parse_math() for text in canvas.findobj(Text))  # type: ignore[attr-defined]
+
+
+@pytest.mark.parametrize(
+    ("verdict", "word"), [("met", "MET"), ("missed", "MISSED"), ("undecided", "UNDECIDED"), ("none", "NO TARGET")]
+)
+def test_head_gives_verdict_reason_and_next_step(verdict: Verdict, word: str) -> None:
+    device = _device("three_drives")
+    device = replace(device, summary=replace(device.summary, verdict=verdict))
+    canvas = _page(device)
+    sizes = {text.get_text(): float(text.get_fontsize()) for text, _ in _texts(canvas)}
+    assert sizes[word] >= 13.0 and sizes["second stage"] >= 13.0
+    assert device.summary.reason in sizes and device.summary.next_step in sizes
+    upper = [box.y0 for text, box in _texts(canvas) if text.get_text() in (device.summary.reason, word)]
+    assert min(upper) > 0.86 * canvas.get_size_inches()[1] * canvas.dpi
+
+
+def test_strip_has_every_level_in_order() -> None:
+    canvas = _page_of("six_pads_a_side")
+    words = ["level unknown" if w == "dBm" else w for w in _words(canvas)]
+    levels = [w for w in words if re.fullmatch(r"−?\d+\.\d", w)]
+    # −8 dBm less 3, 4 … 8 dB; +40.12 dB; less 8.85, 7.48, 6.11, 4.74, 3.37, 2 dB (each prints to a tenth).
+    assert levels[:7] == ["−8.0", "−11.0", "−15.0", "−20.0", "−26.0", "−33.0", "−41.0"]
+    assert levels[7:14] == ["−0.9", "−9.7", "−17.2", "−23.3", "−28.1", "−31.4", "−33.4"]
+    assert "removed" in words and words.count("calibration plane") == 2
+    assert words.count("added") == 9 and words.count("in cal.") == 3
+
+
+def test_calibration_planes_stand_between_calibrated_and_added_pads() -> None:
+    canvas = _page_of("three_drives")
+    where = {
+        text.get_text(): (box.x0 + box.x1) / 2 for text, box in _texts(canvas) if float(text.get_fontsize()) >= 6.9
+    }
+    planes = sorted(
+        line.get_transform().transform((_x(line)[0], 0))[0]
+        for line in _strokes(canvas)
+        if line.get_color() == "#0072B2" and line.get_linewidth() == 1.0 and line.is_dashed()
+    )
+    assert len(planes) == 2
+    assert where["b30"] < planes[0] < where["a20"] < where["device"] < planes[1] < where["c10"]
+
+
+def test_unknown_levels_say_so() -> None:
+    words = _words(_page_of("nothing_known"))
+    assert words.count("level unknown") == 5
+    assert not [w for w in words if "nan" in w.lower() or "None" in w]
+
+
+def test_findings_are_sorted_and_counted() -> None:
+    canvas = _page_of("many_findings")
+    words = _words(canvas)
+    shown = [w for w in words if w in ("fault", "caution", "note")]
+    assert shown and shown == sorted(shown, key=["fault", "caution", "note"].index)
+    assert f"{25 - len(shown)} more in results.json" in words
+    assert "8 faults, 8 cautions, 9 notes" in words
+
+
+@pytest.mark.parametrize("case", ["twelve_targets", "crowded"])
+def test_every_target_has_its_row(case: str) -> None:
+    device = _device(case)
+    words = _words(_page(device))
+    assert len(device.targets) == 12
+    assert sum(w in ("met", "missed", "undecided") for w in words) == 12
+    assert all(limits_text(target) in words for target in device.targets)
+
+
+def test_targets_that_cannot_fit_leave_the_missed_ones() -> None:
+    device = _device("twelve_targets")
+    many = tuple(replace(device.targets[0], verdict="missed" if k == 77 else "met") for k in range(80))
+    words = _words(_page(replace(device, targets=many)))
+    rows = sum(w in ("met", "missed") for w in words)
+    assert "missed" in words and 5 < rows < 80
+    assert f"{80 - rows} more targets in results.json, none worse than these" in words
+
+
+# --- what it draws --------------------------------------------------------------------------------------------------
+
+
+def test_gain_curve_is_the_sweep() -> None:
+    device = _device("three_drives")
+    axes = _page(device).get_axes()[0]
+    sweep = device.reference.sweep
+    drawn = _curve(axes, 1.5)
+    assert_allclose(_x(drawn), sweep.frequency_hz / 1e6, rtol=1e-12, atol=0)
+    assert_allclose(_y(drawn), 20 * np.log10(np.abs(sweep.s21)), rtol=0, atol=1e-9)
+    assert len([line for line in axes.get_lines() if len(_x(line)) > 50]) == 3
+    dashed = [line for line in axes.get_lines() if len(_x(line)) > 50 and line.is_dashed()]
+    assert len(dashed) == 1
+    assert max(_y(dashed[0])) < 33.0
+
+
+def test_half_power_marks_and_zones_stand_where_the_figures_say() -> None:
+    device = _device("three_drives")
+    axes = _page(device).get_axes()[0]
+    marks = next(line for line in axes.get_lines() if line.get_marker() == "|")
+    edges = [(device.figures[key].value or 0.0) / 1e6 for key in ("lower_edge", "upper_edge")]
+    assert_allclose(_x(marks), edges, rtol=1e-12, atol=0)
+    assert_allclose(_y(marks), 40.13 - 10 * np.log10(2), rtol=0, atol=1e-9)
+    zones = sorted((p.get_x(), p.get_width(), p.get_y(), p.get_y() + p.get_height()) for p in axes.patches)  # type: ignore[attr-defined]
+    # Rejection at 16 MHz of 23 dB; bandwidth 600 to 800 kHz about 21.4 MHz; peak 21.25 to 21.55 MHz; gain from 38 dB.
+    assert_allclose([zones[0][0] + zones[0][1] / 2, zones[0][3]], [16.0, 40.13 - 23.0], rtol=0, atol=1e-9)
+    assert_allclose([zones[1][0], zones[1][1]], [21.0, 0.1], rtol=0, atol=1e-9)
+    assert_allclose([zones[2][0], zones[2][1]], [21.25, 0.3], rtol=0, atol=1e-9)
+    assert_allclose(zones[3][2], 38.0, rtol=0, atol=1e-9)
+    assert_allclose([zones[4][0], zones[4][1]], [21.7, 0.1], rtol=0, atol=1e-9)
+
+
+def test_narrow_band_is_shown_near_its_peak_and_says_so() -> None:
+    canvas = _page_of("full_filter")
+    low, high = canvas.get_axes()[0].get_xlim()
+    assert 1.0 < low < 16.0 and 26.0 < high < 60.0
+    assert "of 1 MHz to 60 MHz swept" in _words(canvas)
+    low, high = canvas.get_axes()[1].get_xlim()
+    assert_allclose([low, high], [21.4 - 3 * 0.856, 21.4 + 3 * 0.856], rtol=1e-9, atol=0)
+
+
+def test_drive_panel_has_every_drive() -> None:
+    axes = _page_of("three_drives").get_axes()[1]
+    points = next(line for line in axes.get_lines() if len(_x(line)) == 3 and line.get_marker() == "None")
+    assert_allclose(_x(points), [-58, -48, -38], rtol=0, atol=1e-9)
+    assert_allclose(_y(points), [40.12, 39.52, 32.02], rtol=0, atol=1e-9)
+    hollow = next(line for line in axes.get_lines() if line.get_markerfacecolor() == "white")
+    assert_allclose([_x(hollow)[0], _y(hollow)[0]], [-38, 32.02], rtol=0, atol=1e-9)
+
+
+def test_match_and_delay_curves() -> None:
+    delay = _page_of("three_drives").get_axes()[3]
+    # A single-tuned peak: τ = Q/(π f0) at the centre; 0.15 of the band as aperture reads atan(x)/x of it, 0.7 % less.
+    peak = max(_y(_curve(delay, 1.1))) * 1e-9
+    assert_allclose(peak, 25 / np.pi / 21.4e6 * np.arctan(0.15) / 0.15, rtol=0.002, atol=0)
+    device = _device("full_filter")
+    match = _page(device).get_axes()[2]
+    sweep = device.reference.sweep
+    for color, s in (("#1b2127", sweep.s11), ("#0072B2", sweep.s22)):
+        line = next(li for li in match.get_lines() if li.get_color() == color and len(_x(li)) > 50)
+        loss = np.interp(_x(line), sweep.frequency_hz / 1e6, -20 * np.log10(np.abs(s)))
+        assert_allclose(_y(line), loss, rtol=0, atol=1e-6)
+    assert "S22 was not measured." not in _words(_page(device))
+    assert "S22 was not measured." in _words(_page_of("one_path"))
+    assert "S11 was not measured. S22 was not measured." in _words(_page_of("nothing_known"))
+
+
+def _strip(canvas: Canvas, verdict_color: str) -> tuple[float, list[float], list[float]]:
+    """Return, in points across, the mark of the first row with that verdict, its limits and its whisker's ends."""
+    mark = next(li for li in _strokes(canvas) if li.get_marker() == "D" and li.get_markerfacecolor() == verdict_color)
+    height = _y(mark)[0]
+    near = [li for li in _strokes(canvas) if abs(np.mean(_y(li)) - height) < 0.01 and li.get_marker() == "None"]
+    limits = sorted(_x(li)[0] for li in near if li.get_color() == "#009E73")
+    whisker = next((sorted(_x(li)) for li in near if li.get_linewidth() == 1.0), [])
+    return _x(mark)[0], limits, whisker
+
+
+def test_strip_shows_zone_value_and_whisker() -> None:
+    value, limits, whisker = _strip(_page_of("three_drives_intervals"), "#D55E00")
+    # Bandwidth 856 kHz, 832.48 to 879.52, against 600 to 800 kHz: the strip is a linear scale through the limits.
+    per_khz = (limits[1] - limits[0]) / 200.0
+    assert_allclose(value - limits[1], 56.0 * per_khz, rtol=1e-6, atol=0)
+    assert_allclose(np.subtract(whisker, limits[1]), [32.48 * per_khz, 79.52 * per_khz], rtol=1e-6, atol=0)
+    assert _strip(_page_of("three_drives"), "#D55E00")[2] == []
+
+
+# --- words and numbers ----------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("figure", "value", "interval"),
+    [
+        (Figure("gain", 40.1234, "dB"), "40.12 dB", ""),
+        (Figure("gain", 40.1234, "dB", 39.7, 40.5, 0.95, None, 0.21), "40.12 dB", "39.70 to 40.50"),
+        (Figure("gain", -0.001, "dB"), "0.00 dB", ""),
+        (Figure("bandwidth", 999.9999e3, "Hz"), "1.000 MHz", ""),
+        (Figure("bandwidth", 1.2e6, "Hz", bound="at least"), "at least 1.200 MHz", ""),
+        (Figure("peak_frequency", 21.4e6, "Hz", standard_uncertainty=31e3), "21.400 MHz", ""),
+        (Figure("group_delay", 1.48743e-6, "s"), "1.487 µs", ""),
+        (Figure("loaded_q", 24.97, ""), "25.0", ""),
+        (Figure("phase", -92.34, "deg"), "−92.3°", ""),
+        (Figure("rejection", 23.44, "dB"), "23.4 dB", ""),
+        (Figure("gain", None, "dB"), "not known", ""),
+        (Figure("gain", float("nan"), "dB"), "not known", ""),
+        (None, "not known", ""),
+    ],
+)
+def test_figures_in_words(figure: Figure | None, value: str, interval: str) -> None:
+    assert value_text(figure) == value
+    assert interval_text(figure) == interval
+
+
+@pytest.mark.parametrize(
+    ("low", "high", "unit", "text"),
+    [
+        (38.0, None, "dB", "≥ 38 dB"),
+        (None, 3.0, "dB", "≤ 3 dB"),
+        (600e3, 1.1e6, "Hz", "600 kHz to 1.1 MHz"),
+        (21.25e6, 21.55e6, "Hz", "21.25 to 21.55 MHz"),
+        (85.0, 95.0, "deg", "85 to 95°"),
+        (None, None, "dB", "—"),
+    ],
+)
+def test_limits_in_words(low: float | None, high: float | None, unit: str, text: str) -> None:
+    assert limits_text(TargetResult("x", "x", unit, low, high, "met")) == text
+
+
+def test_labels_in_words() -> None:
+    assert figure_label("input_p1db") == "input P1dB"
+    assert figure_label("phase_linearity over 21.1 MHz to 21.7 MHz") == "phase linearity over 21.1 to 21.7 MHz"
+    assert quantity(-0.04, "dBm") == "0.0 dBm"
+
+
+@settings(deadline=None, max_examples=60)
+@given(st.text(max_size=60), st.floats(8.0, 300.0), st.sampled_from([6.0, 7.0, 9.0]))
+def test_any_text_is_printable_and_wraps_without_losing_a_letter(text: str, width: float, size: float) -> None:
+    shown = literal(text)
+    assert shown.isprintable()
+    lines = wrap(shown, size, width)
+    assert "".join("".join(lines).split()) == "".join(shown.split())
+    assert all(width_pt(line, size) <= width or len(line) == 1 for line in lines)
+    set_lines = fit(text, (9.0, 7.0, 6.0), width, most=2)
+    assert len(set_lines.lines) <= 2 or set_lines.size_pt == 6.0
+
+
+def test_measured_widths_are_those_drawn() -> None:
+    canvas = Canvas(dpi=150)
+    renderer = FigureCanvasAgg(canvas).get_renderer()  # type: ignore[no-untyped-call]
+    with matplotlib.rc_context(STYLE):
+        for bold in (False, True):
+            words = "Sweep stage2_low again: 21.4 MHz, −58.0 dBm ≥ 38 dB Ω µ"
+            text = canvas.text(0, 0, words, size=7, weight="bold" if bold else "normal", family=["DejaVu Sans"])
+            drawn = text.get_window_extent(renderer).width * 72.0 / 150.0
+            assert_allclose(width_pt(words, 7.0, bold), drawn, rtol=0.035, atol=0)
+            assert width_pt(words, 7.0, bold) >= drawn
