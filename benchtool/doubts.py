@@ -24,7 +24,7 @@ import numpy as np
 from benchtool.figures import FigurePlan
 from benchtool.match import BURIED_UNCERTAINTY
 from benchtool.model import ComplexArray, FloatArray, Sweep
-from benchtool.noise import NOISE_FREE
+from benchtool.noise import NOISE_FREE, line_delay, rotation
 from benchtool.pads import PadBank, change_of_line
 from benchtool.sheet import Analyzer, BenchSheet, SweepEntry
 from benchtool.units import from_db
@@ -52,6 +52,7 @@ ASSUMED: Final[Mapping[str, float]] = {
     "reading, standard uncertainty": 0.05,
     "source level tolerance": 0.5,
     "return loss of a device port that was not measured": 10.0,
+    "how much of that changes across the resonance": 6.0,
 }
 """What is taken where the sheet says nothing, in dB."""
 
@@ -74,6 +75,8 @@ class Joint:
     magnitude: float
     device: str | None
     """'S11' or 'S22' where the product is still to be multiplied by the device's own measured reflection."""
+    resonant: float = 0.0
+    """Part of the product, where the device's reflection is not known, that follows the resonance in frequency."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -86,12 +89,16 @@ class SweepDoubts:
     input_joints: tuple[Joint, ...]
     output_joints: tuple[Joint, ...]
     reading_db: float
-    input_vector: float
-    """Length of the error vector on S11: directivity and the added pads' own reflection, both as read at the device."""
-    output_vector: float
-    input_port: float
-    """Reflection of the port seen from the device, through the added pads."""
-    output_port: float
+    input_vectors: tuple[float, ...]
+    """Lengths of the error vectors on S11 as read at the device: directivity, and what each added pad reflects."""
+    output_vectors: tuple[float, ...]
+    input_ports: tuple[float, ...]
+    """Reflections that the device sees on its input side: the nearest added pad, and the port through the pads."""
+    output_ports: tuple[float, ...]
+
+    def reflection_doubt(self, parameter: str) -> float:
+        """Return the doubt about the magnitude of S11 or S22: its error vectors together."""
+        return float(np.hypot.reduce(self.input_vectors if parameter == "S11" else self.output_vectors))
 
     @property
     def sources(self) -> tuple[str, ...]:
@@ -146,14 +153,17 @@ def _magnitude(stated_db: float | None, key: str) -> float:
     return from_db(-(ASSUMED[key] if stated_db is None else stated_db))
 
 
-def _error_vector(weights: Mapping[str, int], directivity: float, bank: PadBank, at_hz: float) -> float:
-    """Return the length of the error vector on a reflection, as read at the device: twice the added loss magnifies it.
+def _error_vectors(weights: Mapping[str, int], directivity: float, bank: PadBank, at_hz: float) -> tuple[float, ...]:
+    """Return the lengths of the error vectors on a reflection, as read at the device: twice the loss magnifies them.
 
     What the added pads themselves reflect adds to the directivity; a measured pad's reflection is taken out exactly.
     """
-    loss = sum(sign * bank.loss_db(pad, at_hz) for pad, sign in weights.items())
-    squares = [_pad_reflection(pad, bank) ** 2 for pad in weights if not bank.measured(pad)]
-    return float(np.sqrt(directivity**2 + sum(squares))) * from_db(2.0 * loss)
+    grown = from_db(2.0 * sum(sign * bank.loss_db(pad, at_hz) for pad, sign in weights.items()))
+    return tuple(grown * length for length in (directivity, *_own_reflections(weights, bank)))
+
+
+def _own_reflections(weights: Mapping[str, int], bank: PadBank) -> list[float]:
+    return [_pad_reflection(pad, bank) for pad in weights if not bank.measured(pad)]
 
 
 def _pad_reflection(name: str, bank: PadBank) -> float:
@@ -165,13 +175,16 @@ def _joints_of(
 ) -> tuple[Joint, ...]:
     """Return the joints on one side; `device` names the reflection of the device there, None where it is not known."""
     unknown = 1.0 if device else from_db(-ASSUMED["return loss of a device port that was not measured"])
+    resonant = 0.0 if device else unknown * from_db(-ASSUMED["how much of that changes across the resonance"])
     joints = [Joint(f"port and {pad}", port * _pad_reflection(pad, bank), None) for pad in weights]
     if weights:
         nearest = list(weights)[-1]
         if not bank.measured(nearest):
-            joints.append(Joint(f"{nearest} and device", _pad_reflection(nearest, bank) * unknown, device))
+            own = _pad_reflection(nearest, bank)
+            joints.append(Joint(f"{nearest} and device", own * unknown, device, own * resonant))
     loss = sum(sign * bank.loss_db(pad, at_hz) for pad, sign in weights.items())
-    joints.append(Joint("port and device", port * unknown * from_db(-2.0 * max(loss, 0.0)), device))
+    through = port * from_db(-2.0 * max(loss, 0.0))
+    joints.append(Joint("port and device", through * unknown, device, through * resonant))
     return tuple(joint for joint in joints if joint.magnitude > 0.0)
 
 
@@ -186,15 +199,14 @@ def sweep_doubts(sweep: Sweep, entry: SweepEntry, sheet: BenchSheet, bank: PadBa
         (entry.output_pads, cal.output_pads, "S22"),
     ):
         own = change_of_line(now, before).weights()
-        vector = _error_vector(own, directivity, bank, at_hz)
+        vector = _error_vectors(own, directivity, bank, at_hz)
         # A reflection buried under pads is no better than one that was not measured.
-        known = device in sweep.measured and vector <= BURIED_UNCERTAINTY
+        known = device in sweep.measured and float(np.hypot.reduce(vector)) <= BURIED_UNCERTAINTY
         weights.append(own)
         vectors.append(vector)
         joints.append(_joints_of(own, device if known else None, port, bank, at_hz))
         loss = sum(sign * bank.loss_db(pad, at_hz) for pad, sign in own.items())
-        nearest = [_pad_reflection(pad, bank) for pad in own if not bank.measured(pad)][-1:]
-        ports.append(float(np.hypot(port * from_db(-2.0 * max(loss, 0.0)), sum(nearest))))
+        ports.append((port * from_db(-2.0 * max(loss, 0.0)), *_own_reflections(own, bank)[-1:]))
     reading = analyzer.reading_db
     return SweepDoubts(
         entry.name,
@@ -264,14 +276,14 @@ class Draws:
         s[:, 1, 0] *= through
         if "S12" in sweep.measured:
             s[:, 0, 1] *= through
-        for i, weights, vector in ((0, into, doubts.input_vector), (1, out, doubts.output_vector)):
+        for i, weights, vectors in ((0, into, doubts.input_vectors), (1, out, doubts.output_vectors)):
             if f"S{i + 1}{i + 1}" not in sweep.measured:
                 continue
             s[:, i, i] *= weights**2
             if self.active("reading") and doubts.reading_db > 0.0:
                 s[:, i, i] *= self._reading(doubts.reading_db)
             if self.active("directivity"):
-                s[:, i, i] += vector * self.phasor()
+                s[:, i, i] += sum(vector * self.phasor() for vector in vectors)
             if self.active("mismatch"):
                 s[:, i, i] += self._seen_through(sweep, doubts, i)
         for source, sigma in self._sample_noise(sweep, plan):
@@ -296,20 +308,25 @@ class Draws:
 
     def _joints(self, sweep: Sweep, doubts: SweepDoubts) -> ComplexArray:
         factor: ComplexArray = np.ones((self.trials, 1), np.complex128)
+        shape = sweep.s21 * rotation(sweep.frequency_hz, line_delay(sweep.frequency_hz, sweep.s21))
+        shape = shape / np.max(np.abs(shape))
         for joint in (*doubts.input_joints, *doubts.output_joints):
             seen: ComplexArray | float = 1.0
             if joint.device is not None:
                 seen = sweep.s11 if joint.device == "S11" else sweep.s22
-            factor = factor * (1.0 + joint.magnitude * self.phasor() * seen)
+            product = joint.magnitude * self.phasor() * seen
+            if joint.resonant > 0.0:
+                product = product + joint.resonant * self.phasor() * shape
+            factor = factor * (1.0 + product)
         return factor
 
     def _seen_through(self, sweep: Sweep, doubts: SweepDoubts, port: int) -> ComplexArray:
         """Return what the ports' own match adds to a reflection: round the near joint, and through to the far port."""
-        near, far = (doubts.input_port, doubts.output_port) if port == 0 else (doubts.output_port, doubts.input_port)
-        own = sweep.s[port, port]
-        added: ComplexArray = near * self.phasor() * own**2
+        sides = (doubts.input_ports, doubts.output_ports)
+        near, far = sides if port == 0 else sides[::-1]
+        added: ComplexArray = sum(size * self.phasor() for size in near) * sweep.s[port, port] ** 2
         if "S12" in sweep.measured and "S21" in sweep.measured:
-            added = added + far * self.phasor() * (sweep.s12 * sweep.s21)
+            added = added + sum(size * self.phasor() for size in far) * (sweep.s12 * sweep.s21)
         return added
 
     def _sample_noise(self, sweep: Sweep, plan: FigurePlan) -> Iterator[tuple[str, dict[str, FloatArray]]]:

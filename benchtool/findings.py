@@ -282,8 +282,8 @@ def buried_parameters(sweep: MeasuredSweep, doubts: SweepDoubts) -> dict[str, fl
     """
     result = sweep.result
     sides = (
-        ("S11", result.input_correction_db, doubts.input_vector),
-        ("S22", result.output_correction_db, doubts.output_vector),
+        ("S11", result.input_correction_db, doubts.reflection_doubt("S11")),
+        ("S22", result.output_correction_db, doubts.reflection_doubt("S22")),
     )
     return {
         name: vector

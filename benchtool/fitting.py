@@ -20,6 +20,7 @@ from typing import Final
 
 import numpy as np
 from numpy.polynomial import legendre
+from scipy.ndimage import uniform_filter1d
 
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import NOISE_FREE, NoiseModel, line_delay, rotation, trend_delay
@@ -34,8 +35,8 @@ _ACCEPTED_EXCESS: Final = 1.6
 _ROUNDING: Final = 1e-11
 _GOOD_ENOUGH: Final = 2e-5
 """Misfit, as a share of the largest sample, below which no fit is split: 0.0002 dB."""
-_INVERSE_NEEDS_SNR: Final = 6.0
-"""1/S is fitted only where every sample stands this far above the noise (a ratio of amplitudes)."""
+_INVERSE_NEEDS_SNR: Final = 5.0
+"""1/S is fitted only where the trace stands this far above the noise throughout (a ratio of amplitudes)."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -219,8 +220,9 @@ def _fit(frequency_hz: FloatArray, s: ComplexArray, low_hz: float, high_hz: floa
     noisy = noise.additive > 0.0 or noise.proportional > 0.0
     sigma = noise.sigma(magnitude) if noisy else np.ones_like(magnitude)
     smallest = _INVERSE_NEEDS_SNR * float(np.max(sigma)) if noisy else 1e-9 * float(np.max(magnitude))
+    level = float(np.min(uniform_filter1d(magnitude, 5, mode="nearest"))) if noisy else float(np.min(magnitude))
     full = np.asarray(legendre.legvander((f - centre) / scale, max(min(MAX_DEGREE, f.size - 3), 0)), np.float64)
-    form = _best_form(f, trace, full, sigma, float(np.min(magnitude)) > smallest, context.line_delay_s)
+    form = _best_form(f, trace, full, sigma, level > smallest, context.line_delay_s)
     turn = rotation(f, form.delay_s)
     target = 1.0 / (trace * turn) if form.inverse else trace * turn
     degree = min(form.degree + 1, full.shape[1] - 1)
@@ -228,8 +230,8 @@ def _fit(frequency_hz: FloatArray, s: ComplexArray, low_hz: float, high_hz: floa
     # The weights come from the smooth curve, not from the noisy samples, or they would pull it: once is enough.
     smooth = magnitude
     for _ in range(2):
-        level = noise.sigma(smooth) if noisy else np.ones_like(smooth)
-        solve = _solver(basis, smooth**2 / level if form.inverse else 1.0 / level)
+        spread = noise.sigma(smooth) if noisy else np.ones_like(smooth)
+        solve = _solver(basis, smooth**2 / spread if form.inverse else 1.0 / spread)
         fitted = target @ solve.T @ basis.T
         fitted = 1.0 / fitted if form.inverse else fitted
         smooth = np.maximum(np.abs(fitted), 1e-6 * np.max(magnitude))

@@ -29,7 +29,7 @@ _RIGHT_PT: Final = 64.0
 _BELOW_PT: Final = 11.0
 _LABEL_STEP_PT: Final = 7.8
 _DEPTH_DB: Final = 90.0
-_MOST_LABELS: Final = 16
+_MOST_LABELS: Final = 12
 
 
 @dataclass(frozen=True)

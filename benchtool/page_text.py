@@ -10,10 +10,11 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cache
+from pathlib import Path
 from typing import Final
 from unicodedata import bidirectional
 
-from matplotlib.font_manager import FontProperties, findfont, fontManager, get_font, is_opentype_cff_font
+from matplotlib.font_manager import FontProperties, findfont, fontManager, get_font
 from matplotlib.ft2font import FT2Font
 
 __all__ = ["FAMILY", "MIN_SIZE_PT", "Lines", "families", "fit", "in_reading_order", "literal", "width_pt", "wrap"]
@@ -39,6 +40,12 @@ def _letters(bold: bool) -> frozenset[int]:
     return frozenset(_font(FAMILY, bold).get_charmap())
 
 
+def _is_truetype(path: str) -> bool:
+    """Return whether a font file holds one TrueType font, the only kind that goes into a PDF whole (as Type 42)."""
+    with Path(path).open("rb") as file:
+        return file.read(4) in (b"\x00\x01\x00\x00", b"true")
+
+
 @cache
 def _fallback(character: str) -> str | None:
     """Return the family of an installed outline font that has `character` and can be embedded, or None."""
@@ -49,7 +56,7 @@ def _fallback(character: str) -> str | None:
         seen.add(entry.name)
         try:
             font = get_font(entry.fname)
-            if font.scalable and not is_opentype_cff_font(entry.fname) and ord(character) in font.get_charmap():
+            if font.scalable and _is_truetype(entry.fname) and ord(character) in font.get_charmap():
                 return str(entry.name)
         except (OSError, RuntimeError):
             continue

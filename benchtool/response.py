@@ -29,6 +29,7 @@ __all__ = ["LevelWidth", "Passband", "PassbandFigures", "crossing", "plan_level_
 
 _MARGIN: Final = 0.25
 """The curve reaches this share of the bandwidth beyond each edge, so that an edge that moves stays on it."""
+_SKIRT_DB: Final = 7.0
 _FEW_POINTS: Final = 7
 _SMOOTHING: Final = 0.1
 
@@ -166,9 +167,9 @@ def crossing(grid: FloatArray, level: FloatArray, target: FloatArray, index: np.
     return np.where(found, at, np.nan)
 
 
-def _coarse_edges(frequency_hz: FloatArray, level: FloatArray, peak: int) -> tuple[int, int]:
-    """Return the outermost samples still within half power of the peak, going outward until the first below."""
-    below = level < level[peak] - HALF_POWER_DB
+def _coarse_edges(level: FloatArray, peak: int, below_db: float = HALF_POWER_DB) -> tuple[int, int]:
+    """Return the outermost samples still within `below_db` of the peak, going outward until the first below."""
+    below = level < level[peak] - below_db
     left = np.flatnonzero(below[:peak])
     right = np.flatnonzero(below[peak + 1 :])
     return (int(left[-1]) + 1 if left.size else 0), (peak + int(right[0]) if right.size else level.size - 1)
@@ -212,7 +213,7 @@ def plan_passband(
     turned = s21 * rotation(frequency_hz, trend_delay(frequency_hz, s21))
     level = to_db(s21)
     peak = start + int(np.argmax(level[start:stop]))
-    left, right = _coarse_edges(frequency_hz, level, peak)
+    left, right = _coarse_edges(level, peak)
     # The largest of many noisy samples is too high and its neighbours fall "below half power" too early: smooth
     # over a tenth of the band, which no resonance notices, and look again.
     for _ in range(3):
@@ -221,7 +222,7 @@ def plan_passband(
             break
         level = to_db(uniform_filter1d(turned, width | 1, mode="nearest"))
         peak = start + int(np.argmax(level[start:stop]))
-        left, right = _coarse_edges(frequency_hz, level, peak)
+        left, right = _coarse_edges(level, peak)
     lower_inside, upper_inside = left > 0, right < frequency_hz.size - 1
     inside = right - left + 1
     low_hz, high_hz = float(frequency_hz[left]), float(frequency_hz[right])
@@ -230,8 +231,12 @@ def plan_passband(
     )
     if lower_inside and upper_inside:
         step = min(step, float(frequency_hz[right + 1] - frequency_hz[left - 1]))
-    margin = max(_MARGIN * (high_hz - low_hz), 1.5 * step)
-    curve = fit_curve(frequency_hz, s21, low_hz - margin, high_hz + margin, noise, points=_FEW_POINTS)
+    # A steep skirt is left out: deep down there the noise would rule the fit.
+    skirts = _coarse_edges(level, peak, _SKIRT_DB)
+    margin = _MARGIN * (high_hz - low_hz)
+    low_end = min(max(low_hz - margin, float(frequency_hz[skirts[0]])), low_hz - 1.5 * step)
+    high_end = max(min(high_hz + margin, float(frequency_hz[skirts[1]])), high_hz + 1.5 * step)
+    curve = fit_curve(frequency_hz, s21, low_end, high_end, noise, points=_FEW_POINTS)
     grid = curve.grid_hz
     first, last = (window_hz[0], window_hz[1]) if window_hz else (grid[0], grid[-1])
     a = int(np.searchsorted(grid, first, side="left"))

@@ -1,9 +1,8 @@
 """The reference sweep of a device and its doubts in; intervals, budgets and trial values of every figure out.
 
 Each trial is a copy of the sweep as it might have been read (:mod:`benchtool.doubts`), measured by the very code that
-measured the sweep itself. A trial's departure from the value is an error the value may have; the true value lies as
-far on the other side, so the interval is that of value − (trial − value). That also takes out the small bias that
-noise gives to a maximum.
+measured the sweep itself. Noise makes a maximum read high, and trials that add noise to a noisy sweep read it higher
+still, by as much again: that bias, the departure of the trials' median from the value, is taken out of both.
 
 A trial in which a figure is lost (an edge leaves the sweep) is never dropped: it counts as beyond every limit on the
 side where the figure went. Where more than a hundredth are lost the figure becomes a bound.
@@ -30,6 +29,8 @@ _BUDGET_TRIALS: Final = 200
 _MAY_BE_LOST: Final = 0.01
 _BLOCK_BYTES: Final = 48e6
 """Memory that one block of perturbed copies may take."""
+_PLAUSIBLE_BIAS: Final = 0.6
+"""Largest bias that noise is taken to give a figure, as a share of its standard uncertainty."""
 _LOST_SIDE: Final[Mapping[str, float]] = {"lower_edge": -1.0, "upper_edge": 1.0, "bandwidth": 1.0, "loaded_q": -1.0}
 """Where a figure goes when a half-power edge leaves the sweep: up (+1) or down (-1)."""
 
@@ -106,12 +107,20 @@ def figure_trials(
 
 
 def _possible_values(figure: Figure, trial: FloatArray) -> FloatArray:
+    """Return the values a figure may truly have, from trials of it; lost trials lie beyond every limit."""
     assert figure.value is not None
     departure = trial - figure.value
     if figure.unit == "deg" and figure.id == "phase":
         departure = 180.0 - np.mod(180.0 - departure, 360.0)
+    lost = np.isnan(departure)
+    if lost.all():
+        return np.full(departure.shape, _LOST_SIDE.get(figure.id, 1.0) * np.inf)
+    bias, spread = float(np.median(departure[~lost])), float(np.std(departure[~lost]))
+    if abs(bias) > _PLAUSIBLE_BIAS * spread:
+        # The trials sit elsewhere than the value, as when two humps vie for the peak: both stay possible.
+        bias = 0.0
     side = _LOST_SIDE.get(figure.id, 1.0)
-    return np.where(np.isnan(departure), side * np.inf, figure.value - departure)
+    return np.where(lost, side * np.inf, figure.value + departure - 2.0 * bias)
 
 
 def _with_interval(figure: Figure, values: FloatArray, confidence: float, budget: Mapping[str, float]) -> Figure:

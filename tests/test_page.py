@@ -16,8 +16,6 @@ from types import ModuleType
 import matplotlib
 import numpy as np
 import pytest
-from hypothesis import given, settings
-from hypothesis import strategies as st
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure as Canvas
@@ -26,11 +24,11 @@ from matplotlib.text import Text
 from matplotlib.transforms import Bbox
 from numpy.testing import assert_allclose
 
-from benchtool.model import DeviceResult, Figure, FloatArray, TargetResult, Verdict
+from benchtool.model import DeviceResult, FloatArray, Verdict
 from benchtool.page import draw_page, render_page
-from benchtool.page_numbers import figure_label, interval_text, limits_text, quantity, value_text
+from benchtool.page_numbers import limits_text
 from benchtool.page_paper import STYLE
-from benchtool.page_text import MIN_SIZE_PT, fit, literal, width_pt, wrap
+from benchtool.page_text import MIN_SIZE_PT, literal
 
 
 def _load(name: str) -> ModuleType:
@@ -187,7 +185,7 @@ def test_names_are_literal(name: str) -> None:
     shown = "".join(literal(name).split())
     # In the heading, in the strip or its key, in the list of sweeps, in a finding: no letter lost.
     assert letters.count(shown) >= 5
-    assert all(not text.get_parse_math() for text in canvas.findobj(Text))  # type: ignore[attr-defined]
+    assert all(not text.get_parse_math() for text in canvas.findobj(Text))
 
 
 @pytest.mark.parametrize(
@@ -346,74 +344,3 @@ def test_strip_shows_zone_value_and_whisker() -> None:
     assert_allclose(value - limits[1], 56.0 * per_khz, rtol=1e-6, atol=0)
     assert_allclose(np.subtract(whisker, limits[1]), [32.48 * per_khz, 79.52 * per_khz], rtol=1e-6, atol=0)
     assert _strip(_page_of("three_drives"), "#D55E00")[2] == []
-
-
-# --- words and numbers ----------------------------------------------------------------------------------------------
-
-
-@pytest.mark.parametrize(
-    ("figure", "value", "interval"),
-    [
-        (Figure("gain", 40.1234, "dB"), "40.12 dB", ""),
-        (Figure("gain", 40.1234, "dB", 39.7, 40.5, 0.95, None, 0.21), "40.12 dB", "39.70 to 40.50"),
-        (Figure("gain", -0.001, "dB"), "0.00 dB", ""),
-        (Figure("bandwidth", 999.9999e3, "Hz"), "1.000 MHz", ""),
-        (Figure("bandwidth", 1.2e6, "Hz", bound="at least"), "at least 1.200 MHz", ""),
-        (Figure("peak_frequency", 21.4e6, "Hz", standard_uncertainty=31e3), "21.400 MHz", ""),
-        (Figure("group_delay", 1.48743e-6, "s"), "1.487 µs", ""),
-        (Figure("loaded_q", 24.97, ""), "25.0", ""),
-        (Figure("phase", -92.34, "deg"), "−92.3°", ""),
-        (Figure("rejection", 23.44, "dB"), "23.4 dB", ""),
-        (Figure("gain", None, "dB"), "not known", ""),
-        (Figure("gain", float("nan"), "dB"), "not known", ""),
-        (None, "not known", ""),
-    ],
-)
-def test_figures_in_words(figure: Figure | None, value: str, interval: str) -> None:
-    assert value_text(figure) == value
-    assert interval_text(figure) == interval
-
-
-@pytest.mark.parametrize(
-    ("low", "high", "unit", "text"),
-    [
-        (38.0, None, "dB", "≥ 38 dB"),
-        (None, 3.0, "dB", "≤ 3 dB"),
-        (600e3, 1.1e6, "Hz", "600 kHz to 1.1 MHz"),
-        (21.25e6, 21.55e6, "Hz", "21.25 to 21.55 MHz"),
-        (85.0, 95.0, "deg", "85 to 95°"),
-        (None, None, "dB", "—"),
-    ],
-)
-def test_limits_in_words(low: float | None, high: float | None, unit: str, text: str) -> None:
-    assert limits_text(TargetResult("x", "x", unit, low, high, "met")) == text
-
-
-def test_labels_in_words() -> None:
-    assert figure_label("input_p1db") == "input P1dB"
-    assert figure_label("phase_linearity over 21.1 MHz to 21.7 MHz") == "phase linearity over 21.1 to 21.7 MHz"
-    assert quantity(-0.04, "dBm") == "0.0 dBm"
-
-
-@settings(deadline=None, max_examples=60)
-@given(st.text(max_size=60), st.floats(8.0, 300.0), st.sampled_from([6.0, 7.0, 9.0]))
-def test_any_text_is_printable_and_wraps_without_losing_a_letter(text: str, width: float, size: float) -> None:
-    shown = literal(text)
-    assert shown.isprintable()
-    lines = wrap(shown, size, width)
-    assert "".join("".join(lines).split()) == "".join(shown.split())
-    assert all(width_pt(line, size) <= width or len(line) == 1 for line in lines)
-    set_lines = fit(text, (9.0, 7.0, 6.0), width, most=2)
-    assert len(set_lines.lines) <= 2 or set_lines.size_pt == 6.0
-
-
-def test_measured_widths_are_those_drawn() -> None:
-    canvas = Canvas(dpi=150)
-    renderer = FigureCanvasAgg(canvas).get_renderer()  # type: ignore[no-untyped-call]
-    with matplotlib.rc_context(STYLE):
-        for bold in (False, True):
-            words = "Sweep stage2_low again: 21.4 MHz, −58.0 dBm ≥ 38 dB Ω µ"
-            text = canvas.text(0, 0, words, size=7, weight="bold" if bold else "normal", family=["DejaVu Sans"])
-            drawn = text.get_window_extent(renderer).width * 72.0 / 150.0
-            assert_allclose(width_pt(words, 7.0, bold), drawn, rtol=0.035, atol=0)
-            assert width_pt(words, 7.0, bold) >= drawn

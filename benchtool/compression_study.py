@@ -1,0 +1,114 @@
+"""The sweeps of one device in; all that they say about compression out: cause, onset, reference, map, findings.
+
+The one call that other modules need: it makes the drive table, weighs the causes, and estimates the onset from what
+the cause leaves standing.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from benchtool.causes import CauseVerdict, cause_finding, find_cause, for_onset
+from benchtool.compression import MeasuredSweep
+from benchtool.drive_table import DriveTable, drive_table
+from benchtool.model import Figure, Finding, FloatArray
+from benchtool.onset import Estimate, Onset, estimate_onset
+from benchtool.pads import PadBank
+from benchtool.sheet import BenchSheet, SweepEntry
+
+__all__ = ["CompressionMap", "CompressionStudy", "onset_figures", "study_compression"]
+
+_MAP_DRIVES = 3
+
+
+@dataclass(frozen=True, eq=False)
+class CompressionMap:
+    """Compression over frequency and drive: `compression_db` (k, j), below the lowest drive's gain."""
+
+    frequency_hz: FloatArray
+    drive_dbm: FloatArray
+    files: tuple[str, ...]
+    compression_db: FloatArray
+
+
+@dataclass(frozen=True, eq=False)
+class CompressionStudy:
+    """What the sweeps of one device say about compression."""
+
+    table: DriveTable
+    verdict: CauseVerdict | None
+    onset: Onset
+    map: CompressionMap | None
+    findings: tuple[Finding, ...]
+
+
+def study_compression(
+    sweeps: Sequence[MeasuredSweep],
+    entries: Sequence[SweepEntry],
+    sheet: BenchSheet,
+    bank: PadBank,
+    at_hz: float,
+    reference: str,
+) -> CompressionStudy | None:
+    """Return the study of a device's sweeps; None where they have no span, or not `at_hz`, in common.
+
+    Parameters
+    ----------
+    sweeps, entries : sweeps at the device's ports and their lines in the sheet, in the same order
+    at_hz : the design frequency
+    reference : file of the sweep that figures are taken from
+    """
+    table = drive_table(sweeps, entries, sheet, bank, at_hz)
+    if table is None:
+        return None
+    confidence = sheet.decision.confidence
+    verdict = find_cause(table, confidence)
+    spoiled, doubted = (frozenset[str](), {}) if verdict is None else for_onset(table, verdict)
+    onset = estimate_onset(table, reference, confidence, doubted_pads=doubted, spoiled=spoiled)
+    finding = None if verdict is None else cause_finding(table, verdict)
+    unknown = _onset_unknown(onset, table)
+    found = tuple(each for each in (finding, unknown) if each is not None)
+    return CompressionStudy(table, verdict, onset, _map(table), found)
+
+
+def _onset_unknown(onset: Onset, table: DriveTable) -> Finding | None:
+    if onset.input_p1db_dbm.value is not None or not table.levels_known:
+        return None
+    return Finding(
+        "p1db-unknown",
+        "note",
+        "nothing can be said of the 1 dB compression point: fewer than two usable drives",
+        "sweep at a second drive, 10 dB apart",
+    )
+
+
+def _map(table: DriveTable) -> CompressionMap | None:
+    drive = np.mean(table.drive_dbm, axis=1)
+    if len(np.unique(np.round(drive, 1))) < _MAP_DRIVES:
+        return None
+    return CompressionMap(table.frequency_hz, drive, table.files, table.gain_db[0] - table.gain_db)
+
+
+def onset_figures(onset: Onset) -> dict[str, Figure]:
+    """Return `input_p1db` and `output_p1db` as figures in dBm."""
+
+    def figure(name: str, found: Estimate) -> Figure:
+        known = found.value is not None
+        return Figure(
+            name,
+            found.value,
+            "dBm",
+            found.low,
+            found.high,
+            onset.confidence if known else None,
+            found.bound,
+            parameters={"drives": float(onset.drives)},
+        )
+
+    return {
+        "input_p1db": figure("input_p1db", onset.input_p1db_dbm),
+        "output_p1db": figure("output_p1db", onset.output_p1db_dbm),
+    }

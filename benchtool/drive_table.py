@@ -1,0 +1,302 @@
+"""Sweeps of one device in; gain over drive and frequency on common nodes out, with every doubt that bears on it.
+
+Nodes are spread evenly along the trace as an eye follows it: half by frequency, half by rise and fall of the gain, so
+that a narrow peak and long skirts are both seen. At a node each sweep's level in dB is a local parabola through seven
+samples; noise of a sample of magnitude m and complex rms σ is 8.686 σ/(√2 m) dB.
+
+Signs: a pad that truly loses δ more than stated makes the corrected gain read δ low where it was added since
+calibration, δ high where it was taken away, and lowers the true drive by δ where it stands on the input side.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+from typing import Final
+
+import numpy as np
+
+from benchtool.compression import MeasuredSweep
+from benchtool.doubts import Joint, pad_doubt_db, source_doubt_db, sweep_doubts
+from benchtool.model import FloatArray, Sweep, readonly
+from benchtool.noise import NOISE_FREE, NoiseModel
+from benchtool.pads import PadBank
+from benchtool.propagation import mismatch_u_db, rectangular_u
+from benchtool.sheet import BenchSheet, SweepEntry
+from benchtool.units import to_db
+
+__all__ = ["DriveTable", "PadDoubt", "drive_table"]
+
+_PER_SWEEP: Final = (
+    "gain_db",
+    "noise_db",
+    "buried",
+    "drive_dbm",
+    "output_loss_db",
+    "design_gain_db",
+    "design_noise_db",
+    "design_phase_deg",
+    "reading_u_db",
+)
+_NODES: Final = 15
+_HALF_FIT: Final = 3
+"""Samples either side of a node that its parabola is drawn through."""
+_DEEPEST_DB: Final = 40.0
+"""Nodes reach no further below the peak than this."""
+_NODE_DOUBT_DB: Final = 0.02
+"""Standard uncertainty of one node for what neither noise nor the flat doubts cover: ripple, interpolation."""
+_RIPPLE_SHARE: Final = 0.3
+"""Share of the mismatch doubt that may vary over the sweep instead of shifting it as a whole."""
+_BURIED_SNR_DB: Final = 10.0
+"""Below this signal to noise ratio of a sample the mean of decibels reads high, and a node counts as buried."""
+
+
+@dataclass(frozen=True, eq=False)
+class PadDoubt:
+    """Doubt about one pad and where it bears: (k,) per sweep, in dB for each dB the pad truly loses beyond its value.
+
+    `reads` is what the corrected gain gains: -1 added since calibration, +1 taken away since, 0 unchanged.
+    `drives` is what the true drive gains: -1 on the input side and in line now, else 0.
+    """
+
+    name: str
+    loss_db: float
+    half_width_db: float
+    u_db: float
+    reads: FloatArray
+    drives: FloatArray
+
+
+@dataclass(frozen=True, eq=False)
+class DriveTable:
+    """Gain of one device over k sweeps, lowest drive first, and j frequency nodes.
+
+    Levels are nominal: source less stated pads. `reading_u_db` (k,) is the flat doubt of each sweep alone (reading and
+    mismatch); `noise_db` (k, j) that of each node alone; `pads` the doubts that sweeps share.
+    """
+
+    files: tuple[str, ...]
+    lines: tuple[tuple[float | None, tuple[str, ...], tuple[str, ...]], ...]
+    """Source level, input pads and output pads of each sweep: two sweeps with equal lines are one sweep taken again."""
+    at_hz: float
+    frequency_hz: FloatArray
+    gain_db: FloatArray
+    noise_db: FloatArray
+    buried: FloatArray
+    """Share of each sweep's span, (k,), where the device's signal stands less than 10 dB above the sweep's noise."""
+    drive_dbm: FloatArray
+    output_loss_db: FloatArray
+    """Loss of the output pads in line, calibrated or not, (k,)."""
+    design_gain_db: FloatArray
+    design_noise_db: FloatArray
+    design_phase_deg: FloatArray
+    reading_u_db: FloatArray
+    pads: tuple[PadDoubt, ...]
+    source_half_width_db: float
+    port2_compression_dbm: float | None
+    levels_known: bool
+    """Whether the source level is known; if not, drives are relative to a source of 0 dBm."""
+
+    @property
+    def sweeps(self) -> int:
+        """How many sweeps."""
+        return len(self.files)
+
+    @property
+    def slope_db(self) -> FloatArray:
+        """Gain change in dB at each node for a device tuned up by 1 % of the span of the nodes, (j,)."""
+        f = self.frequency_hz
+        if f.size < 3:
+            return np.zeros(f.size)
+        mean = np.mean(self.gain_db, axis=0)
+        return np.asarray(-np.gradient(mean, f) * 0.01 * (f[-1] - f[0]))
+
+    def taken_again(self) -> tuple[tuple[int, int], ...]:
+        """Return pairs of sweeps that were taken with the same source level and the same pads."""
+        k = range(self.sweeps)
+        return tuple((a, b) for a in k for b in k if a < b and self.lines[a] == self.lines[b])
+
+    def only(self, keep: Sequence[int]) -> DriveTable:
+        """Return the table of some of the sweeps."""
+        rows = list(keep)
+        pads = tuple(replace(pad, reads=pad.reads[rows], drives=pad.drives[rows]) for pad in self.pads)
+        arrays = {name: getattr(self, name)[rows] for name in _PER_SWEEP}
+        return replace(
+            self,
+            files=tuple(self.files[row] for row in rows),
+            lines=tuple(self.lines[row] for row in rows),
+            pads=pads,
+            **arrays,
+        )
+
+
+def drive_table(
+    sweeps: Sequence[MeasuredSweep], entries: Sequence[SweepEntry], sheet: BenchSheet, bank: PadBank, at_hz: float
+) -> DriveTable | None:
+    """Return the table of a device's sweeps; None where the sweeps have no span, or `at_hz` not, in common.
+
+    Parameters
+    ----------
+    sweeps, entries : the sweeps at the device's ports and their lines in the sheet, in the same order
+    at_hz : the design frequency, where pads and drives are evaluated
+    """
+    low = max(float(sweep.result.sweep.frequency_hz[0]) for sweep in sweeps)
+    high = min(float(sweep.result.sweep.frequency_hz[-1]) for sweep in sweeps)
+    if not low <= at_hz <= high or not high > low:
+        return None
+    levels = [entry.source_at(at_hz) for entry in entries]
+    known = all(level is not None for level in levels)
+    if not known and len({str(entry.source_dbm) for entry in entries}) > 1:
+        return None
+    into = [sum(bank.loss_db(pad, at_hz) for pad in entry.input_pads) for entry in entries]
+    drive = np.array([(level or 0.0) - loss for level, loss in zip(levels, into, strict=True)])
+    order = [int(k) for k in np.argsort(drive, kind="stable")]
+    sweeps, entries, drive = [sweeps[k] for k in order], [entries[k] for k in order], drive[order]
+    nodes = _nodes(sweeps, low, high)
+    read = [_levels(sweep, nodes) for sweep in sweeps]
+    design = [_levels(sweep, np.array([at_hz])) for sweep in sweeps]
+    tilt = np.array([_source_tilt(entry, nodes, at_hz) for entry in entries])
+    flat, ripple, pads = _doubts(sweeps, entries, sheet, bank, at_hz)
+    noise = np.array([u for _, u in read])
+    arrays = {
+        "frequency_hz": nodes,
+        "gain_db": np.array([gain for gain, _ in read]),
+        "noise_db": np.sqrt(noise**2 + _NODE_DOUBT_DB**2 + (_RIPPLE_SHARE * ripple[:, None]) ** 2),
+        "buried": _buried(sweeps, nodes),
+        "drive_dbm": drive[:, None] + tilt,
+        "output_loss_db": np.array([sum(bank.loss_db(pad, at_hz) for pad in e.output_pads) for e in entries]),
+        "design_gain_db": np.array([gain[0] for gain, _ in design]),
+        "design_noise_db": np.array([u[0] for _, u in design]),
+        "design_phase_deg": np.array([_phase_deg(sweep, at_hz) for sweep in sweeps]),
+        "reading_u_db": flat,
+    }
+    return DriveTable(
+        files=tuple(sweep.file for sweep in sweeps),
+        lines=tuple((entry.source_at(at_hz), entry.input_pads, entry.output_pads) for entry in entries),
+        at_hz=at_hz,
+        pads=pads,
+        source_half_width_db=source_doubt_db(sheet.analyzer),
+        port2_compression_dbm=sheet.analyzer.port2_compression_dbm,
+        levels_known=known,
+        **{name: readonly(array, np.float64) for name, array in arrays.items()},
+    )
+
+
+def _source_tilt(entry: SweepEntry, nodes: FloatArray, at_hz: float) -> FloatArray:
+    """Return how far the source level at each node stands from that at the design frequency, dB."""
+    base = entry.source_at(at_hz)
+    if base is None:
+        return np.zeros(nodes.size)
+    return np.array([(entry.source_at(float(f)) or base) - base for f in nodes])
+
+
+def _noise_model(sweep: MeasuredSweep) -> NoiseModel:
+    return sweep.plan.noise.get("S21") or NOISE_FREE
+
+
+def _smooth_level(sweep: Sweep) -> FloatArray:
+    """Return the level of S21 in dB, (n,), as a running mean of power over five samples."""
+    power = np.pad(np.abs(sweep.s21) ** 2, 2, mode="edge")
+    return np.asarray(10.0 * np.log10(np.maximum(np.convolve(power, np.full(5, 0.2), "valid"), 1e-300)))
+
+
+def _nodes(sweeps: Sequence[MeasuredSweep], low: float, high: float) -> FloatArray:
+    """Return the frequencies, (j,), at which the sweeps are compared: those with signal in most of the sweeps."""
+    quietest = min(sweeps, key=lambda sweep: _noise_model(sweep).additive)
+    f = quietest.result.sweep.frequency_hz
+    level = _smooth_level(quietest.result.sweep)
+    floor = max(
+        (20.0 * np.log10(max(_noise_model(sweep).additive, 1e-15)) + _BURIED_SNR_DB for sweep in sweeps), default=-300.0
+    )
+    inside = (f >= low) & (f <= high)
+    use = inside & (level > np.max(level[inside]) - _DEEPEST_DB) & (level > floor)
+    if np.count_nonzero(use) < 3:
+        use = inside
+    f, level = f[use], level[use]
+    if f.size < 3:
+        return np.unique(np.clip(f, low, high))
+    rise = np.concatenate([[0.0], np.cumsum(np.abs(np.diff(level)))])
+    along = (f - f[0]) / (f[-1] - f[0]) + (rise / rise[-1] if rise[-1] > 1.0 else 0.0)
+    return np.unique(np.interp(np.linspace(0.0, along[-1], min(_NODES, f.size)), along, f))
+
+
+def _levels(sweep: MeasuredSweep, at_hz: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Return the level of S21 in dB and its noise at each frequency, (j,) each, from a parabola round it."""
+    f, s21 = sweep.result.sweep.frequency_hz, sweep.result.sweep.s21
+    smooth = 10.0 ** (_smooth_level(sweep.result.sweep) / 20.0)
+    sigma = 20.0 / np.log(10.0) * _noise_model(sweep).sigma(smooth) / (np.sqrt(2.0) * smooth)
+    level = to_db(s21)
+    gain, noise = np.empty(at_hz.size), np.empty(at_hz.size)
+    for j, hz in enumerate(at_hz):
+        middle = int(np.argmin(np.abs(f - hz)))
+        first = max(0, min(middle - _HALF_FIT, f.size - 2 * _HALF_FIT - 1))
+        near = slice(first, first + 2 * _HALF_FIT + 1)
+        x = f[near] - hz
+        powers = np.vander(x / max(float(np.max(np.abs(x))), 1e-300), min(3, x.size), increasing=True)
+        weights = np.linalg.pinv(powers)[0]
+        gain[j] = weights @ np.maximum(level[near], -300.0)
+        noise[j] = np.sqrt(np.sum((weights * sigma[near]) ** 2))
+    return gain, noise
+
+
+def _phase_deg(sweep: MeasuredSweep, at_hz: float) -> float:
+    trace = sweep.result.sweep
+    middle = int(np.argmin(np.abs(trace.frequency_hz - at_hz)))
+    first = max(0, min(middle - _HALF_FIT, trace.frequency_hz.size - 2 * _HALF_FIT - 1))
+    near = slice(first, first + 2 * _HALF_FIT + 1)
+    turned = np.degrees(np.unwrap(np.angle(trace.s21[near])))
+    return float(np.polyval(np.polyfit(trace.frequency_hz[near] - at_hz, turned, min(2, turned.size - 1)), 0.0))
+
+
+def _buried(sweeps: Sequence[MeasuredSweep], nodes: FloatArray) -> FloatArray:
+    """Return the share of each sweep, (k,), in which what the quietest sweep shows lies under that sweep's noise."""
+    quietest = min(sweeps, key=lambda sweep: _noise_model(sweep).additive)
+    level = _smooth_level(quietest.result.sweep)
+    level = level[level > np.max(level) - _DEEPEST_DB]
+    floors = [20.0 * np.log10(max(_noise_model(sweep).additive, 1e-15)) for sweep in sweeps]
+    return np.array([np.mean(level < floor + _BURIED_SNR_DB) for floor in floors])
+
+
+def _doubts(
+    sweeps: Sequence[MeasuredSweep], entries: Sequence[SweepEntry], sheet: BenchSheet, bank: PadBank, at_hz: float
+) -> tuple[FloatArray, FloatArray, tuple[PadDoubt, ...]]:
+    """Return each sweep's flat doubt, its mismatch doubt, (k,) each, and the doubts about pads."""
+    flat, mismatch = [], []
+    reads: dict[str, list[float]] = {}
+    for k, (sweep, entry) in enumerate(zip(sweeps, entries, strict=True)):
+        doubts = sweep_doubts(sweep.result.sweep, entry, sheet, bank, at_hz)
+        joints = [_joint_u(joint, sweep, at_hz) for joint in (*doubts.input_joints, *doubts.output_joints)]
+        mismatch.append(float(np.sqrt(np.sum(np.square(joints)))))
+        flat.append(float(np.hypot(doubts.reading_db, mismatch[-1])))
+        for weights in (doubts.input_weights, doubts.output_weights):
+            _count(reads, weights, k, len(sweeps))
+    names = dict.fromkeys([*reads, *(pad for entry in entries for pad in entry.input_pads)])
+    pads = []
+    for name in names:
+        width, is_limit = pad_doubt_db(name, bank)
+        drives = np.array([-float(name in entry.input_pads) for entry in entries])
+        pads.append(
+            PadDoubt(
+                name,
+                bank.loss_db(name, at_hz),
+                width if is_limit else 2.0 * width,
+                rectangular_u(width) if is_limit else width,
+                readonly(reads.get(name, [0.0] * len(sweeps)), np.float64),
+                readonly(drives, np.float64),
+            )
+        )
+    return np.array(flat), np.array(mismatch), tuple(pads)
+
+
+def _count(reads: dict[str, list[float]], weights: Mapping[str, int], sweep: int, sweeps: int) -> None:
+    for name, sign in weights.items():
+        reads.setdefault(name, [0.0] * sweeps)[sweep] -= float(sign)
+
+
+def _joint_u(joint: Joint, sweep: MeasuredSweep, at_hz: float) -> float:
+    seen = 1.0
+    if joint.device is not None:
+        trace = sweep.result.sweep
+        reflection = trace.s11 if joint.device == "S11" else trace.s22
+        seen = min(1.0, float(np.interp(at_hz, trace.frequency_hz, np.abs(reflection))))
+    return mismatch_u_db(joint.magnitude, seen)
