@@ -33,6 +33,9 @@ Bench = Annotated[
 ]
 Out = Annotated[Path | None, typer.Option("--out", help="Folder for the results; made if it is not there.")]
 Strict = Annotated[bool, typer.Option("--strict", help="Refuse sweep files that do not follow the standard.")]
+Trials = Annotated[
+    int | None, typer.Option("--trials", min=20, help="Trials behind each interval; left out, until they settle.")
+]
 Design = Annotated[str | None, typer.Option("--design", help="Design frequency of a quick look, such as '21.4 MHz'.")]
 Source = Annotated[float | None, typer.Option("--source", help="Level leaving port 1 in dBm, for a quick look.")]
 InputPad = Annotated[
@@ -105,17 +108,17 @@ def _load(
     return sheet, sheet.folder / "report"
 
 
-def _analyse(sheet: BenchSheet, strict: bool) -> BenchResult:
+def _analyse(sheet: BenchSheet, strict: bool, trials: int | None) -> BenchResult:
     from benchtool.analysis import analyse
 
     if len(sheet.devices) < 2 or not sys.stderr.isatty():
-        return analyse(sheet, strict=strict)
+        return analyse(sheet, strict=strict, trials=trials)
     from rich.console import Console
     from rich.progress import Progress
 
     with Progress(console=Console(stderr=True), transient=True) as progress:
         task = progress.add_task("Measuring", total=len(sheet.devices))
-        return analyse(sheet, lambda _name: progress.advance(task), strict=strict)
+        return analyse(sheet, lambda _name: progress.advance(task), strict=strict, trials=trials)
 
 
 def _pages(result: BenchResult) -> Iterator[tuple[str, bytes]]:
@@ -136,6 +139,7 @@ def report(
     out: Out = None,
     no_page: Annotated[bool, typer.Option("--no-page", help="Write the numbers only.")] = False,
     strict: Strict = False,
+    trials: Trials = None,
     design: Design = None,
     source: Source = None,
     input_pad: InputPad = None,
@@ -150,7 +154,7 @@ def report(
 
     sheet, folder = _load(bench, design, source, input_pad, output_pad)
     folder = out or folder
-    result = _analyse(sheet, strict)
+    result = _analyse(sheet, strict, trials)
     prepare_folder(folder)
     for name, data in () if no_page else _pages(result):
         write_whole(folder / name, data)

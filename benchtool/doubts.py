@@ -24,7 +24,7 @@ import numpy as np
 from benchtool.figures import FigurePlan
 from benchtool.match import BURIED_UNCERTAINTY
 from benchtool.model import ComplexArray, FloatArray, Sweep
-from benchtool.noise import NOISE_FREE, line_delay, rotation
+from benchtool.noise import NOISE_FREE
 from benchtool.pads import PadBank, change_of_line
 from benchtool.sheet import Analyzer, BenchSheet, SweepEntry
 from benchtool.units import from_db
@@ -77,6 +77,8 @@ class Joint:
     """'S11' or 'S22' where the product is still to be multiplied by the device's own measured reflection."""
     resonant: float = 0.0
     """Part of the product, where the device's reflection is not known, that follows the resonance in frequency."""
+    through: tuple[str, ...] = ()
+    """Added pads that the reflection passes twice: their loss is not known exactly either."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -184,7 +186,7 @@ def _joints_of(
             joints.append(Joint(f"{nearest} and device", own * unknown, device, own * resonant))
     loss = sum(sign * bank.loss_db(pad, at_hz) for pad, sign in weights.items())
     through = port * from_db(-2.0 * max(loss, 0.0))
-    joints.append(Joint("port and device", through * unknown, device, through * resonant))
+    joints.append(Joint("port and device", through * unknown, device, through * resonant, tuple(weights)))
     return tuple(joint for joint in joints if joint.magnitude > 0.0)
 
 
@@ -308,8 +310,7 @@ class Draws:
 
     def _joints(self, sweep: Sweep, doubts: SweepDoubts) -> ComplexArray:
         factor: ComplexArray = np.ones((self.trials, 1), np.complex128)
-        shape = sweep.s21 * rotation(sweep.frequency_hz, line_delay(sweep.frequency_hz, sweep.s21))
-        shape = shape / np.max(np.abs(shape))
+        shape = sweep.s21 / np.max(np.abs(sweep.s21))
         for joint in (*doubts.input_joints, *doubts.output_joints):
             seen: ComplexArray | float = 1.0
             if joint.device is not None:
@@ -317,6 +318,8 @@ class Draws:
             product = joint.magnitude * self.phasor() * seen
             if joint.resonant > 0.0:
                 product = product + joint.resonant * self.phasor() * shape
+            for pad in joint.through:
+                product = product * from_db(-2.0 * self.pad_db(pad))[:, None]
             factor = factor * (1.0 + product)
         return factor
 

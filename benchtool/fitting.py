@@ -39,6 +39,14 @@ _INVERSE_NEEDS_SNR: Final = 5.0
 """1/S is fitted only where the trace stands this far above the noise throughout (a ratio of amplitudes)."""
 
 
+def _times(data: ComplexArray, matrix: FloatArray) -> ComplexArray:
+    """Return complex data (..., m) times a real matrix (m, k): two real products cost half of one complex product."""
+    product = np.empty((*data.shape[:-1], matrix.shape[1]), np.complex128)
+    product.real = data.real @ matrix
+    product.imag = data.imag @ matrix
+    return product
+
+
 @dataclass(frozen=True, eq=False)
 class Fit:
     """One polynomial over ``samples[start:stop]``, valid between `low_hz` and `high_hz`."""
@@ -69,8 +77,7 @@ class Fit:
         turned = s[..., self.start : self.stop] * self.turn
         if self.inverse:
             turned = 1.0 / turned
-        solved: ComplexArray = turned @ self.solve.T
-        return solved
+        return _times(turned, self.solve.T)
 
     def basis(self, frequency_hz: FloatArray) -> FloatArray:
         """Return the basis functions at frequencies (...,), (..., degree + 1)."""
@@ -84,8 +91,8 @@ class Fit:
 
     def evaluate(self, coefficients: ComplexArray, frequency_hz: FloatArray) -> tuple[ComplexArray, FloatArray]:
         """Return S (its mean delay put back) and the group delay in s, both (..., g), at frequencies (g,)."""
-        polynomial = coefficients @ self.basis(frequency_hz).T
-        slope = coefficients @ self.slope_basis(frequency_hz).T
+        polynomial = _times(coefficients, self.basis(frequency_hz).T)
+        slope = _times(coefficients, self.slope_basis(frequency_hz).T)
         with np.errstate(divide="ignore", invalid="ignore"):
             angle_slope = np.imag(slope / polynomial) / (2 * np.pi)
             value = 1.0 / polynomial if self.inverse else polynomial

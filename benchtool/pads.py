@@ -25,7 +25,17 @@ from benchtool.sheet import BenchSheet, Pad, SweepEntry
 from benchtool.touchstone import read_sweep
 from benchtool.units import format_si, from_db, to_db
 
-__all__ = ["PadBank", "cascade", "change_of_line", "de_embed", "invert", "levels", "matched_pad", "signal_path"]
+__all__ = [
+    "ChangeOfLine",
+    "PadBank",
+    "cascade",
+    "change_of_line",
+    "de_embed",
+    "invert",
+    "levels",
+    "matched_pad",
+    "signal_path",
+]
 
 _COVERAGE_SLACK: Final = 1e-9
 

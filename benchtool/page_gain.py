@@ -15,8 +15,8 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.patches import Rectangle
 
+from benchtool.digits import level_text, stated
 from benchtool.model import DeviceResult, Figure, TargetResult
-from benchtool.page_numbers import level_text, stated
 from benchtool.page_paper import GREEN, HEADING_PT, INK, LIGHT, WIDTH_PT, ZONE, Paper
 from benchtool.page_scales import View, decibels_of, frame, widened
 from benchtool.page_traces import Trace

@@ -5,8 +5,8 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import Final
 
+from benchtool.digits import stated
 from benchtool.model import BenchResult, Finding, Severity
-from benchtool.page_numbers import stated
 from benchtool.page_paper import BLUE, HEADING_PT, INK, LIGHT, ORANGE, VERMILLION, WIDTH_PT, Block, Paper
 from benchtool.page_text import Lines, fit
 from benchtool.page_traces import Trace

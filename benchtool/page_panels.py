@@ -13,8 +13,8 @@ from typing import Final
 import numpy as np
 from matplotlib.axes import Axes
 
+from benchtool.digits import quantity, stated
 from benchtool.model import Compression, DeviceResult, FloatArray
-from benchtool.page_numbers import quantity, stated
 from benchtool.page_paper import BLUE, GREEN, HEADING_PT, INK, LIGHT, VERMILLION, WIDTH_PT, ZONE, Dash, Paper
 from benchtool.page_scales import View, decibels_of, frame, near_band, widened
 from benchtool.page_text import fit

@@ -10,8 +10,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Final, Literal
 
+from benchtool.digits import decibels, quantity, stated
 from benchtool.model import DeviceResult, PadInLine, SignalPath
-from benchtool.page_numbers import decibels, quantity, stated
 from benchtool.page_paper import BLUE, FAINT, INK, LIGHT, VERMILLION, WIDTH_PT, Block, Paper
 from benchtool.page_text import Lines, fit, width_pt
 

@@ -7,8 +7,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Final
 
+from benchtool.digits import decibels, level_text, quantity
 from benchtool.model import DeviceResult, PadInLine, SweepResult
-from benchtool.page_numbers import decibels, level_text, quantity
 from benchtool.page_paper import LIGHT, WIDTH_PT, Block, Paper
 from benchtool.page_text import MIN_SIZE_PT, Lines, fit, literal, width_pt
 from benchtool.page_traces import Trace

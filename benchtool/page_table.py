@@ -10,8 +10,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Final
 
+from benchtool.digits import figure_label, interval_text, limits_text, value_text
 from benchtool.model import DeviceResult, Figure, TargetResult, Verdict
-from benchtool.page_numbers import figure_label, interval_text, limits_text, value_text
 from benchtool.page_paper import FAINT, GREEN, HEADING_PT, INK, LIGHT, RULE, WIDTH_PT, ZONE, Block, Paper
 from benchtool.page_text import Lines, fit, width_pt
 from benchtool.page_verdict import VERDICT_COLOUR, VERDICT_MARK

@@ -8,8 +8,8 @@ from __future__ import annotations
 from math import cos, pi, sin
 from typing import Final
 
+from benchtool.digits import quantity, stated
 from benchtool.model import BenchResult, DeviceResult, Verdict
-from benchtool.page_numbers import quantity, stated
 from benchtool.page_paper import GREEN, INK, LIGHT, ORANGE, RULE, VERMILLION, WIDTH_PT, Block, Paper
 from benchtool.page_text import Lines, fit
 

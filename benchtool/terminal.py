@@ -9,9 +9,9 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
+from benchtool.digits import figure_label, interval_text, limits_text, value_text
 from benchtool.model import BenchResult, DeviceResult, Sweep
 from benchtool.units import format_si, to_db
-from benchtool.verdict import format_figure
 
 __all__ = ["print_result", "print_sweep"]
 
@@ -31,37 +31,22 @@ def _literal(text: str) -> Text:
     return Text("".join(c if c.isprintable() else c.encode("unicode_escape").decode() for c in text))
 
 
-def _limits(low: float | None, high: float | None, unit: str) -> str:
-    if low is not None and high is not None:
-        return f"{format_figure(low, unit)} … {format_figure(high, unit)}"
-    if low is not None:
-        return f"≥ {format_figure(low, unit)}"
-    return f"≤ {format_figure(high, unit)}" if high is not None else ""
-
-
 def _device_table(device: DeviceResult) -> Table:
     table = Table(box=None, pad_edge=False)
-    for column in ("figure", "value", "interval", "target", "verdict"):
-        table.add_column(column, no_wrap=True, justify="right" if column == "value" else "left")
-    judged = {target.figure for target in device.targets}
+    for column in ("figure", "value", "interval", "target", "verdict", "p(met)"):
+        table.add_column(column, no_wrap=True, justify="right" if column in ("value", "p(met)") else "left")
     for target in device.targets:
-        table.add_row(*_row(device, target.figure, _limits(target.min, target.max, target.unit), target.verdict))
-    for key in device.figures:
+        figure = device.figures[target.figure]
+        chance = "" if target.probability is None else f"{target.probability:.1%}"
+        verdict = Text(target.verdict, style=_STYLES[target.verdict])
+        table.add_row(
+            figure_label(target.figure), value_text(figure), interval_text(figure), limits_text(target), verdict, chance
+        )
+    judged = {target.figure for target in device.targets}
+    for key, figure in device.figures.items():
         if key not in judged:
-            table.add_row(*_row(device, key, "", None))
+            table.add_row(figure_label(key), value_text(figure), interval_text(figure), "", "", "")
     return table
-
-
-def _row(device: DeviceResult, key: str, target: str, verdict: str | None) -> list[Text | str]:
-    figure = device.figures[key]
-    value = "not known" if figure.value is None else format_figure(figure.value, figure.unit)
-    if figure.bound is not None:
-        value = f"{figure.bound} {value}"
-    interval = ""
-    if figure.low is not None and figure.high is not None:
-        interval = f"{format_figure(figure.low, figure.unit)} … {format_figure(figure.high, figure.unit)}"
-    mark = Text(verdict, style=_STYLES[verdict]) if verdict else ""
-    return [key.replace("_", " "), value, interval, target, mark]
 
 
 def print_result(result: BenchResult, folder: Path) -> None:

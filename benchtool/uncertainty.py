@@ -2,7 +2,7 @@
 
 Each trial is a copy of the sweep as it might have been read (:mod:`benchtool.doubts`), measured by the very code that
 measured the sweep itself. Noise makes a maximum read high, and trials that add noise to a noisy sweep read it higher
-still, by as much again: that bias, the departure of the trials' median from the value, is taken out of both.
+still, by as much again: that bias, seen as the median departure in trials with noise alone, is taken out of both.
 
 A trial in which a figure is lost (an edge leaves the sweep) is never dropped: it counts as beyond every limit on the
 side where the figure went. Where more than a hundredth are lost the figure becomes a bound.
@@ -22,15 +22,17 @@ from benchtool.doubts import Draws, SweepDoubts
 from benchtool.model import Bound, Figure, Finding, FloatArray
 from benchtool.pads import PadBank
 from benchtool.propagation import BLOCK, coverage_interval, run_blocks
+from benchtool.units import from_db, to_db
 
 __all__ = ["FigureTrials", "figure_trials"]
 
-_BUDGET_TRIALS: Final = 200
+_BUDGET_TRIALS: Final = 250
 _MAY_BE_LOST: Final = 0.01
 _BLOCK_BYTES: Final = 48e6
 """Memory that one block of perturbed copies may take."""
 _PLAUSIBLE_BIAS: Final = 0.6
 """Largest bias that noise is taken to give a figure, as a share of its standard uncertainty."""
+_SMALLEST_REFLECTION: Final = 1e-4
 _LOST_SIDE: Final[Mapping[str, float]] = {"lower_edge": -1.0, "upper_edge": 1.0, "bandwidth": 1.0, "loaded_q": -1.0}
 """Where a figure goes when a half-power edge leaves the sweep: up (+1) or down (-1)."""
 
@@ -88,7 +90,7 @@ def figure_trials(
 
     size = _block_size(sweep.frequency_hz.size)
     raw = run_blocks(block, confidence, trials=trials, deciding=[key for key in deciding if key in known], size=size)
-    budgets = _budgets(block, doubts, figures, raw, size)
+    alone = {source: _alone(block, source, size) for source in doubts.sources}
     finished: dict[str, Figure] = {}
     values: dict[str, FloatArray] = {}
     findings: list[Finding] = []
@@ -96,31 +98,53 @@ def figure_trials(
         if figure.value is None or key not in raw:
             finished[key] = figure
             continue
-        values[key] = _possible_values(figure, raw[key])
-        finished[key] = _with_interval(figure, values[key], confidence, budgets.get(key, {}))
+        departures = {source: _departure(figure, trial[key]) for source, trial in alone.items()}
+        values[key] = _possible_values(figure, raw[key], _noise_bias(departures["noise"]))
+        finished[key] = _with_interval(figure, values[key], confidence, _shares(departures))
         lost = float(np.mean(~np.isfinite(values[key])))
         if figure.bound is None and finished[key].bound is not None:
             findings.append(_lost_finding(measured.file, key, lost))
-    return FigureTrials(
-        MappingProxyType(finished), values, next(iter(raw.values())).size if raw else 0, tuple(findings)
-    )
+    count = next(iter(raw.values())).size if raw else 0
+    return FigureTrials(MappingProxyType(finished), values, count, tuple(findings))
 
 
-def _possible_values(figure: Figure, trial: FloatArray) -> FloatArray:
-    """Return the values a figure may truly have, from trials of it; lost trials lie beyond every limit."""
+def _alone(block: _Block, source: str, size: int) -> dict[str, FloatArray]:
+    """Return trials of every figure with one source of doubt alone."""
+    steps = -(-_BUDGET_TRIALS // size)
+    parts = [block(-(-_BUDGET_TRIALS // steps), source) for _ in range(steps)]
+    return {key: np.concatenate([part[key] for part in parts]) for key in parts[0]}
+
+
+def _departure(figure: Figure, trial: FloatArray) -> FloatArray:
+    """Return how far trials are from the value; a lost trial lies beyond every limit on the side where it went."""
     assert figure.value is not None
     departure = trial - figure.value
-    if figure.unit == "deg" and figure.id == "phase":
+    if figure.id == "phase":
         departure = 180.0 - np.mod(180.0 - departure, 360.0)
-    lost = np.isnan(departure)
-    if lost.all():
-        return np.full(departure.shape, _LOST_SIDE.get(figure.id, 1.0) * np.inf)
-    bias, spread = float(np.median(departure[~lost])), float(np.std(departure[~lost]))
-    if abs(bias) > _PLAUSIBLE_BIAS * spread:
-        # The trials sit elsewhere than the value, as when two humps vie for the peak: both stay possible.
-        bias = 0.0
-    side = _LOST_SIDE.get(figure.id, 1.0)
-    return np.where(lost, side * np.inf, figure.value + departure - 2.0 * bias)
+    return np.where(np.isnan(departure), _LOST_SIDE.get(figure.id, 1.0) * np.inf, departure)
+
+
+def _possible_values(figure: Figure, trial: FloatArray, noise_bias: float) -> FloatArray:
+    """Return the values a figure may truly have.
+
+    A return loss is the worst over a band, and every error makes the worst worse, whichever way it points: so its
+    reflection is mirrored at the value, as a magnitude, instead of being taken as it came.
+    """
+    assert figure.value is not None
+    if figure.id in ("input_return_loss", "output_return_loss"):
+        mirrored = 2.0 * from_db(-figure.value) - from_db(-trial)
+        return -to_db(np.maximum(mirrored, _SMALLEST_REFLECTION))
+    return np.asarray(figure.value + _departure(figure, trial) - 2.0 * noise_bias)
+
+
+def _noise_bias(departure: FloatArray) -> float:
+    """Return the bias that noise gives a figure: 0 where the trials do not show one beyond their own scatter."""
+    finite = departure[np.isfinite(departure)]
+    if finite.size < 0.9 * departure.size:
+        return 0.0
+    bias, spread = float(np.median(finite)), float(np.std(finite))
+    # The median of n trials scatters by 1.25 σ/√n. More than σ is no bias: two humps vie for the peak.
+    return bias if 2.5 * spread / np.sqrt(finite.size) < abs(bias) < _PLAUSIBLE_BIAS * spread else 0.0
 
 
 def _with_interval(figure: Figure, values: FloatArray, confidence: float, budget: Mapping[str, float]) -> Figure:
@@ -152,22 +176,12 @@ def _lost_finding(file: str, key: str, lost: float) -> Finding:
     )
 
 
-def _budgets(
-    block: _Block, doubts: SweepDoubts, figures: Mapping[str, Figure], raw: Mapping[str, FloatArray], size: int
-) -> dict[str, dict[str, float]]:
-    """Return the share of each source in the variance of each figure, from trials with that source alone."""
-    variances: dict[str, dict[str, float]] = {key: {} for key in raw}
-    for source in doubts.sources:
-        parts = [block(min(size, _BUDGET_TRIALS), source) for _ in range(max(1, -(-_BUDGET_TRIALS // size)))]
-        for key in raw:
-            values = _possible_values(figures[key], np.concatenate([part[key] for part in parts]))
-            finite = values[np.isfinite(values)]
-            variances[key][source] = float(np.var(finite)) if finite.size > 1 else 0.0
-    return {key: _shares(variance) for key, variance in variances.items()}
-
-
-def _shares(variance: Mapping[str, float]) -> dict[str, float]:
-    """Return shares that sum to one, the largest first; nothing where there is no variance."""
+def _shares(departures: Mapping[str, FloatArray]) -> dict[str, float]:
+    """Return the share of each source in the variance, summing to one, the largest first; empty without variance."""
+    variance = {}
+    for source, departure in departures.items():
+        finite = departure[np.isfinite(departure)]
+        variance[source] = float(np.var(finite)) if finite.size > 1 else 0.0
     total = sum(variance.values())
     if total <= 0.0:
         return {}

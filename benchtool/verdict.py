@@ -14,15 +14,15 @@ from typing import Final
 
 import numpy as np
 
+from benchtool.digits import figure_label, interval_text, limits_text, quantity, value_text
 from benchtool.doubts import ASSUMED, pad_doubt_db
 from benchtool.figures import phase_toward
 from benchtool.model import Figure, Finding, FloatArray, Summary, TargetResult, Verdict
 from benchtool.pads import PadBank
 from benchtool.propagation import rectangular_u
 from benchtool.sheet import TargetSpec
-from benchtool.units import format_si
 
-__all__ = ["format_figure", "judge", "overall", "remedy", "summarise"]
+__all__ = ["judge", "overall", "remedy", "summarise"]
 
 
 def judge(
@@ -42,7 +42,7 @@ def judge(
     low = -np.inf if target.min is None else target.min
     high = np.inf if target.max is None else target.max
     result = TargetResult(figure.key, figure.id, figure.unit, target.min, target.max, "undecided")
-    name = figure.key.replace("_", " ")
+    name = figure_label(figure.key)
     if figure.value is None:
         return replace(result, advice=f"make {name} measurable: see the findings")
     possible = np.array([figure.value]) if values is None else values
@@ -88,8 +88,8 @@ def remedy(figure: Figure, bank: PadBank) -> str:
         left, action = _CURES[source]
     half = 0.5 * (figure.high - figure.low)
     better = half * float(np.sqrt(1.0 - share + share * left**2))
-    shown = [format_figure(width, figure.unit, 2) for width in (half, better)]
-    return f"{action}: interval of {figure.key.replace('_', ' ')} ±{shown[0]} → ±{shown[1]}"
+    shown = [quantity(width, figure.unit, width / 2.0) for width in (half, better)]
+    return f"{action}: interval of {figure_label(figure.key)} ±{shown[0]} → ±{shown[1]}"
 
 
 def overall(verdicts: Sequence[Verdict]) -> Verdict:
@@ -98,35 +98,13 @@ def overall(verdicts: Sequence[Verdict]) -> Verdict:
     return next((verdict for verdict in order if verdict in verdicts), "none")
 
 
-def format_figure(value: float, unit: str, digits: int = 4) -> str:
-    """Return a value with its unit for people: SI prefixes for Hz, s and ohm, two decimals for the rest.
-
-    >>> format_figure(21.4e6, "Hz"), format_figure(38.214, "dB"), format_figure(-179.96, "deg"), format_figure(50.1, "")
-    ('21.4 MHz', '38.21 dB', '-180.0°', '50.1')
-    """
-    if unit in ("Hz", "s", "ohm"):
-        return format_si(value, unit, digits)
-    if unit == "deg":
-        return f"{value:.1f}°"
-    if unit == "":
-        return f"{value:.{digits}g}"
-    return f"{value:.2f} {unit}"
-
-
 def _against(target: TargetResult, figure: Figure) -> str:
     """Return one clause that says how far a figure is from its target."""
-    name = target.figure.replace("_", " ")
+    name = figure_label(target.figure)
     if figure.value is None:
         return f"{name} cannot be known from these sweeps"
-    shown = format_figure(figure.value, figure.unit)
-    if figure.bound is not None:
-        shown = f"{figure.bound} {shown}"
-    limits = [
-        f"{word} {format_figure(limit, figure.unit)}"
-        for word, limit in (("at least", target.min), ("at most", target.max))
-        if limit is not None
-    ]
-    return f"{name} is {shown}, wanted {' and '.join(limits)}"
+    interval = f" ({interval_text(figure)})" if figure.low is not None else ""
+    return f"{name} is {value_text(figure)}{interval}, wanted {limits_text(target)}"
 
 
 def summarise(targets: Sequence[TargetResult], figures: Mapping[str, Figure], findings: Sequence[Finding]) -> Summary:

@@ -17,6 +17,11 @@ LAYERS = [
     "model",
     "touchstone_text",
     "touchstone",
+    "sheet_faults",
+    "sheet_values",
+    "sheet_targets",
+    "sheet_tables",
+    "sheet_quick",
     "sheet",
     "noise",
     "fitting",
@@ -25,11 +30,25 @@ LAYERS = [
     "phase",
     "match",
     "figures",
+    "propagation",
+    "doubts",
+    "digits",
     "compression",
     "uncertainty",
     "findings",
     "verdict",
     "analysis",
+    "page_text",
+    "page_paper",
+    "page_scales",
+    "page_traces",
+    "page_verdict",
+    "page_path",
+    "page_sweeps",
+    "page_gain",
+    "page_panels",
+    "page_table",
+    "page_notes",
     "page",
     "export",
     "draft",
@@ -71,7 +90,8 @@ def test_help_starts_light():
         "import sys; from typer.testing import CliRunner; from benchtool.cli import app; "
         "r = CliRunner().invoke(app, ['--help']); assert r.exit_code == 0, r.output; "
         "assert 'report' in r.output; "
-        "heavy = {'skrf', 'scipy', 'matplotlib', 'pandas', 'numpy', 'pydantic'} & set(sys.modules); print(sorted(heavy))"
+        "heavy = {'skrf', 'scipy', 'matplotlib', 'pandas', 'numpy', 'pydantic'}; "
+        "print(sorted(heavy & set(sys.modules)))"
     )
     done = subprocess.run([sys.executable, "-c", probe], capture_output=True, text=True, check=True)
     assert done.stdout.strip() == "[]"

@@ -109,7 +109,7 @@ TWO_PADS = '[pads.a20]\nloss_db = 20.0\ndelay = "95 ps"\n[pads.b3]\nloss_db = 3.
 
 
 def test_matched_pads_come_out_of_all_four_parameters(tmp_path):
-    # Closed form: S21 and S12 gain 10^(A/20) e^(+jωd); S11 gains the square of that on the input side, S22 on the output.
+    # Closed form: S21 and S12 gain 10^(A/20) e^(+jωd); S11 gains the square of that of the input side.
     rng = np.random.default_rng(2)
     device = random_two_port(rng, FREQUENCY.size)
     shown = cascade(cascade(matched_pad(FREQUENCY, 20.0, 95e-12), device), matched_pad(FREQUENCY, 3.0, 40e-12))
@@ -222,7 +222,8 @@ def test_levels_along_the_line(tmp_path):
     bench = Bench(tmp_path, TWO_PADS, 'output_pads = ["b3"]', 'input_pads = ["a20"]', device)
     path = signal_path(bench.entry, bench.sheet, bench.bank, 21.4e6, 38.0)
     assert (path.drive_dbm, path.device_output_dbm, path.port2_dbm) == (-28.0, 10.0, 7.0)
-    assert [(pad.name, pad.calibrated) for pad in (*path.input_pads, *path.output_pads)] == [("a20", False), ("b3", True)]
+    pads = (*path.input_pads, *path.output_pads)
+    assert [(pad.name, pad.calibrated) for pad in pads] == [("a20", False), ("b3", True)]
     assert levels(None, (), 10.0, ()) == (None, None, None)
 
 

@@ -24,9 +24,9 @@ from matplotlib.text import Text
 from matplotlib.transforms import Bbox
 from numpy.testing import assert_allclose
 
+from benchtool.digits import limits_text
 from benchtool.model import DeviceResult, FloatArray, Verdict
 from benchtool.page import draw_page, render_page
-from benchtool.page_numbers import limits_text
 from benchtool.page_paper import STYLE
 from benchtool.page_text import MIN_SIZE_PT, literal
 

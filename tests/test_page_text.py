@@ -17,8 +17,8 @@ from matplotlib.font_manager import findfont, fontManager
 from numpy.testing import assert_allclose
 
 from benchtool import page_text
+from benchtool.digits import figure_label, interval_text, limits_text, quantity, value_text
 from benchtool.model import Figure, TargetResult
-from benchtool.page_numbers import figure_label, interval_text, limits_text, quantity, value_text
 from benchtool.page_paper import STYLE, Paper
 from benchtool.page_text import families, fit, in_reading_order, literal, width_pt, wrap
 

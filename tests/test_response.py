@@ -86,7 +86,8 @@ def test_prototypes_of_scipy(order, name):
     level = 20 * np.log10(np.abs(signal.freqs_zpk(*prototype, x)[1]))
 
     def above(at):
-        return float(20 * np.log10(np.abs(signal.freqs_zpk(*prototype, np.array([at]))[1]))[0]) - level.max() + HALF_POWER_DB
+        at_db = 20 * np.log10(np.abs(signal.freqs_zpk(*prototype, np.array([at]))[1][0]))
+        return float(at_db - level.max() + HALF_POWER_DB)
 
     edge = brentq(above, x[np.argmax(level < level.max() - HALF_POWER_DB) - 1], 8.0)
     f = np.linspace(60e6, 80e6, 401)
@@ -226,7 +227,7 @@ def test_measured_resonator_against_scikit_rf(window):
     # Independent: skrf.qfactor.Qfactor (A. P. Gregory, NPL Report MAT 58, 2021) on a measured stripline resonator.
     network = skrf.Network(REAL / "resonator_36mm.s2p")
     s21 = network.s[:, 1, 0]
-    band, found = measure(network.f, s21, window, estimate_noise(network.f, s21))
+    _, found = measure(network.f, s21, window, estimate_noise(network.f, s21))
     near = np.abs(network.f - float(found.peak_frequency)) < 0.03 * float(found.peak_frequency)
     fit = skrf.qfactor.Qfactor(network[near].s21, "transmission").fit()
     assert_allclose(found.loaded_q, fit.Q_L, rtol=0.02, atol=0)

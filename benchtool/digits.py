@@ -1,4 +1,4 @@
-"""Figures and targets in; the words and numbers that stand for them on the page out.
+"""Figures and targets in; the words and numbers that stand for them wherever they are shown out.
 
 A figure is printed to two digits of its own standard uncertainty where that is known, else to the digits that a
 careful bench measurement can carry.

@@ -1,0 +1,255 @@
+"""The whole path on the sample bench against the true figures of its circuits, and the decisions along the way."""
+
+import json
+import shutil
+from pathlib import Path
+
+import numpy as np
+import pytest
+from numpy.testing import assert_allclose
+
+from benchtool.analysis import analyse
+from benchtool.errors import BenchtoolError, FaultsError, SheetError, SweepFileError
+from benchtool.model import Sweep
+from benchtool.sheet import load_sheet
+from benchtool.touchstone import format_sweep
+
+SAMPLE = Path(__file__).parents[1] / "sample_data" / "telemetry"
+TRUTH = json.loads((SAMPLE / "truth.json").read_text(encoding="utf-8"))["devices"]
+
+
+@pytest.fixture(scope="module")
+def sample():
+    return {device.name: device for device in analyse(load_sheet(SAMPLE)).devices}
+
+
+def bench(folder, sweeps, sheet, pads="", s11=0.1):
+    """A folder with sweeps (name -> S21 over frequency) and a sheet."""
+    folder.mkdir(exist_ok=True)
+    for name, (f, s21) in sweeps.items():
+        s = np.zeros((2, 2, f.size), complex)
+        s[1, 0] = s21
+        s[0, 0] = s11
+        (folder / name).write_text(format_sweep(Sweep(name, f, s)), encoding="utf-8")
+    (folder / "bench.toml").write_text(f"version = 1\n{pads}\n{sheet}", encoding="utf-8")
+    return load_sheet(folder)
+
+
+def single_tuned(f, gain=10.0, f0=21.4e6, q=25.0):
+    return gain / (1 + 1j * q * (f / f0 - f0 / f))
+
+
+FREQUENCY = np.linspace(18e6, 25e6, 401)
+SHEET = '[analyzer]\nsource_dbm = -10.0\n[[device]]\nname = "d"\nkind = "amplifier"\n'
+
+
+def codes(device):
+    return {finding.code for finding in device.findings}
+
+
+TRUTHS = [
+    ("gain", "gain_db"),
+    ("peak_frequency", "peak_frequency_hz"),
+    ("bandwidth", "bandwidth_hz"),
+    ("loaded_q", "loaded_q"),
+    ("group_delay", "group_delay_s"),
+    ("phase", "phase_deg"),
+]
+
+
+@pytest.mark.parametrize("name", ["first IF stage", "detector driver", "post-mixer filter", "discriminator network"])
+@pytest.mark.parametrize(("key", "true"), TRUTHS)
+def test_intervals_of_the_sample_hold_the_truth(sample, name, key, true):
+    # Truth: the circuits' own closed solution (sample_data/truth.py), which knows nothing of sweeps or of this tool.
+    figures, truth = sample[name].figures, TRUTH[name]["figures"][true]
+    if key == "gain" and name == "post-mixer filter":
+        key, truth = "insertion_loss", -truth
+    figure = figures[key]
+    # One figure in twenty may miss its 95 % interval; none may miss by its whole width.
+    slack = 0.5 * (figure.high - figure.low)
+    assert figure.low - slack <= truth <= figure.high + slack
+    assert_allclose(figure.value, truth, rtol=0.02, atol=0)
+
+
+def test_verdicts_of_the_sample(sample):
+    assert sample["first IF stage"].verdict == "met"
+    assert sample["post-mixer filter"].verdict == "missed"
+    assert sample["detector driver"].verdict == "undecided"
+    assert sample["discriminator network"].verdict == "met"
+
+
+def test_findings_of_the_sample(sample):
+    assert {"compressed-sweep", "return-loss-buried"} <= codes(sample["first IF stage"])
+    assert "drive-unproven" in codes(sample["limiter stage"])
+    assert "one-path" in codes(sample["discriminator network"])
+
+
+def test_drives_and_levels_of_the_sample(sample):
+    # Truth: the drives that the maker of the sample really put on the device, source and pads as drawn.
+    device = sample["first IF stage"]
+    for sweep in device.sweeps:
+        true = TRUTH["first IF stage"]["sweeps"][sweep.file]
+        assert_allclose(sweep.drive_dbm, true["drive_dbm"], rtol=0, atol=0.5)
+    points = {point.file: point for point in device.compression.points}
+    for file, true in TRUTH["first IF stage"]["sweeps"].items():
+        relative = true["compression_db"] - TRUTH["first IF stage"]["sweeps"][device.reference_sweep]["compression_db"]
+        assert_allclose(points[file].compression_db, relative, rtol=0, atol=0.35)
+
+
+def test_undecided_comes_with_the_way_out(sample):
+    target = next(t for t in sample["detector driver"].targets if t.verdict == "undecided")
+    assert 0.05 < target.probability < 0.95
+    assert target.advice.startswith("measure pad a20 as a .s2p file: interval of gain ±")
+    assert target.advice in sample["detector driver"].summary.next_step.replace("Measure", "measure").rstrip(".") + "."
+
+
+def test_budget_shares_sum_to_one(sample):
+    for device in sample.values():
+        for figure in device.figures.values():
+            if figure.budget:
+                assert_allclose(sum(figure.budget.values()), 1.0, rtol=1e-9, atol=0)
+
+
+def test_zero_doubt_gives_zero_width_and_the_same_values(tmp_path):
+    pads = "[pads.a]\nloss_db = 20.0\ntolerance_db = 0.0\nreturn_loss_db = 100\n"
+    analyzer = "[analyzer]\nsource_dbm = -10.0\nreading_db = 0.0\nport_match_db = 100\ndirectivity_db = 100\n"
+    device = '[[device]]\nname = "d"\nkind = "amplifier"\n[[device.sweep]]\nfile = "x.s2p"\ninput_pads = ["a"]\n'
+    # Behind a 20 dB pad a reflection of 0.1 reads 0.001.
+    sweeps = {"x.s2p": (FREQUENCY, 0.1 * single_tuned(FREQUENCY))}
+    sheet = bench(tmp_path / "b", sweeps, analyzer + device, pads, s11=0.001)
+    found = analyse(sheet).devices[0].figures
+    for key in ("gain", "peak_gain", "peak_frequency", "bandwidth", "loaded_q", "group_delay"):
+        figure = found[key]
+        # 100 dB of match is not infinity: what is left is below a millionth of the value (a ten-thousandth of a dB).
+        assert abs(figure.high - figure.low) < (1e-4 if figure.unit == "dB" else 2e-5 * figure.value)
+    assert_allclose(found["gain"].value, 20.0, rtol=0, atol=1e-6)
+
+
+def test_same_seed_same_intervals():
+    first, second = (analyse(load_sheet(SAMPLE), trials=200).devices[0].figures["gain"] for _ in range(2))
+    assert (first.low, first.high) == (second.low, second.high)
+
+
+def test_thirty_two_against_forty_is_eight_down(tmp_path):
+    # Common practice, no source: 32 dB at one drive and 40 dB with 20 dB less drive is about 8 dB of compression, and
+    # the flat top's bandwidth is not the device's.
+    low = single_tuned(FREQUENCY, 10.0)  # 40 dB device behind a 20 dB pad
+    flat = single_tuned(FREQUENCY, 100.0)
+    flat = flat / np.abs(flat) * np.minimum(np.abs(flat), 10 ** (32 / 20))
+    pads = "[pads.a]\nloss_db = 20.0\n"
+    sweeps = '[[device.sweep]]\nfile = "low.s2p"\ninput_pads = ["a"]\n[[device.sweep]]\nfile = "high.s2p"\n'
+    sheet = bench(tmp_path / "b", {"low.s2p": (FREQUENCY, low), "high.s2p": (FREQUENCY, flat)}, SHEET + sweeps, pads)
+    device = analyse(sheet).devices[0]
+    assert device.reference_sweep == "low.s2p"
+    point = next(p for p in device.compression.points if p.file == "high.s2p")
+    assert_allclose(point.compression_db, 8.0, rtol=0, atol=0.05)
+    assert point.compressed
+    assert "compressed-sweep" in codes(device)
+    assert_allclose(device.figures["bandwidth"].value, 21.4e6 / 25, rtol=1e-3, atol=0)
+    assert_allclose(device.figures["gain"].value, 40.0, rtol=0, atol=0.01)
+
+
+def test_one_drive_alone_is_unproven_for_an_amplifier_only(tmp_path):
+    sweep = '[[device.sweep]]\nfile = "x.s2p"\n'
+    sheet = bench(tmp_path / "a", {"x.s2p": (FREQUENCY, single_tuned(FREQUENCY))}, SHEET + sweep)
+    assert "drive-unproven" in codes(analyse(sheet).devices[0])
+    lossy = {"x.s2p": (FREQUENCY, single_tuned(FREQUENCY, 0.7))}
+    sheet = bench(tmp_path / "f", lossy, SHEET.replace("amplifier", "filter") + sweep)
+    device = analyse(sheet).devices[0]
+    assert "drive-unproven" not in codes(device)
+    assert_allclose(device.figures["insertion_loss"].value, -20 * np.log10(0.7), rtol=0, atol=1e-3)
+    assert "gain" not in device.figures
+
+
+def test_a_filter_that_shows_gain_is_a_pad_mistake(tmp_path):
+    pads = "[pads.a]\nloss_db = 20.0\n"
+    sweep = '[[device.sweep]]\nfile = "x.s2p"\ninput_pads = ["a"]\n'
+    sheet = bench(
+        tmp_path / "f",
+        {"x.s2p": (FREQUENCY, single_tuned(FREQUENCY, 0.7))},
+        SHEET.replace("amplifier", "filter") + sweep,
+        pads,
+    )
+    finding = next(f for f in analyse(sheet).devices[0].findings if f.code == "passive-shows-gain")
+    assert finding.severity == "fault"
+
+
+def test_an_edge_outside_the_sweep_makes_bounds(tmp_path):
+    f = np.linspace(21.1e6, 25e6, 401)
+    targets = (
+        '[device.targets]\nbandwidth = { min = "500 kHz" }\nloaded_q = { max = 20 }\n'
+        'lower_edge = { min = "20.9 MHz" }\n'
+    )
+    sweep = '[[device.sweep]]\nfile = "x.s2p"\n'
+    sheet = bench(tmp_path / "b", {"x.s2p": (f, single_tuned(f))}, SHEET + targets + sweep)
+    device = analyse(sheet).devices[0]
+    bounds = {key: device.figures[key].bound for key in ("lower_edge", "upper_edge", "bandwidth", "loaded_q")}
+    assert bounds == {"lower_edge": "at most", "upper_edge": None, "bandwidth": "at least", "loaded_q": "at most"}
+    assert device.figures["bandwidth"].value < 21.4e6 / 25
+    assert "edge-outside-sweep" in codes(device)
+    verdicts = {target.figure: target.verdict for target in device.targets}
+    # The band is at least 728 kHz, which meets a minimum of 500 kHz; where the lower edge is, nobody knows.
+    assert verdicts == {"bandwidth": "met", "loaded_q": "undecided", "lower_edge": "undecided"}
+    assert all(target.advice for target in device.targets if target.verdict == "undecided")
+
+
+def test_too_few_points_is_said(tmp_path):
+    f = np.linspace(18e6, 25e6, 33)  # 4 in the band
+    sweep = '[[device.sweep]]\nfile = "x.s2p"\n'
+    sheet = bench(tmp_path / "b", {"x.s2p": (f, single_tuned(f))}, SHEET + sweep)
+    device = analyse(sheet).devices[0]
+    assert "too-few-points" in codes(device)
+    assert_allclose(device.figures["bandwidth"].value, 21.4e6 / 25, rtol=0.02, atol=0)
+
+
+def test_a_window_with_no_sample_is_a_fault_of_the_sheet(tmp_path):
+    device = 'window = ["40 MHz", "50 MHz"]\n[[device.sweep]]\nfile = "x.s2p"\n'
+    sheet = bench(tmp_path / "b", {"x.s2p": (FREQUENCY, single_tuned(FREQUENCY))}, SHEET + device)
+    with pytest.raises(SheetError, match=r"device\[1\]\.window: no sample of x\.s2p lies between 40 MHz and 50 MHz"):
+        analyse(sheet)
+
+
+def test_all_faulty_sweeps_are_named_at_once(tmp_path):
+    sweeps = '[[device.sweep]]\nfile = "x.s2p"\n[[device.sweep]]\nfile = "y.s2p"\n'
+    named = {name: (FREQUENCY, single_tuned(FREQUENCY)) for name in ("x.s2p", "y.s2p")}
+    sheet = bench(tmp_path / "b", named, SHEET + sweeps)
+    for name in named:
+        (tmp_path / "b" / name).write_text("# MHz S RI R 50\n1 2 3\n", encoding="utf-8")
+    with pytest.raises(FaultsError) as caught:
+        analyse(sheet)
+    assert [type(fault) for fault in caught.value.faults] == [SweepFileError, SweepFileError]
+    assert isinstance(caught.value, BenchtoolError)
+
+
+def test_unknown_source_level_is_said(tmp_path):
+    sweep = '[[device.sweep]]\nfile = "x.s2p"\n'
+    sheet = bench(
+        tmp_path / "b",
+        {"x.s2p": (FREQUENCY, single_tuned(FREQUENCY))},
+        SHEET.replace("source_dbm = -10.0", "") + sweep,
+    )
+    device = analyse(sheet).devices[0]
+    assert "source-level-unknown" in codes(device)
+    assert device.sweeps[0].drive_dbm is None
+
+
+@pytest.mark.parametrize(("limit", "damage", "severity"), [(12.0, 30.0, "caution"), (-5.0, 11.0, "fault")])
+def test_level_at_port_2_is_watched(tmp_path, limit, damage, severity):
+    # -10 dBm into a device of 20 dB: +10 dBm at port 2.
+    analyzer = f"[analyzer]\nsource_dbm = -10.0\nport2_compression_dbm = {limit}\nport2_damage_dbm = {damage}\n"
+    device = '[[device]]\nname = "d"\nkind = "amplifier"\n[[device.sweep]]\nfile = "x.s2p"\n'
+    sheet = bench(tmp_path / "b", {"x.s2p": (FREQUENCY, single_tuned(FREQUENCY))}, analyzer + device)
+    finding = next(f for f in analyse(sheet).devices[0].findings if f.code == "receiver-near-limit")
+    assert finding.severity == severity
+
+
+def test_inputs_are_never_changed(tmp_path):
+    copy = tmp_path / "bench"
+    shutil.copytree(SAMPLE, copy)
+
+    def state():
+        return {p: (p.read_bytes(), p.stat().st_mtime_ns) for p in sorted(copy.rglob("*")) if p.is_file()}
+
+    before = state()
+    analyse(load_sheet(copy), trials=50)
+    assert state() == before
