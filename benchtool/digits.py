@@ -12,7 +12,17 @@ from typing import Final
 
 from benchtool.model import Figure, TargetResult
 
-__all__ = ["decibels", "figure_label", "interval_text", "level_text", "limits_text", "quantity", "stated", "value_text"]
+__all__ = [
+    "budget_text",
+    "decibels",
+    "figure_label",
+    "interval_text",
+    "level_text",
+    "limits_text",
+    "quantity",
+    "stated",
+    "value_text",
+]
 
 _PREFIXES: Final = ((1e9, "G"), (1e6, "M"), (1e3, "k"), (1.0, ""), (1e-3, "m"), (1e-6, "µ"), (1e-9, "n"), (1e-12, "p"))
 _SCALED: Final = ("Hz", "s", "ohm")
@@ -109,6 +119,14 @@ def interval_text(figure: Figure | None) -> str:
     decimals = _decimals(figure.value, figure.unit, factor, spread)
     low, high = (_plain(v / factor, decimals) for v in (figure.low, figure.high))
     return f"{low} to {high}"
+
+
+def budget_text(figure: Figure | None, most: int = 3) -> str:
+    """Return the largest shares of a figure's budget: 'pad a20 70 %, mismatch 22 %, reading 8 %'."""
+    if figure is None:
+        return ""
+    shares = [(source, share) for source, share in figure.budget.items() if share >= 0.005]
+    return ", ".join(f"{source} {share:.0%}".replace("%", " %") for source, share in shares[:most])
 
 
 def limits_text(target: TargetResult) -> str:

@@ -46,7 +46,7 @@ def _compose(bench: BenchResult, device: DeviceResult) -> Canvas:
     paper = Paper()
     looks, view = traces(device), view_of(device)
     top_parts = [head(bench, device), path_strip(device), sweep_list(device, looks)]
-    foot_parts = [cautions(), provenance(bench, looks)]
+    foot_parts = [cautions(), provenance(bench, device, looks)]
     free = HEIGHT_PT - _GAP_PT * _GAPS - sum(part.height for part in [*top_parts, *foot_parts])
     free -= _LEAST_GAIN_PT + _LEAST_PANELS_PT
     tables, findings = _numbers_and_findings(device, free)

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from typing import Final
 
 from benchtool.digits import stated
-from benchtool.model import BenchResult, Finding, Severity
+from benchtool.model import BenchResult, DeviceResult, Finding, Severity
 from benchtool.page_paper import BLUE, HEADING_PT, INK, LIGHT, ORANGE, VERMILLION, WIDTH_PT, Block, Paper
 from benchtool.page_text import Lines, fit
 from benchtool.page_traces import Trace
@@ -99,8 +99,8 @@ def _spans(looks: Sequence[Trace]) -> list[str]:
     return texts
 
 
-def provenance(bench: BenchResult, looks: Sequence[Trace]) -> Block:
-    """Return where every number came from: files with the start of their SHA-256, span, version, time."""
+def provenance(bench: BenchResult, device: DeviceResult, looks: Sequence[Trace]) -> Block:
+    """Return where every number came from: assumptions, files with the start of their SHA-256, span, version, time."""
     spans = _spans(looks)
     same = len(set(spans)) == 1 and len(spans) > 1
     digests = [sweep.sweep.raw.sha256[:12] or "no hash" for sweep in looks[:_MOST_HASHES]]
@@ -114,7 +114,12 @@ def provenance(bench: BenchResult, looks: Sequence[Trace]) -> Block:
     ]
     if len(looks) > len(files):
         files.append(f"{len(looks) - len(files)} more in results.json")
-    parts = [f"Sweeps, SHA-256: {', '.join(files)}{f'; each {spans[0]}' if same else ''}."]
+    parts = []
+    if device.trials:
+        parts.append(f"Intervals from {device.trials} trials.")
+    if device.assumptions:
+        parts.append(f"Assumed, as the sheet does not say: {', '.join(device.assumptions)}.")
+    parts.append(f"Sweeps, SHA-256: {', '.join(files)}{f'; each {spans[0]}' if same else ''}.")
     if bench.sheet is not None or bench.sheet_sha256:
         name = bench.sheet.name if bench.sheet is not None else "bench sheet"
         parts.append(f"Sheet: {name} ({bench.sheet_sha256[:12] or 'no hash'}).")

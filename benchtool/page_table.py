@@ -10,7 +10,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Final
 
-from benchtool.digits import figure_label, interval_text, limits_text, value_text
+from benchtool.digits import budget_text, figure_label, interval_text, limits_text, value_text
 from benchtool.model import DeviceResult, Figure, TargetResult, Verdict
 from benchtool.page_paper import FAINT, GREEN, HEADING_PT, INK, LIGHT, RULE, WIDTH_PT, ZONE, Block, Paper
 from benchtool.page_text import Lines, fit, width_pt
@@ -45,9 +45,19 @@ class _Row:
         return text + (self.advice.height_pt(1.15) + 1.6 if self.advice else 0.0)
 
 
+def _decisive_note(figure: Figure | None, target: TargetResult) -> str:
+    """Return what makes the interval of a target that is not met as wide as it is, and what would narrow it."""
+    if target.verdict not in ("undecided", "missed"):
+        return ""
+    budget = budget_text(figure)
+    advice = f"→ {target.advice}" if target.advice else ""
+    return " ".join(part for part in (budget and f"doubt: {budget}", advice) if part)
+
+
 def _row(device: DeviceResult, target: TargetResult, advise: bool) -> _Row:
     figure = device.figures.get(target.figure)
-    advice = fit(f"→ {target.advice}", (6.5, 6.0), WIDTH_PT - 12.0, most=1) if advise and target.advice else None
+    note = _decisive_note(figure, target) if advise else ""
+    advice = fit(note, (6.5, 6.0), WIDTH_PT - 12.0, most=2) if note else None
     return _Row(
         target,
         figure,
