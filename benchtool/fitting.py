@@ -20,10 +20,9 @@ from typing import Final
 
 import numpy as np
 from numpy.polynomial import legendre
-from scipy.ndimage import uniform_filter1d
 
 from benchtool.model import ComplexArray, FloatArray
-from benchtool.noise import NOISE_FREE, NoiseModel, line_delay, rotation, trend_delay
+from benchtool.noise import NOISE_FREE, NoiseModel, line_delay, moving_average, rotation, trend_delay
 
 __all__ = ["Curve", "Fit", "fit_curve"]
 
@@ -227,7 +226,7 @@ def _fit(frequency_hz: FloatArray, s: ComplexArray, low_hz: float, high_hz: floa
     noisy = noise.additive > 0.0 or noise.proportional > 0.0
     sigma = noise.sigma(magnitude) if noisy else np.ones_like(magnitude)
     smallest = _INVERSE_NEEDS_SNR * float(np.max(sigma)) if noisy else 1e-9 * float(np.max(magnitude))
-    level = float(np.min(uniform_filter1d(magnitude, 5, mode="nearest"))) if noisy else float(np.min(magnitude))
+    level = float(np.min(moving_average(magnitude, 5))) if noisy else float(np.min(magnitude))
     full = np.asarray(legendre.legvander((f - centre) / scale, max(min(MAX_DEGREE, f.size - 3), 0)), np.float64)
     form = _best_form(f, trace, full, sigma, level > smallest, context.line_delay_s)
     turn = rotation(f, form.delay_s)

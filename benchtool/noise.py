@@ -12,14 +12,15 @@ lower one the lower one saw curvature, and the higher is believed.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Final
+from typing import Final, TypeVar, cast
 
 import numpy as np
-from scipy.ndimage import uniform_filter1d
 
 from benchtool.model import ComplexArray, FloatArray
 
-__all__ = ["NOISE_FREE", "NoiseModel", "estimate_noise", "line_delay", "rotation", "trend_delay"]
+__all__ = ["NOISE_FREE", "NoiseModel", "estimate_noise", "line_delay", "moving_average", "rotation", "trend_delay"]
+
+Values = TypeVar("Values", FloatArray, ComplexArray)
 
 _ORDERS: Final = (4, 6, 8)
 _NEIGHBOURS: Final = 31
@@ -46,6 +47,17 @@ class NoiseModel:
 
 
 NOISE_FREE: Final = NoiseModel(0.0, 0.0)
+
+
+def moving_average(values: Values, width: int) -> Values:
+    """Return the mean of `width` neighbours (an odd number; an even one counts one more) at each sample, (n,).
+
+    The ends go on as they are. Written out here because the library that has it takes longer to load than a sweep
+    to measure.
+    """
+    half = width // 2
+    padded = np.pad(values, half, mode="edge")
+    return cast(Values, np.convolve(padded, np.full(2 * half + 1, 1.0 / (2 * half + 1)), mode="valid"))
 
 
 def trend_delay(frequency_hz: FloatArray, s: ComplexArray) -> float:
@@ -95,11 +107,11 @@ def _local_variance(frequency_hz: FloatArray, s: ComplexArray) -> FloatArray:
             break
         weights = _difference_weights(frequency_hz, order)
         half = order // 2
-        for trace, scale in ((s, 1.0), (inverse, power)):
+        for trace, scale in ((s, np.ones_like(power)), (inverse, power)):
             windows = np.lib.stride_tricks.sliding_window_view(trace, order + 1)
-            residual = np.abs(np.einsum("ij,ij->i", windows, weights)) ** 2
-            padded = np.pad(residual, half, mode="edge") * (scale if np.isscalar(scale) else scale**2)
-            variance = uniform_filter1d(padded, min(_NEIGHBOURS, s.size), mode="nearest")
+            residual: FloatArray = np.abs(np.einsum("ij,ij->i", windows, weights)) ** 2
+            padded: FloatArray = np.pad(residual, half, mode="edge") * scale**2
+            variance = moving_average(padded, min(_NEIGHBOURS, s.size))
             best = variance if best is None else np.where(variance < _CLEARLY_LESS * best, variance, best)
     assert best is not None
     return best
@@ -117,7 +129,7 @@ def estimate_noise(frequency_hz: FloatArray, s: ComplexArray) -> NoiseModel | No
         return None
     turned = s * rotation(frequency_hz, trend_delay(frequency_hz, s))
     variance = _local_variance(frequency_hz, turned)
-    power = uniform_filter1d(np.abs(s) ** 2, 5, mode="nearest")
+    power = moving_average(np.abs(s) ** 2, 5)
     rounding = (_ROUNDING * float(np.max(np.abs(s)))) ** 2
     if float(np.median(variance)) <= rounding:
         return NOISE_FREE

@@ -18,11 +18,10 @@ from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
-from scipy.ndimage import uniform_filter1d
 
 from benchtool.fitting import Curve, fit_curve
 from benchtool.model import ComplexArray, FloatArray
-from benchtool.noise import NoiseModel, rotation, trend_delay
+from benchtool.noise import NoiseModel, moving_average, rotation, trend_delay
 from benchtool.units import HALF_POWER_DB, to_db
 
 __all__ = ["LevelWidth", "Passband", "PassbandFigures", "crossing", "plan_level_width", "plan_passband", "span_of"]
@@ -220,7 +219,7 @@ def plan_passband(
         width = int(_SMOOTHING * (right - left))
         if width < 3:
             break
-        level = to_db(uniform_filter1d(turned, width | 1, mode="nearest"))
+        level = to_db(moving_average(turned, width | 1))
         peak = start + int(np.argmax(level[start:stop]))
         left, right = _coarse_edges(level, peak)
     lower_inside, upper_inside = left > 0, right < frequency_hz.size - 1

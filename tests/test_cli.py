@@ -59,7 +59,9 @@ def test_results_json_keeps_its_contract(report):
     assert tree["format"] == "benchtool-results/1"
     assert tree["made"]["at"] == "2026-09-21T14:13:20Z"
     device = tree["devices"][0]
-    assert {"name", "verdict", "reference_sweep", "sweeps", "figures", "targets", "compression", "findings"} <= set(device)
+    assert {"name", "verdict", "reference_sweep", "sweeps", "figures", "targets", "compression", "findings"} <= set(
+        device
+    )
     assert {"file", "sha256", "points", "start_hz", "stop_hz", "measured", "drive_dbm"} <= set(device["sweeps"][0])
     assert {"input_correction_db", "output_correction_db"} <= set(device["sweeps"][0])
     gain = device["figures"]["gain"]
