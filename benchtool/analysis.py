@@ -6,19 +6,24 @@ import datetime
 import os
 from collections.abc import Callable, Sequence
 from dataclasses import replace
+from types import MappingProxyType
 
 import numpy as np
 
 from benchtool import __version__
 from benchtool.compression import MeasuredSweep, choose_reference, compare_drives, signal_to_noise_db
+from benchtool.compression_study import onset_figures, study_compression
 from benchtool.doubts import SweepDoubts, assumptions, pads_that_count, sweep_doubts
+from benchtool.drive_results import DriveStudy
 from benchtool.errors import BenchtoolError, FaultsError, SheetError, SweepFileError
 from benchtool.figures import FigurePlan, plan_figures, target_key
 from benchtool.findings import buried_parameters, device_findings, in_order
-from benchtool.model import BenchResult, DeviceResult, Figure, SignalPath, Sweep, SweepResult
+from benchtool.model import BenchResult, DeviceResult, Figure, Finding, SignalPath, Sweep, SweepResult
 from benchtool.pads import PadBank, de_embed, signal_path
+from benchtool.planning import plan_next, reference_finding
 from benchtool.response import span_of
 from benchtool.sheet import BenchSheet, Device, SweepEntry
+from benchtool.small_signal import BOUND_WHEN_COMPRESSED, carry_drive_doubt
 from benchtool.touchstone import read_sweep
 from benchtool.uncertainty import figure_trials
 from benchtool.units import format_si
@@ -135,8 +140,6 @@ def analyse_device(
         sweep_doubts(sweep.result.raw, entry, sheet, bank, at_hz)
         for sweep, entry in zip(measured, device.sweeps, strict=True)
     ]
-    findings = device_findings(device.kind, device.design_hz, measured, reference, compression, doubts)
-    used = {pad for entry in device.sweeps for pad in pads_that_count(entry, sheet)}
     own = doubts[measured.index(reference)]
     confidence = sheet.decision.confidence
     keys = [target_key(target) for target in device.targets]
@@ -150,12 +153,23 @@ def analyse_device(
         seed=number,
         deciding=keys or [next(iter(reference.plan.extractors))],
     )
-    figures = trial.figures
+    figures, values = dict(trial.figures), dict(trial.values)
+    drive, drive_findings = _study_drive(sheet, device, bank, measured, reference, at_hz)
+    if drive is not None and device.kind == "amplifier":
+        figures, values = carry_drive_doubt(figures, values, drive.onset.reference, seed=number)
+        figures.update(onset_figures(drive.onset))
+    findings = in_order(
+        (
+            *device_findings(device.kind, device.design_hz, measured, reference, compression, doubts, drive, keys),
+            *drive_findings,
+            *trial.findings,
+        )
+    )
     results = tuple(
-        judge(figures[key], target, trial.values.get(key), confidence, remedy(figures[key], bank))
+        judge(figures[key], target, values.get(key), confidence, _way_out(figures[key], bank, drive_findings))
         for key, target in zip(keys, device.targets, strict=True)
     )
-    findings = in_order((*findings, *trial.findings))
+    used = {pad for entry in device.sweeps for pad in pads_that_count(entry, sheet)}
     return DeviceResult(
         device.name,
         device.kind,
@@ -164,14 +178,56 @@ def analyse_device(
         device.window_hz,
         reference.file,
         tuple(sweep.result for sweep in measured),
-        figures,
+        MappingProxyType(figures),
         results,
         compression,
         findings,
         summarise(results, figures, findings),
+        drive,
         tuple(f"{item.what} {item.value_db:g} dB" for item in assumptions(sheet, used, bank)),
         trial.trials,
     )
+
+
+def _study_drive(
+    sheet: BenchSheet,
+    device: Device,
+    bank: PadBank,
+    measured: Sequence[MeasuredSweep],
+    reference: MeasuredSweep,
+    at_hz: float,
+) -> tuple[DriveStudy | None, tuple[Finding, ...]]:
+    """Return what the sweeps say about drive, with its findings; nothing for a passive device swept once."""
+    if device.kind != "amplifier" and len(measured) < 2:
+        return None, ()
+    study = study_compression(measured, device.sweeps, sheet, bank, at_hz, reference.file, device.kind)
+    if study is None:
+        return None, ()
+    planned = plan_next(sheet, bank, device.sweeps, study, signal_to_noise_db(reference.result.sweep, reference.plan))
+    # That a device limits at a high drive is worth knowing, but no doubt about figures that a proven reference gives.
+    harmless = study.verdict is not None and study.verdict.device_compresses and study.onset.reference.proven
+    findings = [replace(finding, severity="note") if harmless else finding for finding in study.findings]
+    if device.kind == "amplifier":
+        findings.insert(0, reference_finding(study.onset, study.verdict, planned))
+    cause = study.verdict
+    drive = DriveStudy(
+        None if cause is None else cause.code,
+        0.0 if cause is None else cause.confidence,
+        MappingProxyType({} if cause is None else {str(name): p for name, p in cause.probabilities.items()}),
+        () if cause is None else cause.pads,
+        study.onset,
+        study.map,
+        planned,
+    )
+    return drive, tuple(findings)
+
+
+def _way_out(figure: Figure, bank: PadBank, drive_findings: Sequence[Finding]) -> str:
+    """Return what would decide a target of this figure: a second drive where that is the doubt, else its budget's."""
+    unproven = [finding for finding in drive_findings if finding.code == "drive-unproven"]
+    if figure.bound is not None and figure.bound == BOUND_WHEN_COMPRESSED.get(figure.id) and unproven:
+        return unproven[0].advice
+    return remedy(figure, bank)
 
 
 def _measure(

@@ -16,11 +16,13 @@ from typing import Final, Literal, TypeAlias
 import numpy as np
 from scipy.special import gammaincc
 
+from benchtool.drive_results import PadEstimate
 from benchtool.drive_table import DriveTable
 from benchtool.model import Finding, FloatArray
+from benchtool.onset_belief import Allowances
 from benchtool.rivals import Cause, Rival, rivals
 
-__all__ = ["CauseCode", "CauseVerdict", "PadEstimate", "cause_finding", "find_cause", "for_onset"]
+__all__ = ["CauseCode", "CauseVerdict", "PadEstimate", "allowances", "cause_finding", "find_cause"]
 
 CauseCode: TypeAlias = Literal[
     "clean",
@@ -43,8 +45,12 @@ _MISFIT: Final = 1e-6
 """Chance of a misfit as large as the best rival's below which no rival is believed."""
 _BURIED_SHARE: Final = 0.2
 """Share of a sweep's span under its noise from which the noise is worth a word."""
-_DOUBTED_PAD_DB: Final = 3.0
-_UNSPOILED_DB: Final = 0.1
+_DOUBTED_PAD_DB: Final = 6.0
+"""Standard uncertainty of a pad that may be another pad altogether."""
+_UNSPOILED_DB: Final = 0.2
+"""A sweep that may have lost less than this in the receiver can still bear on the device."""
+_UNSTEADY_DB: Final = 1.0
+"""Standard uncertainty of each sweep of a device that does not repeat."""
 _CODE: Final[Mapping[Cause, CauseCode]] = {
     "clean": "clean",
     "output-limited": "output-limited",
@@ -61,19 +67,6 @@ _WORDS: Final[Mapping[Cause, str]] = {
     "pad-value": "a pad is not what the sheet says",
     "not-repeating": "the device or set-up changed between sweeps",
 }
-
-
-@dataclass(frozen=True)
-class PadEstimate:
-    """What a suspect pad would truly lose, in dB, with its interval, if the pad alone explains the sweeps."""
-
-    name: str
-    stated_db: float
-    value_db: float
-    low_db: float
-    high_db: float
-    probability: float
-    """That this pad, and nothing else, is the cause."""
 
 
 @dataclass(frozen=True)
@@ -120,7 +113,8 @@ def _decide(table: DriveTable, share: Mapping[Cause, float], best: Rival) -> tup
     top = max(share, key=lambda cause: share[cause])
     flat = share["input-limited"] + share["pad-value"] + share["not-repeating"]
     if float(gammaincc(best.freedom / 2.0, best.chi2 / 2.0)) < _MISFIT:
-        return "cause-unclear", 0.0
+        # Whatever else is at work, sweeps of one line that disagree did not repeat.
+        return ("cause-unclear", 0.0) if table.repeats() else ("reference-not-repeating", share["not-repeating"])
     if share["clean"] >= _CLEAN:
         return ("noise-limited" if noisy else "clean"), share["clean"]
     if share[top] >= _NAMED:
@@ -144,24 +138,38 @@ def _pads(table: DriveTable, found: tuple[Rival, ...], confidence: float) -> tup
     return tuple(estimates)
 
 
-def for_onset(table: DriveTable, verdict: CauseVerdict) -> tuple[frozenset[str], Mapping[str, float]]:
-    """Return the sweeps that may not show where the device compresses, and the pads whose value must be left open.
+def allowances(table: DriveTable, verdict: CauseVerdict) -> Allowances:
+    """Return what an onset of compression must allow for, the cause being what it is.
 
-    Those are sweeps that the receiver or a change of the set-up may have spoiled. A pad that may be off keeps no value
-    of its own (its standard uncertainty is returned, dB), so that an onset rests on what the sweeps show in spite of it.
+    Sweeps that the receiver, or a change of the set-up, may have spoiled are left out. A pad that may be off keeps no
+    value of its own, and sweeps that did not repeat little, so that an onset rests on what they show for all that.
     """
+    p = verdict.probabilities
     if verdict.device_compresses:
-        return frozenset(), {}
+        return Allowances(at_output=_level_at_output(verdict))
     doubtful = verdict.code in ("pad-value-suspect", "input-limited-or-pad", "cause-unclear")
     likely = [pad for pad in verdict.pads if pad.probability >= _STILL_POSSIBLE]
     doubted = {pad.name: _DOUBTED_PAD_DB for pad in likely} if doubtful else {}
     spoiled: set[str] = set()
-    if verdict.odd_sweep is not None and verdict.probabilities["not-repeating"] >= _STILL_POSSIBLE:
+    unsteady = _UNSTEADY_DB if verdict.code == "reference-not-repeating" else 0.0
+    if verdict.odd_sweep is not None and p["not-repeating"] >= _STILL_POSSIBLE:
         spoiled.add(verdict.odd_sweep)
-    if verdict.probabilities["receiver-overload"] >= _STILL_POSSIBLE:
+    if p["receiver-overload"] >= _STILL_POSSIBLE:
         lost = _receiver_drop(table, verdict)
         spoiled |= {file for file, drop in zip(table.files, lost, strict=True) if drop >= _UNSPOILED_DB}
-    return frozenset(spoiled), doubted
+        unsteady = max(unsteady, _UNSPOILED_DB)
+    return Allowances(MappingProxyType(doubted), frozenset(spoiled), unsteady)
+
+
+def _level_at_output(verdict: CauseVerdict) -> tuple[float, float] | None:
+    """Return the level at the output of the 1 dB point that the whole sweep shows, dBm, and its standard uncertainty.
+
+    None unless the device was found to limit at its output.
+    """
+    if verdict.code != "output-limited":
+        return None
+    rival = next(rival for rival in verdict.rivals if rival.cause == "output-limited")
+    return None if rival.value is None or rival.u is None else (rival.value, rival.u)
 
 
 def _receiver_drop(table: DriveTable, verdict: CauseVerdict) -> FloatArray:
@@ -220,10 +228,12 @@ def _sure(verdict: CauseVerdict) -> str:
 
 
 def _value(verdict: CauseVerdict, cause: Cause) -> str:
+    """Return the 1 dB point as text: the level that is truly reached there, 1 dB below what the gain would make it."""
     rival = next(rival for rival in verdict.rivals if rival.cause == cause)
     if rival.value is None or rival.u is None:
         return "not known"
-    return f"{rival.value:.1f} dBm ± {1.96 * rival.u:.1f} dB"
+    reached = rival.value - (0.0 if cause == "input-limited" else 1.0)
+    return f"{reached:.1f} dBm ± {1.96 * rival.u:.1f} dB"
 
 
 def _output_limited(table: DriveTable, verdict: CauseVerdict) -> Finding:

@@ -48,6 +48,10 @@ OutputPad = Annotated[
 ]
 
 
+_PLANNING_TRIALS = 200
+"""Trials of a command that shows no interval."""
+
+
 def main() -> NoReturn:
     """Run the command line; a fault of the input is one line on standard error and exit status 2."""
     from benchtool.errors import BenchtoolError
@@ -203,6 +207,22 @@ def inspect(
             print_sweep(sweep)
     if faults:
         raise typer.Exit(2)
+
+
+@app.command("next")
+def next_sweeps(
+    bench: Bench,
+    strict: Strict = False,
+    design: Design = None,
+    source: Source = None,
+    input_pad: InputPad = None,
+    output_pad: OutputPad = None,
+) -> None:
+    """Name the two or three sweeps most worth taking next, with pads, levels, and what each would settle."""
+    from benchtool.terminal import print_next
+
+    sheet, _ = _load(bench, design, source, input_pad, output_pad)
+    print_next(_analyse(sheet, strict, _PLANNING_TRIALS))
 
 
 @app.command()

@@ -8,30 +8,23 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Final
 
 import numpy as np
 
-from benchtool.causes import CauseVerdict, cause_finding, find_cause, for_onset
+from benchtool.causes import CauseVerdict, allowances, cause_finding, find_cause
 from benchtool.compression import MeasuredSweep
+from benchtool.drive_results import CompressionMap, Estimate, Onset
 from benchtool.drive_table import DriveTable, drive_table
-from benchtool.model import Figure, Finding, FloatArray
-from benchtool.onset import Estimate, Onset, estimate_onset
+from benchtool.model import Figure, Finding, Kind
+from benchtool.onset import estimate_onset
+from benchtool.onset_belief import NOTHING_KNOWN
 from benchtool.pads import PadBank
 from benchtool.sheet import BenchSheet, SweepEntry
 
 __all__ = ["CompressionMap", "CompressionStudy", "onset_figures", "study_compression"]
 
-_MAP_DRIVES = 3
-
-
-@dataclass(frozen=True, eq=False)
-class CompressionMap:
-    """Compression over frequency and drive: `compression_db` (k, j), below the lowest drive's gain."""
-
-    frequency_hz: FloatArray
-    drive_dbm: FloatArray
-    files: tuple[str, ...]
-    compression_db: FloatArray
+_MAP_DRIVES: Final = 3
 
 
 @dataclass(frozen=True, eq=False)
@@ -52,6 +45,7 @@ def study_compression(
     bank: PadBank,
     at_hz: float,
     reference: str,
+    kind: Kind = "amplifier",
 ) -> CompressionStudy | None:
     """Return the study of a device's sweeps; None where they have no span, or not `at_hz`, in common.
 
@@ -60,16 +54,17 @@ def study_compression(
     sweeps, entries : sweeps at the device's ports and their lines in the sheet, in the same order
     at_hz : the design frequency
     reference : file of the sweep that figures are taken from
+    kind : of the device; a passive one is not missed a 1 dB point
     """
     table = drive_table(sweeps, entries, sheet, bank, at_hz)
     if table is None:
         return None
     confidence = sheet.decision.confidence
     verdict = find_cause(table, confidence)
-    spoiled, doubted = (frozenset[str](), {}) if verdict is None else for_onset(table, verdict)
-    onset = estimate_onset(table, reference, confidence, doubted_pads=doubted, spoiled=spoiled)
+    allow = NOTHING_KNOWN if verdict is None else allowances(table, verdict)
+    onset = estimate_onset(table, reference, confidence, allow)
     finding = None if verdict is None else cause_finding(table, verdict)
-    unknown = _onset_unknown(onset, table)
+    unknown = _onset_unknown(onset, table) if kind == "amplifier" else None
     found = tuple(each for each in (finding, unknown) if each is not None)
     return CompressionStudy(table, verdict, onset, _map(table), found)
 

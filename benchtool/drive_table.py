@@ -111,6 +111,24 @@ class DriveTable:
         mean = np.mean(self.gain_db, axis=0)
         return np.asarray(-np.gradient(mean, f) * 0.01 * (f[-1] - f[0]))
 
+    @property
+    def bend_db(self) -> FloatArray:
+        """Second-order gain change in dB at each node for the same shift in tuning, (j,)."""
+        f = self.frequency_hz
+        if f.size < 3:
+            return np.zeros(f.size)
+        return np.asarray(-np.gradient(self.slope_db, f) * 0.01 * (f[-1] - f[0]))
+
+    def repeats(self) -> bool:
+        """Whether sweeps that were taken again agree within their own doubts (four standard uncertainties)."""
+        for a, b in self.taken_again():
+            doubt = (
+                self.noise_db[a] ** 2 + self.noise_db[b] ** 2 + self.reading_u_db[a] ** 2 + self.reading_u_db[b] ** 2
+            )
+            if np.any(np.abs(self.gain_db[a] - self.gain_db[b]) > 4.0 * np.sqrt(doubt)):
+                return False
+        return True
+
     def taken_again(self) -> tuple[tuple[int, int], ...]:
         """Return pairs of sweeps that were taken with the same source level and the same pads."""
         k = range(self.sweeps)

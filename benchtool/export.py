@@ -17,6 +17,7 @@ import numpy as np
 
 from benchtool import __version__
 from benchtool.analysis import correct_sweep, read_all
+from benchtool.drive_results import Estimate
 from benchtool.errors import OutputError
 from benchtool.model import BenchResult, DeviceResult, Figure, SweepResult
 from benchtool.pads import PadBank
@@ -176,6 +177,66 @@ def _compression(device: DeviceResult) -> dict[str, Any]:
     }
 
 
+def _estimate(found: Estimate) -> dict[str, Any]:
+    return {"value": _number(found.value), "low": _number(found.low), "high": _number(found.high), "bound": found.bound}
+
+
+def _drive(device: DeviceResult) -> dict[str, Any] | None:
+    study = device.drive
+    if study is None:
+        return None
+    onset = study.onset
+    return {
+        "cause": study.cause,
+        "confidence": _number(study.confidence),
+        "probabilities": {name: _number(share) for name, share in study.probabilities.items()},
+        "pads": [
+            {
+                "name": pad.name,
+                "stated_db": pad.stated_db,
+                "value_db": pad.value_db,
+                "low_db": pad.low_db,
+                "high_db": pad.high_db,
+                "probability": pad.probability,
+            }
+            for pad in study.pads
+        ],
+        "basis": onset.basis,
+        "drives": onset.drives,
+        "safe_drive_dbm": _estimate(onset.safe_drive_dbm),
+        "small_signal_gain_db": _estimate(onset.small_signal_gain_db),
+        "reference_proven": onset.reference.proven,
+        "reference_reads_low_db": _estimate(onset.reference.reads_low_db),
+        "points": [
+            {
+                "file": point.file,
+                "drive_dbm": _number(point.drive_dbm),
+                "gain_db": _estimate(point.gain_db),
+                "compression_db": _estimate(point.compression_db),
+                "uncompressed_gain_db": _number(point.uncompressed_gain_db),
+                "phase_change_deg": _estimate(point.phase_change_deg),
+                "phase_deg_per_db": _number(point.phase_deg_per_db),
+                "spoiled": point.spoiled,
+            }
+            for point in onset.points
+        ],
+        "next_sweeps": [
+            {
+                "input_pads": list(sweep.input_pads),
+                "output_pads": list(sweep.output_pads),
+                "source_dbm": _number(sweep.source_dbm),
+                "drive_dbm": _number(sweep.drive_dbm),
+                "device_output_dbm": _number(sweep.device_output_dbm),
+                "port2_dbm": _number(sweep.port2_dbm),
+                "headroom_db": _number(sweep.headroom_db),
+                "settles": sweep.settles,
+                "cautions": list(sweep.cautions),
+            }
+            for sweep in study.next_sweeps
+        ],
+    }
+
+
 def _device(device: DeviceResult) -> dict[str, Any]:
     return {
         "name": device.name,
@@ -199,6 +260,7 @@ def _device(device: DeviceResult) -> dict[str, Any]:
             for target in device.targets
         ],
         "compression": _compression(device),
+        "drive": _drive(device),
         "findings": [
             {
                 "code": finding.code,

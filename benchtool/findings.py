@@ -6,7 +6,7 @@ in :func:`device_findings`, and list the code in the README.
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Collection, Iterable, Iterator, Sequence
 from dataclasses import replace
 from typing import Final
 
@@ -14,6 +14,7 @@ import numpy as np
 
 from benchtool.compression import MeasuredSweep, signal_to_noise_db
 from benchtool.doubts import SweepDoubts
+from benchtool.drive_results import DriveStudy
 from benchtool.match import BURIED_UNCERTAINTY
 from benchtool.model import Compression, Finding, Kind
 from benchtool.phase import ambiguous_steps
@@ -30,7 +31,6 @@ _OFF_DESIGN: Final = 0.25
 """Distance of the peak from the design frequency, as a share of the half-power band, that is worth a word."""
 _Q_DISAGREES: Final = 0.05
 _NOISY_SNR_DB: Final = 20.0
-_AGREE_DB: Final = 0.1
 
 
 def device_findings(
@@ -40,19 +40,25 @@ def device_findings(
     reference: MeasuredSweep,
     compression: Compression | None,
     doubts: Sequence[SweepDoubts],
+    drive: DriveStudy | None = None,
+    targets: Collection[str] = (),
 ) -> tuple[Finding, ...]:
-    """Return the findings of one device, worst first, in the order of the sweeps within one severity."""
+    """Return the findings of one device, worst first, in the order of the sweeps within one severity.
+
+    Findings about causes and onset come with the study `drive`; without one, what can be said of drive is said here.
+    `targets` are the figures that were asked for: a doubt about another figure is only a note.
+    """
     found: list[Finding] = []
     for sweep in sweeps:
         found += sweep.result.raw.findings
         found += _receiver_level(sweep)
         found += _noise(sweep)
     found += reference.plan.findings
-    found += _drive(kind, sweeps, reference, compression)
+    found += _drive(kind, sweeps, reference, compression, drive)
     found += _shape(reference)
     found += _against_design(kind, design_hz, reference)
     found += _cross_checks(kind, reference)
-    found += _buried(reference, doubts[sweeps.index(reference)])
+    found += _buried(reference, doubts[sweeps.index(reference)], targets)
     return in_order(_together(list(dict.fromkeys(found))))
 
 
@@ -117,7 +123,11 @@ def _noise(sweep: MeasuredSweep) -> Iterator[Finding]:
 
 
 def _drive(
-    kind: Kind, sweeps: Sequence[MeasuredSweep], reference: MeasuredSweep, compression: Compression | None
+    kind: Kind,
+    sweeps: Sequence[MeasuredSweep],
+    reference: MeasuredSweep,
+    compression: Compression | None,
+    drive: DriveStudy | None,
 ) -> Iterator[Finding]:
     if any(sweep.drive_dbm is None for sweep in sweeps):
         yield Finding(
@@ -126,43 +136,27 @@ def _drive(
             "the source level is not known, so no drive and no level at port 2 can be worked out",
             "enter analyzer.source_dbm in the sheet (the level leaving port 1, before any pad)",
         )
-    for point in compression.points if compression else ():
+    proven = drive is not None and drive.onset.reference.proven
+    for point in compression.points if compression is not None else ():
         if point.compressed:
-            drive = "its drive" if point.drive_dbm is None else f"{point.drive_dbm:.1f} dBm drive"
+            level = "its drive" if point.drive_dbm is None else f"{point.drive_dbm:.1f} dBm drive"
             yield Finding(
                 "compressed-sweep",
-                "caution",
-                f"{point.file}: gain is {point.worst_db:.1f} dB down at {format_si(point.worst_at_hz, 'Hz')} at "
-                f"{drive} against {compression.reference if compression else ''}; its peak, bandwidth and Q are not "
+                "note" if proven else "caution",
+                f"{point.file}: at {format_si(point.worst_at_hz, 'Hz')} and {level} "
+                f"gain is {point.worst_db:.1f} dB down on {reference.file}; its peak, bandwidth and Q are not "
                 "the device's and were not used",
-                f"take figures from sweeps with at least {point.worst_db + 10.0:.0f} dB more input pad",
+                f"to take figures at that source level, add {point.worst_db + 10.0:.0f} dB of input pad",
                 point.file,
             )
-    if kind != "amplifier":
-        return
-    if len(sweeps) == 1:
+    if kind == "amplifier" and drive is None:
         yield Finding(
             "drive-unproven",
             "caution",
-            f"{reference.file} is the only drive, so nothing shows that the device was not compressed: its gain may "
-            "read low and its band wide",
-            "sweep again with 10 dB more input pad; if the gain agrees, this sweep stands",
+            f"nothing shows that {reference.file} was not compressed: its gain may read low and its band wide",
+            "sweep again over the same span with 10 dB more input pad; if the gain agrees, this sweep stands",
             reference.file,
         )
-    elif compression is not None and not _proven(compression, reference):
-        yield Finding(
-            "drive-unproven",
-            "caution",
-            f"no second sweep agrees with {reference.file} within {_AGREE_DB} dB, so it may itself be compressed",
-            "sweep again with 10 dB more input pad; if the gain agrees, the reference stands",
-            reference.file,
-        )
-
-
-def _proven(compression: Compression, reference: MeasuredSweep) -> bool:
-    """Whether a second sweep, at another drive, shows the reference's gain."""
-    others = [point for point in compression.points if point.file != reference.file]
-    return any(abs(point.compression_db) <= _AGREE_DB and point.worst_db <= 2 * _AGREE_DB for point in others)
 
 
 def _shape(reference: MeasuredSweep) -> Iterator[Finding]:
@@ -292,12 +286,12 @@ def buried_parameters(sweep: MeasuredSweep, doubts: SweepDoubts) -> dict[str, fl
     }
 
 
-def _buried(sweep: MeasuredSweep, doubts: SweepDoubts) -> Iterator[Finding]:
+def _buried(sweep: MeasuredSweep, doubts: SweepDoubts, wanted: Collection[str]) -> Iterator[Finding]:
     for name, doubt in buried_parameters(sweep, doubts).items():
         side = "input" if name == "S11" else "output"
         yield Finding(
             "return-loss-buried",
-            "caution",
+            "caution" if f"{side}_return_loss" in wanted else "note",
             f"{sweep.file}: {name} was read through the added {side} pads twice, so its magnitude is uncertain by "
             f"{doubt:.2g} and the {side} return loss is withheld",
             f"sweep {name} once without the added {side} pad (the device unpowered or at a drive it stands), or "

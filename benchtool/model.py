@@ -13,8 +13,9 @@ from types import MappingProxyType
 from typing import Any, Literal, TypeAlias, cast
 
 import numpy as np
-from numpy.typing import NDArray
 
+from benchtool.aliases import Bound, ComplexArray, FloatArray
+from benchtool.drive_results import DriveStudy
 from benchtool.units import format_si
 
 __all__ = [
@@ -41,12 +42,9 @@ __all__ = [
     "readonly",
 ]
 
-FloatArray: TypeAlias = NDArray[np.float64]
-ComplexArray: TypeAlias = NDArray[np.complex128]
 Kind: TypeAlias = Literal["amplifier", "filter", "network"]
 Severity: TypeAlias = Literal["note", "caution", "fault"]
 Verdict: TypeAlias = Literal["met", "missed", "undecided", "none"]
-Bound: TypeAlias = Literal["at least", "at most"]
 
 PARAMETERS = ("S11", "S21", "S12", "S22")
 """The four scattering parameters in the order a two-port Touchstone row has them."""
@@ -294,6 +292,8 @@ class DeviceResult:
     compression: Compression | None
     findings: tuple[Finding, ...]
     summary: Summary
+    drive: DriveStudy | None = None
+    """What the sweeps say about drive; None where they have no span in common, or the device is passive."""
     assumptions: tuple[str, ...] = ()
     """Widths of doubts that the sheet does not state and that were assumed, a phrase for each."""
     trials: int = 0

@@ -73,6 +73,8 @@ STYLE: Final[dict[Any, Any]] = {
     "text.hinting": "no_hinting",
     "axes.unicode_minus": True,
     "pdf.fonttype": 42,
+    # matplotlib groups the glyphs of a PDF by this setting; at its default, 3, every font is subset and embedded twice.
+    "ps.fonttype": 42,
     "axes.linewidth": 0.6,
     "axes.edgecolor": LIGHT,
     "xtick.color": LIGHT,

@@ -18,7 +18,7 @@ taken at its best value, those over the law are sums on a grid that closes in on
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Final, Literal, TypeAlias
 
 import numpy as np
@@ -47,17 +47,24 @@ _REACH_ABOVE_DB: Final = 6.0
 """How far below and above the strongest level the 1 dB point may lie."""
 _LEAST_DROP_DB: Final = 0.2
 """A drop that is worth a cause."""
-_LAW_DOUBT: Final = 0.03
-"""Share of a drop by which real devices stray from every law."""
+_LAW_DOUBT: Final = 0.02
+_LAW_ROUGHNESS: Final = 0.005
+"""Share of a drop by which real devices stray from every law: alike over one sweep, and from node to node."""
+_DETUNING: Final = 0.1
+"""Standard deviation of how far limiting tunes a device off, in hundredths of the span of the nodes for each dB."""
+_DETUNES_SHARE: Final = 0.3
+"""Share of belief that it does so at all."""
 _RECEIVER_AT_DB: Final = 1.0
 _RECEIVER_SPREAD_DB: Final = 3.0
 """The 1 dB point of the receiver over the level from which it is stated to compress: mean and standard deviation."""
 _RECEIVER_UNSTATED: Final = (0.0, 7.0)
 """The 1 dB point in dBm of a low-cost receiver of which nothing is stated: mean and standard deviation (common
 practice, no source)."""
-_OFFSET_DB: Final = 1.5
-"""Standard deviation of what a wrong pad value, or a sweep that does not repeat, is off by."""
+_OFFSETS_DB: Final = ((1.5, 0.8), (6.0, 0.2))
+"""Standard deviations, and their shares, of what a wrong pad or a sweep that does not repeat is off by: a value that is
+not right, or another pad altogether."""
 _RESTLESS_DB: Final = 0.7
+_RESTLESS_TUNING: Final = 1.0
 _TUNING: Final = 3.0
 """Standard deviation of a shift in tuning, in hundredths of the span of the nodes."""
 _LEAST_U_DB: Final = 0.005
@@ -146,36 +153,68 @@ def _flat_covariance(table: DriveTable, but_for: str) -> FloatArray:
 
 
 def _weigh(
-    table: DriveTable, left: FloatArray, slope: FloatArray, drop: FloatArray, extras: Sequence[_Extra]
+    table: DriveTable,
+    left: FloatArray,
+    slope: FloatArray,
+    drop: FloatArray,
+    extras: Sequence[_Extra] = (),
+    detunes: bool = False,
 ) -> _Evidence:
     """Return the evidence of what is `left` (G, k, j) after a drop, whose readings move by `slope` with g_j."""
-    k, nodes = table.gain_db.shape
-    weight = 1.0 / (table.noise_db**2 + (_LAW_DOUBT * drop) ** 2)
+    weight = 1.0 / (table.noise_db**2 + (_LAW_ROUGHNESS * drop) ** 2)
     moves = weight * slope
     per_node = np.sum(moves * slope, axis=1)
-    project = (
-        np.einsum("gkj,kl->gjkl", weight, np.eye(k))
-        - np.einsum("gkj,glj->gjkl", moves, moves) / per_node[..., None, None]
-    )
-    basis = np.zeros((nodes, k, k + len(extras)))
-    basis[:, :, :k] = np.eye(k)
-    prior = np.zeros((k + len(extras), k + len(extras)))
-    prior[:k, :k] = np.linalg.inv(_flat_covariance(table, next((extra.pad for extra in extras if extra.pad), "")))
-    for i, extra in enumerate(extras, start=k):
-        basis[:, :, i] = extra.pattern.T
-        prior[i, i] = extra.u**-2
-    seen = np.einsum("gjkl,jlm->gjkm", project, basis)
-    curvature = np.einsum("jkm,gjkn->gmn", basis, seen) + prior
-    pull = np.einsum("gjkm,gkj->gm", seen, left)
+    basis, prior = _freedoms(table, drop, extras, detunes)
+
+    def project(columns: FloatArray) -> FloatArray:
+        """Return columns (G, k, j, m) weighted, with what g_j can take up taken out."""
+        own = np.einsum("gkj,gkjm->gjm", moves, columns) / per_node[..., None]
+        return np.asarray(weight[..., None] * columns - moves[..., None] * own[:, None])
+
+    seen = project(basis)
+    shape = (left.shape[0], -1, basis.shape[-1])
+    flat, columns, rest = seen.reshape(shape), basis.reshape(shape), left.reshape(left.shape[0], -1, 1)
+    curvature = np.swapaxes(columns, 1, 2) @ flat + prior
+    pull = (np.swapaxes(flat, 1, 2) @ rest)[..., 0]
     spread = np.linalg.inv(curvature)
     mean = np.einsum("gmn,gn->gm", spread, pull)
-    chi2 = np.einsum("gkj,gjkl,glj->g", left, project, left) - np.einsum("gm,gm->g", pull, mean)
+    chi2 = np.sum(left * project(left[..., None])[..., 0], axis=(1, 2)) - np.sum(pull * mean, axis=1)
     # The part of the normalisation that g_j takes is left at its value without a law: a saturated device, whose
     # readings say nothing of g_j, must not be the more likely for it.
     normal = 0.5 * np.sum(np.log(weight), axis=(1, 2)) - 0.5 * np.sum(np.log(np.sum(weight, axis=1)), axis=1)
     occam = 0.5 * (np.linalg.slogdet(prior)[1] - np.linalg.slogdet(curvature)[1])
     variance = np.diagonal(spread, axis1=1, axis2=2)
-    return _Evidence(normal + occam - 0.5 * chi2, chi2, mean[:, k:], np.sqrt(variance[:, k:]))
+    first = basis.shape[-1] - len(extras)
+    return _Evidence(normal + occam - 0.5 * chi2, chi2, mean[:, first:], np.sqrt(variance[:, first:]))
+
+
+def _freedoms(
+    table: DriveTable, drop: FloatArray, extras: Sequence[_Extra], detunes: bool
+) -> tuple[FloatArray, FloatArray]:
+    """Return what the priors leave free, (G, k, j, m), and its precision, (m, m).
+
+    First the flat doubts of each sweep, then how far the law may be out in each and, if it `detunes`, how far limiting
+    tunes the device off, then the extras.
+    """
+    trials, k, nodes = drop.shape
+    each = np.eye(k)[:, None, :]
+    flat = np.broadcast_to(each, (trials, k, nodes, k))
+    parts: list[FloatArray] = [flat]
+    widths: list[float] = []
+    if np.any(drop):
+        parts.append(drop[..., None] * each)
+        widths += [_LAW_DOUBT] * k
+    if detunes:
+        parts.append(np.max(drop, axis=2)[..., None, None] * table.slope_db[:, None] * each)
+        widths += [_DETUNING] * k
+    parts += [np.broadcast_to(extra.pattern[..., None], (trials, k, nodes, 1)) for extra in extras]
+    basis = np.concatenate(parts, axis=-1)
+    precision = np.zeros((basis.shape[-1],) * 2)
+    replaced = next((extra.pad for extra in extras if extra.pad), "")
+    precision[:k, :k] = np.linalg.inv(_flat_covariance(table, replaced))
+    for i, u in enumerate([*widths, *(extra.u for extra in extras)], start=k):
+        precision[i, i] = u**-2
+    return basis, precision
 
 
 def _without_law(table: DriveTable, cause: Cause, about: str, extras: Sequence[_Extra], share: float = 1.0) -> _Weighed:
@@ -188,12 +227,23 @@ def _without_law(table: DriveTable, cause: Cause, about: str, extras: Sequence[_
     return _Weighed(cause, about, log_weight, value, u, float(evidence.chi2[0]))
 
 
+def _offset(
+    table: DriveTable, cause: Cause, about: str, flat: _Extra, others: tuple[_Extra, ...], share: float
+) -> _Weighed:
+    """Return the rival in which something is off by a small or, less likely, a large offset."""
+    parts = [
+        _without_law(table, cause, about, [replace(flat, u=spread), *others], share * of_them)
+        for spread, of_them in _OFFSETS_DB
+    ]
+    return _merge(cause, about, parts)
+
+
 def _pad_values(table: DriveTable) -> Iterator[_Weighed]:
     """Yield one rival for each pad that the sweeps could show to be off."""
     visible = [pad for pad in table.pads if np.ptp(pad.reads) > 0.0]
     for pad in visible:
         pattern = np.repeat(pad.reads[:, None], table.frequency_hz.size, axis=1)
-        yield _without_law(table, "pad-value", pad.name, [_Extra(pattern, _OFFSET_DB, pad.name)], 1.0 / len(visible))
+        yield _offset(table, "pad-value", pad.name, _Extra(pattern, 1.0, pad.name), (), 1.0 / len(visible))
 
 
 def _not_repeating(table: DriveTable) -> Iterator[_Weighed]:
@@ -202,20 +252,40 @@ def _not_repeating(table: DriveTable) -> Iterator[_Weighed]:
     each = [np.outer(np.eye(k)[i], np.ones(slope.size)) for i in range(k)]
     tuned = [np.outer(np.eye(k)[i], slope) for i in range(k)]
     for i, file in enumerate(table.files):
-        flat, shift = _Extra(each[i], _OFFSET_DB), _Extra(tuned[i], _TUNING)
-        yield _without_law(table, "not-repeating", file, [flat], 0.4 / k)
-        yield _without_law(table, "not-repeating", file, [flat, shift], 0.3 / k)
-    all_of_it = [_Extra(pattern, _RESTLESS_DB) for pattern in each] + [_Extra(pattern, 1.0) for pattern in tuned]
-    yield _without_law(table, "not-repeating", "", all_of_it, 0.3)
+        flat, shift = _Extra(each[i], 1.0), _Extra(tuned[i], _TUNING)
+        yield _offset(table, "not-repeating", file, flat, (), 0.4 / k)
+        yield _offset(table, "not-repeating", file, flat, (shift,), 0.3 / k)
+    widened = [np.outer(np.eye(k)[i], table.bend_db) for i in range(k)]
+    restless = [_Extra(pattern, _RESTLESS_DB) for pattern in each]
+    restless += [_Extra(pattern, _RESTLESS_TUNING) for pattern in (*tuned, *widened)]
+    yield _without_law(table, "not-repeating", "", restless, 0.3)
 
 
 def _limiting(table: DriveTable, cause: Cause) -> _Weighed:
     """Return the rival in which gain drops with the level at the output, at the input, or at port 2."""
-    parts = [_over_law(table, cause, Law("tanh"), 0.1), _over_law(table, cause, Law("cubic"), 0.1)]
-    parts.append(_over_law(table, cause, None, 0.8))
+    laws = ((Law("tanh"), 0.1), (Law("cubic"), 0.1), (None, 0.8))
+    if cause != "output-limited":
+        return _merge(cause, "", [_over_law(table, cause, law, share) for law, share in laws])
+    # A tuned output that limits may also be pulled in tune; that is one of two ways, not a freedom for all.
+    ways = ((False, 1.0 - _DETUNES_SHARE), (True, _DETUNES_SHARE))
+    return _merge(
+        cause,
+        "",
+        [_over_law(table, cause, law, share * way, detunes) for law, share in laws for detunes, way in ways],
+    )
+
+
+def _merge(cause: Cause, about: str, parts: Sequence[_Weighed]) -> _Weighed:
+    """Return variants of one rival as one: weights added, the estimate a mixture."""
+    parts = [part for part in parts if part.value is not None]
+    if not parts:
+        return _Weighed(cause, about, -np.inf, None, None, float("inf"))
     total = float(np.logaddexp.reduce([part.log_weight for part in parts]))
-    best = max(parts, key=lambda part: part.log_weight)
-    return _Weighed(cause, "", total, best.value, best.u, best.chi2)
+    belief = np.exp([part.log_weight - total for part in parts])
+    places, spreads = np.array([part.value for part in parts]), np.array([part.u for part in parts])
+    value = float(belief @ places)
+    u = float(np.sqrt(belief @ (spreads**2 + (places - value) ** 2)))
+    return _Weighed(cause, about, total, value, u, min(part.chi2 for part in parts))
 
 
 def _level_offset(table: DriveTable, cause: Cause) -> FloatArray:
@@ -233,7 +303,7 @@ def _log_level_prior(table: DriveTable, cause: Cause, p1db: FloatArray) -> Float
     return np.asarray(-0.5 * ((p1db - mean) / spread) ** 2 - np.log(spread * np.sqrt(2 * np.pi)))
 
 
-def _over_law(table: DriveTable, cause: Cause, law: Law | None, share: float) -> _Weighed:
+def _over_law(table: DriveTable, cause: Cause, law: Law | None, share: float, detunes: bool = False) -> _Weighed:
     """Return the evidence over the 1 dB point and, where `law` is None, over Rapp's p, on a grid that closes in."""
     offset = _level_offset(table, cause)
     follows = cause != "input-limited"
@@ -245,7 +315,7 @@ def _over_law(table: DriveTable, cause: Cause, law: Law | None, share: float) ->
         shape = np.linspace(soft, hard, 9) if law is None else np.zeros(1)
         p1db = np.repeat(place, shape.size)
         left, slope, drop = _fit_gain(table, offset, p1db, np.tile(shape, place.size), law, follows)
-        evidence = _weigh(table, left, slope, drop, [])
+        evidence = _weigh(table, left, slope, drop, detunes=detunes)
         log = evidence.log + _log_level_prior(table, cause, p1db)
         log = np.where(np.max(drop, axis=(1, 2)) >= _LEAST_DROP_DB, log, -np.inf)
         grid = log.reshape(place.size, shape.size)

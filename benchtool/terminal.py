@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from pathlib import Path
 from typing import Final
 
@@ -9,11 +10,11 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
-from benchtool.digits import figure_label, interval_text, limits_text, value_text
+from benchtool.digits import figure_label, interval_text, level_text, limits_text, value_text
 from benchtool.model import BenchResult, DeviceResult, Sweep
 from benchtool.units import format_si, to_db
 
-__all__ = ["print_result", "print_sweep"]
+__all__ = ["print_next", "print_result", "print_sweep"]
 
 _PIPED_WIDTH: Final = 160
 _STYLES: Final = {"met": "green", "missed": "red", "undecided": "yellow", "none": "dim"}
@@ -63,6 +64,39 @@ def print_result(result: BenchResult, folder: Path) -> None:
             console.print(_literal(line), soft_wrap=True)
         console.print()
     console.print(_literal(f"Written to {folder}"), soft_wrap=True)
+
+
+def print_next(result: BenchResult) -> None:
+    """Print the sweeps most worth taking next, for each device, with their levels and cautions."""
+    console = _console()
+    for device in result.devices:
+        planned = device.drive.next_sweeps if device.drive is not None else ()
+        console.print(_literal(device.name), soft_wrap=True)
+        if not planned:
+            console.print("  nothing more to settle about drive")
+        for number, sweep in enumerate(planned, start=1):
+            lines = [f"  {number}. {_side('input', sweep.input_pads)}; {_side('output', sweep.output_pads)}"]
+            lines.append(
+                f"     drive {level_text(sweep.drive_dbm)}, device output {level_text(sweep.device_output_dbm)}, "
+                f"port 2 {level_text(sweep.port2_dbm)}{_headroom(sweep.headroom_db)}"
+            )
+            lines.append(f"     settles: {sweep.settles}")
+            lines += [f"     caution: {caution}" for caution in sweep.cautions]
+            for line in lines:
+                console.print(_literal(line), soft_wrap=True)
+        console.print()
+    console.print(
+        "Check pad power ratings and port limits before power is applied; an amplifier under test may oscillate.",
+        soft_wrap=True,
+    )
+
+
+def _side(side: str, pads: Sequence[str]) -> str:
+    return f"{side} pads, from the analyzer: {', '.join(pads) if pads else 'none'}"
+
+
+def _headroom(headroom_db: float | None) -> str:
+    return "" if headroom_db is None else f" ({headroom_db:.1f} dB below the limit)"
 
 
 def print_sweep(sweep: Sweep) -> None:

@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
+from statistics import NormalDist
 from typing import Final
 
 import numpy as np
@@ -33,7 +34,8 @@ def judge(
     Parameters
     ----------
     figure, target : of the same id
-    values : the values the figure may truly have, (trials,), infinite where it left the sweep; None judges by value
+    values : the values the figure may truly have, (trials,), infinite where it left the sweep; None judges by the
+        interval, or by the value where there is none
     confidence : probability from which a target counts as met; at one less that much it counts as missed
     remedy : what would narrow the figure, for the advice that an undecided target comes with
 
@@ -45,7 +47,7 @@ def judge(
     name = figure_label(figure.key)
     if figure.value is None:
         return replace(result, advice=f"make {name} measurable: see the findings")
-    possible = np.array([figure.value]) if values is None else values
+    possible = _spread(figure, confidence) if values is None else values
     if figure.id == "phase":
         possible = possible + phase_toward(figure.value, target.min, target.max) - figure.value
     # A bound leaves open how far the figure lies beyond it.
@@ -53,16 +55,29 @@ def judge(
     most = np.full_like(possible, np.inf) if figure.bound == "at least" else possible
     surely = float(np.mean((least >= low) & (most <= high)))
     perhaps = float(np.mean((most >= low) & (least <= high)))
+    counted = possible.size > 1
     if surely >= confidence:
-        return replace(result, verdict="met", probability=None if values is None else surely)
+        return replace(result, verdict="met", probability=surely if counted else None)
     if perhaps <= 1.0 - confidence:
-        return replace(result, verdict="missed", probability=None if values is None else perhaps)
+        return replace(result, verdict="missed", probability=perhaps if counted else None)
     if figure.bound is not None:
-        advice = f"sweep wider, so that {name} is more than a bound"
-        return replace(result, advice=advice)
+        return replace(result, advice=remedy or f"sweep wider, so that {name} is more than a bound")
     return replace(result, probability=surely, advice=remedy or None)
 
 
+def _spread(figure: Figure, confidence: float) -> FloatArray:
+    """Return possible values of a figure known by its interval alone: two half normals that meet at the value."""
+    assert figure.value is not None
+    if figure.low is None or figure.high is None:
+        return np.array([figure.value])
+    normal = NormalDist()
+    edge = normal.inv_cdf(0.5 + 0.5 * confidence)
+    z = np.array([normal.inv_cdf((i + 0.5) / _QUANTILES) for i in range(_QUANTILES)])
+    side = np.where(z > 0.0, figure.high - figure.value, figure.value - figure.low)
+    return np.asarray(figure.value + z * side / edge)
+
+
+_QUANTILES: Final = 501
 _CURES: Final = {
     "mismatch": (0.5, "fit better matched pads, or put a 6 dB pad inside the calibration on each port"),
     "reading": (0.5, "calibrate again and sweep at once, with tightened connectors"),

@@ -226,7 +226,7 @@ def test_noise_block_starts_below_or_at_the_highest_frequency(first):
 
 
 def test_five_numbers_at_a_higher_frequency_are_a_short_row_and_no_noise():
-    with pytest.raises(SweepFileError, match=r":6: the last row breaks off after 5 numbers of 9"):
+    with pytest.raises(SweepFileError, match=r":6: 5 numbers in the row, where a two-port row has 9"):
         parse(PLAIN + "4.5 1.1 0.3 64 0.4\n")
 
 
@@ -237,7 +237,7 @@ def test_a_contradicting_second_option_line_is_ignored_with_a_finding_and_refuse
     (finding,) = sweep.findings
     assert (finding.code, finding.severity, finding.sweep) == ("file-mended", "caution", "stage.s2p")
     assert finding.message == (
-        "stage.s2p: line 4 is a second option line that differs from the first; it was ignored, as the standard says"
+        "stage.s2p: line 4: a second option line that differs from the first; it was ignored, as the standard says"
     )
     with pytest.raises(SweepFileError, match=r"^stage\.s2p:4: a second option line that differs from the first; "):
         parse(text, strict=True)

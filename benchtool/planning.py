@@ -1,0 +1,346 @@
+"""What the sweeps of a device left open in; the two or three sweeps most worth taking next, with pads and levels, out.
+
+Lines come from :mod:`benchtool.pad_stock`, which holds the limits. What a sweep would settle is the probability of two
+rivals times how far apart they say it will read, in units of its doubt (one less the overlap of two normal densities).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from itertools import combinations
+from typing import Final
+
+import numpy as np
+
+from benchtool.causes import CauseVerdict
+from benchtool.compression_study import CompressionStudy
+from benchtool.doubts import pad_doubt_db
+from benchtool.drive_results import NextSweep, Onset
+from benchtool.drive_table import DriveTable
+from benchtool.limiting import Law
+from benchtool.model import Finding
+from benchtool.onset import SAFE_DROP_DB
+from benchtool.pad_stock import STEP_UP_DB, Line, port2_limit_dbm, possible_lines
+from benchtool.pads import PadBank, change_of_line
+from benchtool.propagation import rectangular_u
+from benchtool.rivals import Rival
+from benchtool.sheet import BenchSheet, SweepEntry
+
+__all__ = ["NextSweep", "plan_next", "reference_finding"]
+
+_MOST: Final = 3
+_NEW_DRIVE_DB: Final = 1.5
+"""A drive that is no further from one already swept shows nothing new."""
+_STILL_POSSIBLE: Final = 0.02
+_WORTH: Final = 0.02
+_WIDE_DB: Final = 2.0
+_PROOF_STEP_DB: Final = 10.0
+_RELIEF_DB: Final = 10.0
+"""How much less level at port 2 puts it out of the receiver's reach."""
+_LIFT_DB: Final = 10.0
+_READABLE_DB: Final = 30.0
+_GUESS: Final = Law("rapp", 2.0)
+"""The law by which a gain not yet measured is foretold."""
+
+
+@dataclass(frozen=True, eq=False)
+class _Bench:
+    """What planning needs to know, gathered once."""
+
+    sheet: BenchSheet
+    bank: PadBank
+    study: CompressionStudy
+    entries: tuple[SweepEntry, ...]
+    """In the order of the drive table."""
+    signal_to_noise_db: float | None
+    candidates: tuple[Line, ...]
+
+    @property
+    def table(self) -> DriveTable:
+        return self.study.table
+
+
+def plan_next(
+    sheet: BenchSheet,
+    bank: PadBank,
+    entries: Sequence[SweepEntry],
+    study: CompressionStudy,
+    signal_to_noise_db: float | None = None,
+) -> tuple[NextSweep, ...]:
+    """Return the sweeps most worth taking next, at most three, the most telling first; none where all is settled.
+
+    Parameters
+    ----------
+    entries : the device's sweeps in the sheet
+    study : what is known of them
+    signal_to_noise_db : of the reference sweep at its peak, to foretell whether a lower drive can be read
+    """
+    by_name = {entry.name: entry for entry in entries}
+    ordered = tuple(by_name[file] for file in study.table.files)
+    found = tuple(possible_lines(sheet, bank, ordered, study.table))
+    bench = _Bench(sheet, bank, study, ordered, signal_to_noise_db, found)
+    planned: list[NextSweep] = []
+    lines: set[tuple[tuple[str, ...], tuple[str, ...]]] = set()
+    for propose in (_repeat, _lift_signal, _relieve_receiver, _separate, _prove_reference, _bracket):
+        proposal = propose(bench)
+        if proposal is None or (proposal.input_pads, proposal.output_pads) in lines:
+            continue
+        lines.add((proposal.input_pads, proposal.output_pads))
+        planned.append(proposal)
+    return tuple(planned[:_MOST])
+
+
+def _as_proposal(bench: _Bench, line: Line, settles: str, *more_cautions: str) -> NextSweep:
+    known = bench.table.levels_known
+    limit = port2_limit_dbm(bench.sheet)
+    cautions = list(more_cautions)
+    if line.drive > float(np.max(bench.table.drive_dbm)) + 0.5:
+        cautions.append("this is more drive than any sweep so far: check what the device and its load stand first")
+    if not known:
+        cautions.append("the source level is not known: check the level at port 2 before power is applied")
+    elif limit is None:
+        cautions.append("the sheet states no limit of port 2: check the level there before power is applied")
+    cautions.append("check the power rating of the pads, and that biased ports are DC-blocked")
+    return NextSweep(
+        line.input_pads,
+        line.output_pads,
+        bench.entries[0].source_at(bench.table.at_hz),
+        line.drive if known else None,
+        line.output if known else None,
+        line.port2 if known else None,
+        None if limit is None or not known else limit - line.port2 - line.doubt_db,
+        settles,
+        tuple(cautions),
+    )
+
+
+def _best(lines: Sequence[Line], cost: Callable[[Line], float]) -> Line | None:
+    """Return the line of least cost; of equal ones the one with fewest pads."""
+    return min(lines, key=lambda line: (round(cost(line), 3), line.pads), default=None)
+
+
+def _taken(bench: _Bench, line: Line) -> bool:
+    return any((entry.input_pads, entry.output_pads) == (line.input_pads, line.output_pads) for entry in bench.entries)
+
+
+def _repeat(bench: _Bench) -> NextSweep | None:
+    """Propose the reference once more, where the sweeps did not repeat."""
+    verdict = bench.study.verdict
+    if verdict is None or verdict.code != "reference-not-repeating":
+        return None
+    reference = bench.study.onset.reference.file
+    entry = next(entry for entry in bench.entries if entry.name == reference)
+    same = [c for c in bench.candidates if (c.input_pads, c.output_pads) == (entry.input_pads, entry.output_pads)]
+    if not same:
+        return None
+    return _as_proposal(
+        bench,
+        same[0],
+        f"{reference} again, twice in a row: whether the device has settled, or still drifts or oscillates",
+    )
+
+
+def _lift_signal(bench: _Bench) -> NextSweep | None:
+    """Propose the drive nearest 10 dB above the noisy sweep that is still safe, where noise hides what it shows."""
+    verdict, table = bench.study.verdict, bench.table
+    if verdict is None or verdict.code != "noise-limited":
+        return None
+    noisy = int(np.argmax(table.buried))
+    safe = bench.study.onset.safe_drive_dbm.low
+    drives = np.mean(table.drive_dbm, axis=1)
+    lines = [
+        line
+        for line in bench.candidates
+        if line.drive > drives[noisy] + _NEW_DRIVE_DB and (safe is None or line.drive <= safe)
+    ]
+    best = _best(
+        [line for line in lines if not _taken(bench, line)], lambda line: abs(line.drive - drives[noisy] - _LIFT_DB)
+    )
+    if best is None:
+        return None
+    return _as_proposal(
+        bench, best, f"what {table.files[noisy]} hides in its noise, at a drive that is still safe for figures"
+    )
+
+
+def _relieve_receiver(bench: _Bench) -> NextSweep | None:
+    """Propose the strongest sweep with more output pad, where the receiver is or may be overloaded."""
+    verdict, table = bench.study.verdict, bench.table
+    if verdict is None or verdict.probabilities["receiver-overload"] < 0.1:
+        return None
+    level = np.max(table.drive_dbm + table.gain_db, axis=1) - table.output_loss_db
+    strongest = bench.entries[int(np.argmax(level))]
+    lines = [
+        line
+        for line in bench.candidates
+        if line.input_pads == strongest.input_pads and line.port2 <= float(np.max(level)) - 3.0
+    ]
+    best = _best(
+        [line for line in lines if not _taken(bench, line)],
+        lambda line: abs(line.port2 - float(np.max(level)) + _RELIEF_DB),
+    )
+    if best is None:
+        return None
+    return _as_proposal(
+        bench,
+        best,
+        f"whether {strongest.name} was compressed by the device or by the receiver: with less level at port 2 and the "
+        "same drive, gain comes back only if it was the receiver",
+    )
+
+
+def _separate(bench: _Bench) -> NextSweep | None:
+    """Propose the sweep on whose gain the rivals that are left disagree most."""
+    verdict = bench.study.verdict
+    if verdict is None or verdict.code not in ("input-limited-or-pad", "cause-unclear", "pad-value-suspect"):
+        return None
+    likely = [rival for rival in verdict.rivals if rival.probability >= _STILL_POSSIBLE]
+    if verdict.code == "pad-value-suspect":
+        likely = likely[:1] + [rival for rival in verdict.rivals if rival.cause == "clean"]
+    lines = [line for line in bench.candidates if line.drive <= float(np.max(bench.table.drive_dbm)) + 0.5]
+    best = _best([line for line in lines if not _taken(bench, line)], lambda line: -_worth(bench, line, likely))
+    if best is None or _worth(bench, best, likely) < _WORTH * sum(rival.probability for rival in likely):
+        return None
+    foremost = {rival.cause: rival for rival in reversed(likely)}
+    shown = "; ".join(f"{_named(rival)}: {_foretold(bench, best, rival):.2f} dB" for rival in foremost.values())
+    return _as_proposal(bench, best, f"which cause it is, by the gain it reads: {shown}")
+
+
+def _named(rival: Rival) -> str:
+    return {
+        "clean": "nothing wrong",
+        "output-limited": "device limits at its output",
+        "input-limited": "device limits at its input",
+        "receiver-overload": "receiver compresses",
+        "pad-value": f"pad {rival.about} is off",
+        "not-repeating": f"{rival.about or 'the set-up'} did not repeat",
+    }[rival.cause]
+
+
+def _worth(bench: _Bench, line: Line, likely: Sequence[Rival]) -> float:
+    """Return how much a sweep would separate the rivals: probability of each pair times how far it parts them."""
+    cal = bench.sheet.calibration
+    weights = {
+        **change_of_line(line.input_pads, cal.input_pads).weights(),
+        **change_of_line(line.output_pads, cal.output_pads).weights(),
+    }
+    variance = 2.0 * float(np.mean(bench.table.reading_u_db**2))
+    for pad in weights:
+        width, is_limit = pad_doubt_db(pad, bench.bank)
+        variance += (rectangular_u(width) if is_limit else width) ** 2
+    floor = 0.1
+    worth = 0.0
+    for a, b in combinations(likely, 2):
+        apart = _foretold(bench, line, a) - _foretold(bench, line, b)
+        share = max(a.probability, floor) * max(b.probability, floor)
+        worth += share * (1.0 - float(np.exp(-(apart**2) / (8.0 * variance))))
+    return worth
+
+
+def _foretold(bench: _Bench, line: Line, rival: Rival) -> float:
+    """Return the corrected gain at the design frequency that a rival expects of a line, dB."""
+    table = bench.table
+    read, drive = table.design_gain_db, np.mean(table.drive_dbm, axis=1)
+    value = rival.value or 0.0
+    if rival.cause == "clean":
+        return float(np.mean(read))
+    if rival.cause == "not-repeating":
+        kept = [k for k, file in enumerate(table.files) if file != rival.about]
+        return float(np.mean(read[kept]))
+    if rival.cause == "pad-value":
+        pad = next(pad for pad in table.pads if pad.name == rival.about)
+        cal = bench.sheet.calibration
+        changed = {
+            **change_of_line(line.input_pads, cal.input_pads).weights(),
+            **change_of_line(line.output_pads, cal.output_pads).weights(),
+        }
+        return float(np.mean(read - pad.reads * value)) - changed.get(pad.name, 0) * value
+    # The lowest drive stands for the gain; the drop there is taken as foretold too.
+    if rival.cause == "input-limited":
+        past = np.array([drive[0], line.drive]) - value
+    else:
+        lost = np.array([table.output_loss_db[0], line.output - line.port2]) * (rival.cause == "receiver-overload")
+        past = np.array([drive[0], line.drive]) + read[0] - lost - value
+    drop = _GUESS.drop_past_p1db(past)
+    return float(read[0] + drop[0] - drop[1])
+
+
+def _reference_drive(bench: _Bench) -> float:
+    k = bench.table.files.index(bench.study.onset.reference.file)
+    return float(np.mean(bench.table.drive_dbm[k]))
+
+
+def _prove_reference(bench: _Bench) -> NextSweep | None:
+    """Propose a lower drive, where nothing shows that the reference was small-signal."""
+    onset = bench.study.onset
+    if onset.reference.proven:
+        return None
+    now = _reference_drive(bench)
+    aim = now - _PROOF_STEP_DB
+    if onset.safe_drive_dbm.low is not None:
+        aim = min(aim, onset.safe_drive_dbm.low)
+    lines = [line for line in bench.candidates if line.drive <= now - _NEW_DRIVE_DB and not _taken(bench, line)]
+    best = _best(lines, lambda line: abs(line.drive - aim))
+    if best is None:
+        return None
+    cautions = []
+    ratio = bench.signal_to_noise_db
+    if ratio is not None and ratio - (now - best.drive) < _READABLE_DB:
+        cautions.append("noise will outweigh the compression looked for: average, or narrow the measuring bandwidth")
+    return _as_proposal(
+        bench,
+        best,
+        f"whether {onset.reference.file} is small-signal: if the gain agrees within {SAFE_DROP_DB} dB, it is",
+        *cautions,
+    )
+
+
+def _bracket(bench: _Bench) -> NextSweep | None:
+    """Propose a drive near the 1 dB point, where it is known only widely or as a bound."""
+    onset = bench.study.onset
+    p1db = onset.input_p1db_dbm
+    drives = np.mean(bench.table.drive_dbm, axis=1)
+    if p1db.value is None:
+        return None
+    if p1db.bound is None and p1db.low is not None and p1db.high is not None:
+        if p1db.high - p1db.low <= _WIDE_DB + 2.0 * bench.table.source_half_width_db:
+            return None
+        aim, what = p1db.value, f"the 1 dB point, now {p1db.low:.1f} to {p1db.high:.1f} dBm, far more closely"
+    elif p1db.bound == "at least":
+        aim, what = float(np.max(drives)) + STEP_UP_DB, f"where it compresses: so far at least {p1db.value:.1f} dBm"
+    else:
+        aim, what = float(np.min(drives)) - STEP_UP_DB, f"where it compresses: so far at most {p1db.value:.1f} dBm"
+    lines = [
+        line
+        for line in bench.candidates
+        if float(np.min(np.abs(line.drive - drives))) > _NEW_DRIVE_DB and abs(line.drive - aim) < STEP_UP_DB
+    ]
+    best = _best(lines, lambda line: abs(line.drive - aim))
+    return None if best is None else _as_proposal(bench, best, what)
+
+
+def reference_finding(onset: Onset, verdict: CauseVerdict | None, planned: Sequence[NextSweep]) -> Finding:
+    """Return whether the reference is small-signal, by how much it may read low, and what to sweep to know."""
+    proof, low = onset.reference, onset.reference.reads_low_db
+    if proof.proven:
+        return Finding(
+            "drive-proven",
+            "note",
+            f"{proof.file} is small-signal: its gain reads low by no more than {low.high:.2f} dB",
+            "nothing to do",
+            proof.file,
+        )
+    how = "sweep again with 10 dB more input pad; if the gain agrees, it stands"
+    lower = [sweep for sweep in planned if "small-signal" in sweep.settles]
+    if lower:
+        drive = f" ({lower[0].drive_dbm:.1f} dBm drive)" if lower[0].drive_dbm is not None else ""
+        pads = ", ".join(lower[0].input_pads) or "no pad"
+        how = f"sweep again with {pads} at the input{drive}; if the gain agrees, it stands"
+    if low.high is None:
+        said = "nothing shows that it is not compressed: there is no second drive to compare it with"
+    else:
+        said = f"its gain may read low by {low.value:.2f} dB ({low.low:.2f} to {low.high:.2f} dB)"
+    if verdict is not None and verdict.code == "noise-limited":
+        how = f"noise outweighs the compression looked for: average first; then {how}"
+    return Finding("drive-unproven", "caution", f"{proof.file}: {said}", how, proof.file)
