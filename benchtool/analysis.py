@@ -4,8 +4,9 @@ from __future__ import annotations
 
 import datetime
 import os
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import replace
+from pathlib import Path
 from types import MappingProxyType
 
 import numpy as np
@@ -18,8 +19,9 @@ from benchtool.drive_results import DriveStudy
 from benchtool.errors import BenchtoolError, FaultsError, SheetError, SweepFileError
 from benchtool.figures import FigurePlan, plan_figures, target_key
 from benchtool.findings import buried_parameters, device_findings, in_order
+from benchtool.joining import join_reversed, settle_ports
 from benchtool.model import BenchResult, DeviceResult, Figure, Finding, SignalPath, Sweep, SweepResult
-from benchtool.pads import PadBank, de_embed, signal_path
+from benchtool.pads import PadBank, de_embed, output_reflection, signal_path
 from benchtool.planning import plan_next, reference_finding
 from benchtool.response import span_of
 from benchtool.sheet import BenchSheet, Device, SweepEntry
@@ -61,8 +63,7 @@ def analyse(
     sweeps = read_all(sheet, strict)
     devices = []
     for number, device in enumerate(sheet.devices, start=1):
-        mine = [sweeps[entry.file] for entry in device.sweeps]
-        devices.append(analyse_device(sheet, device, number, bank, mine, trials))
+        devices.append(analyse_device(sheet, device, number, bank, sweeps, trials))
         if progress is not None:
             progress(device.name)
     return BenchResult(
@@ -77,20 +78,21 @@ def analyse(
     )
 
 
-def read_all(sheet: BenchSheet, strict: bool) -> dict[object, Sweep]:
+def read_all(sheet: BenchSheet, strict: bool) -> dict[Path, Sweep]:
     """Return every sweep of the sheet by its path; raises all faults together."""
-    sweeps: dict[object, Sweep] = {}
+    sweeps: dict[Path, Sweep] = {}
     faults: list[BenchtoolError] = []
     for device in sheet.devices:
         for entry in device.sweeps:
-            if entry.file in sweeps:
-                continue
-            try:
-                sweep = read_sweep(entry.file, name=entry.name, strict=strict)
-                _check_usable(sweep, entry)
-                sweeps[entry.file] = sweep
-            except SweepFileError as fault:
-                faults.append(fault)
+            for file in (entry.file, entry.reversed):
+                if file is None or file in sweeps:
+                    continue
+                try:
+                    sweep = read_sweep(file, name=entry.name if file == entry.file else file.name, strict=strict)
+                    _check_usable(sweep, file)
+                    sweeps[file] = sweep
+                except SweepFileError as fault:
+                    faults.append(fault)
     if len(faults) == 1:
         raise faults[0]
     if faults:
@@ -98,23 +100,40 @@ def read_all(sheet: BenchSheet, strict: bool) -> dict[object, Sweep]:
     return sweeps
 
 
-def _check_usable(sweep: Sweep, entry: SweepEntry) -> None:
+def _check_usable(sweep: Sweep, file: Path) -> None:
     if "S21" not in sweep.measured:
         raise SweepFileError(
-            entry.file, "S21 was not measured, only " + ", ".join(sweep.measured), "sweep from port 1 to port 2"
+            file, "S21 was not measured, only " + ", ".join(sweep.measured), "sweep from port 1 to port 2"
         )
     if not np.any(sweep.s21):
-        raise SweepFileError(entry.file, "S21 is zero at every frequency", "check the cables, then sweep again")
+        raise SweepFileError(file, "S21 is zero at every frequency", "check the cables, then sweep again")
     if sweep.frequency_hz.size < 3:
         raise SweepFileError(
-            entry.file, f"only {sweep.frequency_hz.size} frequencies", "sweep at least 3; 201 or more is usual"
+            file, f"only {sweep.frequency_hz.size} frequencies", "sweep at least 3; 201 or more is usual"
         )
 
 
-def correct_sweep(sheet: BenchSheet, entry: SweepEntry, sweep: Sweep, bank: PadBank, at_hz: float) -> SweepResult:
-    """Return one sweep at the device's own ports; its path has no level beyond the drive yet."""
+def correct_sweep(
+    sheet: BenchSheet, entry: SweepEntry, sweep: Sweep, bank: PadBank, at_hz: float, turned: Sweep | None = None
+) -> SweepResult:
+    """Return one sweep at the device's own ports; its path has no level beyond the drive yet.
+
+    `turned` is the sweep of the device end for end in the same line, where there is one: it completes S12 and S22.
+
+    Raises
+    ------
+    SweepFileError : the two sweeps do not fit together.
+    """
     at_device, findings, into, out = de_embed(sweep, entry, sheet, bank, at_hz)
-    raw = replace(sweep, findings=(*sweep.findings, *findings))
+    if turned is not None:
+        other, _, _, _ = de_embed(turned, entry, sheet, bank, at_hz)
+        behind = output_reflection(entry, sheet, bank, sweep.frequency_hz)
+        at_device = settle_ports(join_reversed(at_device, other), behind)
+        findings = tuple(finding for finding in findings if finding.code != "pad-removal-inexact")
+        findings = (*findings, *(f for f in at_device.findings if f not in sweep.findings))
+    # What the joining settled is no longer said of the forward sweep alone.
+    own = () if turned is not None else sweep.findings
+    raw = replace(sweep, findings=(*own, *findings))
     return SweepResult(entry.name, raw, at_device, signal_path(entry, sheet, bank, at_hz, None), into, out)
 
 
@@ -123,21 +142,19 @@ def analyse_device(
     device: Device,
     number: int,
     bank: PadBank,
-    sweeps: Sequence[Sweep],
+    sweeps: Mapping[Path, Sweep],
     trials: int | None = None,
 ) -> DeviceResult:
-    """Return the result of one device.
+    """Return the result of one device; `sweeps` holds every sweep that it names, by its path.
 
     `number` is its place in the sheet, counted from 1: messages name it, and it seeds the trials.
     """
-    measured = [
-        _measure(sheet, device, number, entry, sweep, bank) for entry, sweep in zip(device.sweeps, sweeps, strict=True)
-    ]
+    measured = [_measure(sheet, device, number, entry, sweeps, bank) for entry in device.sweeps]
     reference, reason = choose_reference(measured)
     at_hz = reference.plan.design_hz
     compression = compare_drives(measured, reference, reason, at_hz)
     doubts = [
-        sweep_doubts(sweep.result.raw, entry, sheet, bank, at_hz)
+        sweep_doubts(sweep.result.sweep, entry, sheet, bank, at_hz)
         for sweep, entry in zip(measured, device.sweeps, strict=True)
     ]
     own = doubts[measured.index(reference)]
@@ -231,14 +248,21 @@ def _way_out(figure: Figure, bank: PadBank, drive_findings: Sequence[Finding]) -
 
 
 def _measure(
-    sheet: BenchSheet, device: Device, number: int, entry: SweepEntry, sweep: Sweep, bank: PadBank
+    sheet: BenchSheet,
+    device: Device,
+    number: int,
+    entry: SweepEntry,
+    sweeps: Mapping[Path, Sweep],
+    bank: PadBank,
 ) -> MeasuredSweep:
+    sweep = sweeps[entry.file]
+    turned = sweeps[entry.reversed] if entry.reversed is not None else None
     _check_window(sheet, device, number, sweep)
     middle = float(np.sqrt(sweep.frequency_hz[0] * sweep.frequency_hz[-1]))
-    result = correct_sweep(sheet, entry, sweep, bank, device.design_hz or middle)
+    result = correct_sweep(sheet, entry, sweep, bank, device.design_hz or middle, turned)
     plan = plan_figures(result.sweep, device.kind, device.design_hz, device.window_hz, device.targets)
     if device.design_hz is None:
-        result = correct_sweep(sheet, entry, sweep, bank, plan.design_hz)
+        result = correct_sweep(sheet, entry, sweep, bank, plan.design_hz, turned)
     path = _path(sheet, entry, bank, plan, result.sweep)
     return MeasuredSweep(replace(result, path=path, noise_db=signal_to_noise_db(result.sweep, plan)), plan)
 

@@ -28,7 +28,13 @@ _PREFIXES: Final = ((1e9, "G"), (1e6, "M"), (1e3, "k"), (1.0, ""), (1e-3, "m"), 
 _SCALED: Final = ("Hz", "s", "ohm")
 _SIGNIFICANT: Final = {"Hz": 5, "s": 4, "ohm": 4, "": 3}
 _DECIMALS: Final = {"dB": 2, "dBm": 1, "deg": 1}
-_SPELLING: Final = {"loaded_q": "loaded Q", "input_p1db": "input P1dB", "output_p1db": "output P1dB"}
+_SPELLING: Final = {
+    "loaded_q": "loaded Q",
+    "stability_k": "stability K",
+    "stability_mu": "stability µ",
+    "input_p1db": "input P1dB",
+    "output_p1db": "output P1dB",
+}
 _FIGURE_DIGITS: Final = {
     **dict.fromkeys(("input_return_loss", "output_return_loss", "reverse_isolation", "rejection"), 1),
     "bandwidth": 4,

@@ -97,6 +97,8 @@ class SweepDoubts:
     input_ports: tuple[float, ...]
     """Reflections that the device sees on its input side: the nearest added pad, and the port through the pads."""
     output_ports: tuple[float, ...]
+    turned: bool = False
+    """Whether S22 comes from the device turned round, read through the input-side pads."""
 
     def reflection_doubt(self, parameter: str) -> float:
         """Return the doubt about the magnitude of S11 or S22: its error vectors together."""
@@ -218,9 +220,10 @@ def sweep_doubts(sweep: Sweep, entry: SweepEntry, sheet: BenchSheet, bank: PadBa
         joints[1],
         ASSUMED["reading, standard uncertainty"] if reading is None else reading,
         vectors[0],
-        vectors[1],
+        vectors[0] if entry.reversed is not None else vectors[1],
         ports[0],
         ports[1],
+        entry.reversed is not None,
     )
 
 
@@ -278,7 +281,8 @@ class Draws:
         s[:, 1, 0] *= through
         if "S12" in sweep.measured:
             s[:, 0, 1] *= through
-        for i, weights, vectors in ((0, into, doubts.input_vectors), (1, out, doubts.output_vectors)):
+        second = into if doubts.turned else out
+        for i, weights, vectors in ((0, into, doubts.input_vectors), (1, second, doubts.output_vectors)):
             if f"S{i + 1}{i + 1}" not in sweep.measured:
                 continue
             s[:, i, i] *= weights**2

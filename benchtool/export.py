@@ -6,10 +6,7 @@ import csv
 import io
 import json
 import math
-import os
-import re
-import tempfile
-from collections.abc import Iterable, Mapping
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any, Final
 
@@ -18,11 +15,11 @@ import numpy as np
 from benchtool import __version__
 from benchtool.analysis import correct_sweep, read_all
 from benchtool.drive_results import Estimate
-from benchtool.errors import OutputError
 from benchtool.model import BenchResult, DeviceResult, Figure, SweepResult
 from benchtool.pads import PadBank
 from benchtool.sheet import BenchSheet
 from benchtool.touchstone import format_sweep
+from benchtool.whole_files import cell_text, file_stem, prepare_folder, unique_stems, write_whole
 
 __all__ = [
     "FORMAT",
@@ -36,79 +33,6 @@ __all__ = [
 ]
 
 FORMAT: Final = "benchtool-results/1"
-
-_LONGEST_STEM: Final = 100
-"""Bytes of a file name that leave room for a suffix within the 255 that file systems allow."""
-
-
-def write_whole(path: Path, data: bytes) -> None:
-    """Write a file so that it appears whole or not at all; an existing one is replaced only by a whole one.
-
-    Raises
-    ------
-    OutputError : the disk is full, or the folder cannot be written.
-    """
-    handle, name = -1, ""
-    try:
-        handle, name = tempfile.mkstemp(prefix=".benchtool-", dir=path.parent)
-        with os.fdopen(handle, "wb") as stream:
-            stream.write(data)
-            stream.flush()
-            os.fsync(stream.fileno())
-        # mkstemp makes files for the owner's eyes only; a page is meant to be passed on.
-        umask = os.umask(0)
-        os.umask(umask)
-        Path(name).chmod(0o666 & ~umask)
-        Path(name).replace(path)
-    except OSError as error:
-        raise OutputError(
-            path, f"cannot be written ({error.strerror or error})", "free the disk, or choose another folder with --out"
-        ) from None
-    finally:
-        if name:
-            Path(name).unlink(missing_ok=True)
-
-
-def prepare_folder(folder: Path) -> None:
-    """Make the output folder.
-
-    Raises
-    ------
-    OutputError : it cannot be made, or something that is no folder has its name.
-    """
-    try:
-        folder.mkdir(parents=True, exist_ok=True)
-    except OSError as error:
-        raise OutputError(
-            folder, f"cannot be made ({error.strerror or error})", "choose another folder with --out"
-        ) from None
-
-
-def file_stem(name: str) -> str:
-    """Return a device name as a file name that every common file system takes, without its suffix.
-
-    >>> file_stem("stage 2: 50% <limiting>")
-    'stage 2_ 50% _limiting_'
-    """
-    stem = re.sub(r'[\x00-\x1f\x7f/\\:*?"<>|]', "_", name).strip(" .") or "device"
-    while len(stem.encode()) > _LONGEST_STEM:
-        stem = stem[:-1]
-    return stem
-
-
-def unique_stems(names: Iterable[str]) -> list[str]:
-    """Return one file stem for each name, no two alike even where file systems ignore case."""
-    taken: set[str] = set()
-    stems = []
-    for name in names:
-        stem = base = file_stem(name)
-        count = 1
-        while stem.casefold() in taken or stem.casefold() == "results":
-            count += 1
-            stem = f"{base} ({count})"
-        taken.add(stem.casefold())
-        stems.append(stem)
-    return stems
 
 
 def _number(value: float | None) -> float | None:
@@ -170,7 +94,7 @@ def _compression(device: DeviceResult) -> dict[str, Any]:
                 "compression_at_peak_db": _number(point.compression_at_peak_db),
                 "worst_db": _number(point.worst_db),
                 "worst_at_hz": _number(point.worst_at_hz),
-                "compressed": point.compressed,
+                "compressed": bool(point.compressed),
             }
             for point in compression.points
         ],
@@ -274,15 +198,18 @@ def _device(device: DeviceResult) -> dict[str, Any]:
     }
 
 
-def results_json(bench: BenchResult) -> bytes:
-    """Return results.json: UTF-8, every number in Hz, s, dB, dBm, deg or ohm, null for what is not known."""
+def results_json(bench: BenchResult, made: Mapping[str, Any] | None = None) -> bytes:
+    """Return results.json: UTF-8, every number in Hz, s, dB, dBm, deg or ohm, null for what is not known.
+
+    `made` adds to what is said of how it was made: options, and hashes of inputs and outputs.
+    """
     tree: Mapping[str, Any] = {
         "format": FORMAT,
         "title": bench.title,
         "operator": bench.operator,
         "date": bench.date,
         "sheet_sha256": bench.sheet_sha256,
-        "made": {"version": bench.version, "at": bench.made_at},
+        "made": {"version": bench.version, "at": bench.made_at, **(made or {})},
         "devices": [_device(device) for device in bench.devices],
     }
     return (json.dumps(tree, indent=1, ensure_ascii=False, allow_nan=False) + "\n").encode()
@@ -313,7 +240,7 @@ def results_csv(bench: BenchResult) -> bytes:
         for key, figure in device.figures.items():
             entry = _figure(figure)
             head = [
-                _literal(device.name),
+                cell_text(device.name),
                 key,
                 *(entry[k] for k in ("value", "unit", "low", "high", "confidence", "bound")),
             ]
@@ -323,11 +250,6 @@ def results_csv(bench: BenchResult) -> bytes:
             if not targets:
                 writer.writerow([*head, None, None, None, None])
     return stream.getvalue().encode()
-
-
-def _literal(name: str) -> str:
-    """Return a name that no spreadsheet takes for a formula."""
-    return f"'{name}" if name[:1] in ("=", "+", "-", "@") else name
 
 
 def corrected_files(sheet: BenchSheet, *, strict: bool = False) -> list[tuple[str, str]]:
@@ -345,12 +267,13 @@ def corrected_files(sheet: BenchSheet, *, strict: bool = False) -> list[tuple[st
     for stem, (device, entry) in zip(stems, entries, strict=True):
         sweep = sweeps[entry.file]
         middle = float(np.sqrt(sweep.frequency_hz[0] * sweep.frequency_hz[-1]))
-        result = correct_sweep(sheet, entry, sweep, bank, device.design_hz or middle)
+        turned = sweeps[entry.reversed] if entry.reversed is not None else None
+        result = correct_sweep(sheet, entry, sweep, bank, device.design_hz or middle, turned)
         comments = [
             f"{entry.name} at the device's own ports; device: {device.name}",
             f"taken out: {result.input_correction_db:g} dB on the input side, "
             f"{result.output_correction_db:g} dB on the output side",
-            f"measured: {', '.join(sweep.measured)}; made by benchtool {__version__}",
+            f"measured: {', '.join(result.sweep.measured)}; made by benchtool {__version__}",
         ]
         files.append((f"{stem}.s2p", format_sweep(result.sweep, comments=comments)))
     return files

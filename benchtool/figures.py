@@ -8,145 +8,26 @@ add it in :func:`plan_figures`, and say in the README what it is.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
+from collections.abc import Mapping, Sequence
 from typing import Final
 
 import numpy as np
 
-from benchtool.fitting import Curve, fit_curve
-from benchtool.match import worst_return_loss
-from benchtool.model import Bound, ComplexArray, Figure, Finding, FloatArray, Kind, Sweep
-from benchtool.noise import NoiseModel, estimate_noise
+from benchtool.figure_plan import Extractor, FigureBuilder, FigurePlan
+from benchtool.fitting import Curve
+from benchtool.match import stability, worst_return_loss
+from benchtool.model import Bound, ComplexArray, Figure, FloatArray, Kind, Sweep
+from benchtool.noise import estimate_noise
 from benchtool.phase import delay_variation, phase_linearity
 from benchtool.response import LevelWidth, Passband, plan_level_width, plan_passband
-from benchtool.sheet import FIGURE_UNITS, TargetSpec
-from benchtool.units import HALF_POWER_DB, format_si, to_db, wrap_degrees
+from benchtool.sheet import TargetSpec
+from benchtool.units import HALF_POWER_DB, to_db, wrap_degrees
 
 __all__ = ["FigurePlan", "phase_toward", "plan_figures", "target_key"]
 
 _REJECTION_REACH: Final = 0.02
 """Share of the distance to the peak over which the skirt is smoothed around a rejection point."""
 _REJECTION_STEPS: Final = 3.0
-
-Extractor = Callable[["FigurePlan", ComplexArray, Mapping[str, FloatArray]], FloatArray]
-
-
-@dataclass(frozen=True, eq=False)
-class FigurePlan:
-    """How the figures of one sweep are extracted.
-
-    `entries` are the figures in the order they are shown, with their units and bounds but without values; an entry
-    whose extractor is None cannot be known, and one of `findings` says why.
-    """
-
-    kind: Kind
-    design_hz: float
-    passband: Passband
-    design_curve: Curve
-    noise: Mapping[str, NoiseModel | None]
-    """Noise seen in each measured parameter."""
-    entries: tuple[Figure, ...]
-    extractors: Mapping[str, Extractor | None]
-    findings: tuple[Finding, ...] = field(default=())
-
-    def extract(self, s: ComplexArray) -> dict[str, FloatArray]:
-        """Return each figure that can be known, (...,), from scattering parameters (..., 2, 2, n) at the device.
-
-        NaN stands where a copy does not show the figure (an edge that moved out of the sweep).
-        """
-        found = self._passband_figures(s[..., 1, 0, :])
-        for key, extractor in self.extractors.items():
-            if extractor is not None and key not in found:
-                found[key] = extractor(self, s, found)
-        return {entry.key: found[entry.key] for entry in self.entries if self.extractors[entry.key] is not None}
-
-    def figures(self, s: ComplexArray) -> dict[str, Figure]:
-        """Return the figures of one sweep, (2, 2, n), with values and bounds, without intervals."""
-        values = self.extract(s)
-        figures = {}
-        for entry in self.entries:
-            number = float(values[entry.key]) if entry.key in values else float("nan")
-            value = number if np.isfinite(number) else None
-            figures[entry.key] = Figure(
-                entry.id,
-                value,
-                entry.unit,
-                bound=entry.bound if value is not None else None,
-                parameters=entry.parameters,
-            )
-        return figures
-
-    def _passband_figures(self, s21: ComplexArray) -> dict[str, FloatArray]:
-        band = self.passband
-        found = band.figures(s21)
-        lower = found.lower_edge if band.lower_inside else np.full_like(found.peak_gain, band.start_hz)
-        upper = found.upper_edge if band.upper_inside else np.full_like(found.peak_gain, band.stop_hz)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            centre = np.sqrt(lower * upper)
-            loaded_q = centre / (upper - lower)
-        gain, delay = self.design_curve.at(s21, self.design_hz)
-        return {
-            "gain": to_db(gain),
-            "insertion_loss": -to_db(gain),
-            "peak_gain": found.peak_gain,
-            "peak_frequency": found.peak_frequency,
-            "lower_edge": lower,
-            "upper_edge": upper,
-            "bandwidth": upper - lower,
-            "centre_frequency": centre,
-            "loaded_q": loaded_q,
-            "group_delay": delay,
-            "phase": np.degrees(np.angle(gain)),
-        }
-
-
-class _Builder:
-    """Collects the entries of a plan."""
-
-    def __init__(self, sweep: Sweep, kind: Kind, noise: Mapping[str, NoiseModel | None]) -> None:
-        self.sweep = sweep
-        self.kind = kind
-        self.noise = noise
-        self.entries: list[Figure] = []
-        self.extractors: dict[str, Extractor | None] = {}
-        self.findings: list[Finding] = []
-
-    def add(
-        self,
-        figure: str,
-        extractor: Extractor | None,
-        bound: Bound | None = None,
-        parameters: Mapping[str, float | tuple[float, float]] | None = None,
-    ) -> None:
-        entry = Figure(figure, None, FIGURE_UNITS[figure], bound=bound, parameters=parameters or {})
-        if entry.key not in self.extractors:
-            self.entries.append(entry)
-            self.extractors[entry.key] = extractor
-
-    def finding(self, code: str, message: str, advice: str) -> None:
-        self.findings.append(Finding(code, "caution", f"{self.sweep.name}: {message}", advice, self.sweep.name))
-
-    def outside(self, what: str, low_hz: float, high_hz: float) -> bool:
-        """Whether a stretch is not in the sweep; then a finding says so."""
-        f = self.sweep.frequency_hz
-        if f[0] <= low_hz and high_hz <= f[-1]:
-            return False
-        asked = format_si(low_hz, "Hz", 6)
-        if high_hz != low_hz:
-            asked += f" to {format_si(high_hz, 'Hz', 6)}"
-        self.finding(
-            "outside-sweep",
-            f"{what} is asked for at {asked}, but the sweep runs from {format_si(f[0], 'Hz', 6)} to "
-            f"{format_si(f[-1], 'Hz', 6)}",
-            "sweep over that frequency, or change the target",
-        )
-        return True
-
-    def curve(self, parameter: tuple[int, int], low_hz: float, high_hz: float) -> Curve:
-        i, j = parameter
-        noise = self.noise.get(f"S{i + 1}{j + 1}")
-        return fit_curve(self.sweep.frequency_hz, self.sweep.s[i, j], low_hz, high_hz, noise)
 
 
 def _given(name: str) -> Extractor:
@@ -176,7 +57,7 @@ def plan_figures(
     f = sweep.frequency_hz
     noise = {name: estimate_noise(f, sweep.s[int(name[1]) - 1, int(name[2]) - 1]) for name in sweep.measured}
     passband = plan_passband(f, sweep.s21, window_hz, noise.get("S21"))
-    build = _Builder(sweep, kind, noise)
+    build = FigureBuilder(sweep, kind, noise)
     peak = passband.figures(sweep.s21)
     peak_hz = float(peak.peak_frequency)
     at = design_hz if design_hz is not None else peak_hz
@@ -203,7 +84,7 @@ def plan_figures(
     )
 
 
-def _add_transmission(build: _Builder, band: Passband, inside: bool, design_curve: Curve, at_hz: float) -> None:
+def _add_transmission(build: FigureBuilder, band: Passband, inside: bool, design_curve: Curve, at_hz: float) -> None:
     at = {"at_hz": at_hz}
     headline = "insertion_loss" if build.kind == "filter" else "gain"
     build.add(headline, _given(headline) if inside else None, parameters=at)
@@ -226,7 +107,7 @@ def _add_transmission(build: _Builder, band: Passband, inside: bool, design_curv
     build.add("phase", _given("phase") if inside else None, parameters=at)
 
 
-def _aperture(build: _Builder, band: Passband) -> float:
+def _aperture(build: FigureBuilder, band: Passband) -> float:
     """Return the aperture at which a delay curve of this sweep is best drawn, Hz.
 
     An aperture of x bandwidths reads a single-tuned delay low by x²/3 and has a noise that falls as 1/x; both
@@ -243,13 +124,13 @@ def _aperture(build: _Builder, band: Passband) -> float:
     return max(share * width, 2.0 * spacing)
 
 
-def _peak_node(build: _Builder, band: Passband) -> int:
+def _peak_node(build: FigureBuilder, band: Passband) -> int:
     value, _ = band.curve.on_grid(build.sweep.s21)
     start, stop = band.peak_range
     return int(np.argmax(np.abs(value[start:stop]))) + start
 
 
-def _add_match(build: _Builder, band: Passband, at_hz: float, inside: bool) -> None:
+def _add_match(build: FigureBuilder, band: Passband, at_hz: float, inside: bool) -> None:
     edges = band.figures(build.sweep.s21)
     if band.lower_inside and band.upper_inside and np.isfinite(edges.bandwidth):
         low, high = float(edges.lower_edge), float(edges.upper_edge)
@@ -269,6 +150,9 @@ def _add_match(build: _Builder, band: Passband, at_hz: float, inside: bool) -> N
     if "S12" in build.sweep.measured:
         extractor = _at_point(build, (0, 1), at_hz) if inside else None
         build.add("reverse_isolation", extractor, parameters={"at_hz": at_hz})
+    if build.sweep.full and build.kind == "amplifier":
+        for figure in ("stability_k", "stability_mu"):
+            build.add(figure, _stability(build, figure, at_hz) if inside else None, parameters={"at_hz": at_hz})
 
 
 def _worst(curve: Curve, parameter: tuple[int, int]) -> Extractor:
@@ -276,12 +160,29 @@ def _worst(curve: Curve, parameter: tuple[int, int]) -> Extractor:
     return lambda _plan, s, _found: worst_return_loss(curve, s[..., i, j, :])
 
 
-def _at_point(build: _Builder, parameter: tuple[int, int], at_hz: float) -> Extractor:
-    """Return the extractor of −20 log10 of a parameter's magnitude at one frequency."""
-    i, j = parameter
+def _stability(build: FigureBuilder, figure: str, at_hz: float) -> Extractor:
+    """Return the extractor of K or µ at one frequency, from the smooth curves of all four parameters."""
+    curves = [[_curve_near(build, (i, j), at_hz) for j in range(2)] for i in range(2)]
+
+    def extract(_plan: FigurePlan, s: ComplexArray, _found: Mapping[str, FloatArray]) -> FloatArray:
+        rows = [[curves[i][j].at(s[..., i, j, :], at_hz)[0] for j in range(2)] for i in range(2)]
+        point = np.stack([np.stack(row, axis=-1) for row in rows], axis=-2)[..., None]
+        found = stability(point)
+        return np.asarray((found.k if figure == "stability_k" else found.mu)[..., 0])
+
+    return extract
+
+
+def _curve_near(build: FigureBuilder, parameter: tuple[int, int], at_hz: float) -> Curve:
     f = build.sweep.frequency_hz
     reach = max(0.02 * float(f[-1] - f[0]), _REJECTION_STEPS * float(np.max(np.diff(f), initial=0.0)))
-    curve = build.curve(parameter, at_hz - reach, at_hz + reach)
+    return build.curve(parameter, at_hz - reach, at_hz + reach)
+
+
+def _at_point(build: FigureBuilder, parameter: tuple[int, int], at_hz: float) -> Extractor:
+    """Return the extractor of −20 log10 of a parameter's magnitude at one frequency."""
+    i, j = parameter
+    curve = _curve_near(build, parameter, at_hz)
     return lambda _plan, s, _found: -to_db(curve.at(s[..., i, j, :], at_hz)[0])
 
 
@@ -295,10 +196,16 @@ def target_key(target: TargetSpec) -> str:
     return Figure(target.figure, None, "", parameters=parameters).key
 
 
-_NEEDS: Final = {"input_return_loss": "S11", "output_return_loss": "S22", "reverse_isolation": "S12"}
+_NEEDS: Final = {
+    "input_return_loss": "S11",
+    "output_return_loss": "S22",
+    "reverse_isolation": "S12",
+    "stability_k": "S12",
+    "stability_mu": "S12",
+}
 
 
-def _add_target(build: _Builder, band: Passband, target: TargetSpec, peak_hz: float) -> None:
+def _add_target(build: FigureBuilder, band: Passband, target: TargetSpec, peak_hz: float) -> None:
     if target.at_hz is not None:
         _add_rejection(build, target.figure, target.at_hz, peak_hz)
     elif target.over_hz is not None:
@@ -311,12 +218,12 @@ def _add_target(build: _Builder, band: Passband, target: TargetSpec, peak_hz: fl
             build.finding(
                 "one-path",
                 f"{target.figure} has a target, but {parameter} was not measured",
-                "sweep the device in both directions, or drop the target",
+                "sweep the device turned end for end and name that file as `reversed`, or drop the target",
             )
         build.add(target.figure, None)
 
 
-def _add_rejection(build: _Builder, figure: str, at_hz: float, peak_hz: float) -> None:
+def _add_rejection(build: FigureBuilder, figure: str, at_hz: float, peak_hz: float) -> None:
     parameters = {"at_hz": at_hz}
     if build.outside(figure, at_hz, at_hz):
         build.add(figure, None, parameters=parameters)
@@ -331,7 +238,7 @@ def _add_rejection(build: _Builder, figure: str, at_hz: float, peak_hz: float) -
     build.add(figure, extract, parameters=parameters)
 
 
-def _add_over(build: _Builder, figure: str, over_hz: tuple[float, float]) -> None:
+def _add_over(build: FigureBuilder, figure: str, over_hz: tuple[float, float]) -> None:
     parameters = {"over_hz": over_hz}
     if build.outside(figure, *over_hz):
         build.add(figure, None, parameters=parameters)
@@ -350,7 +257,7 @@ def _add_over(build: _Builder, figure: str, over_hz: tuple[float, float]) -> Non
     build.add(figure, extractors[figure], parameters=parameters)
 
 
-def _add_shape_factor(build: _Builder, band: Passband, figure: str, between_db: tuple[float, float]) -> None:
+def _add_shape_factor(build: FigureBuilder, band: Passband, figure: str, between_db: tuple[float, float]) -> None:
     parameters = {"between_db": between_db}
     f, s21 = build.sweep.frequency_hz, build.sweep.s21
     # "60 to 3 dB" means the half-power point, not 3.000 dB.

@@ -15,8 +15,9 @@ import numpy as np
 from benchtool.compression import MeasuredSweep, signal_to_noise_db
 from benchtool.doubts import SweepDoubts
 from benchtool.drive_results import DriveStudy
-from benchtool.match import BURIED_UNCERTAINTY
+from benchtool.match import BURIED_UNCERTAINTY, stability
 from benchtool.model import Compression, Finding, Kind
+from benchtool.noise import moving_average
 from benchtool.phase import ambiguous_steps
 from benchtool.units import HALF_POWER_DB, format_si
 
@@ -30,6 +31,9 @@ _PASSIVE_SLACK_DB: Final = 0.1
 _OFF_DESIGN: Final = 0.25
 """Distance of the peak from the design frequency, as a share of the half-power band, that is worth a word."""
 _Q_DISAGREES: Final = 0.05
+_MU_NEIGHBOURS: Final = 5
+_MU_SLACK: Final = 0.02
+"""How far below one µ has to be before it is not taken for noise."""
 _NOISY_SNR_DB: Final = 20.0
 
 
@@ -58,6 +62,7 @@ def device_findings(
     found += _shape(reference)
     found += _against_design(kind, design_hz, reference)
     found += _cross_checks(kind, reference)
+    found += _may_oscillate(kind, reference)
     found += _buried(reference, doubts[sweeps.index(reference)], targets)
     return in_order(_together(list(dict.fromkeys(found))))
 
@@ -268,6 +273,23 @@ def _cross_checks(kind: Kind, reference: MeasuredSweep) -> Iterator[Finding]:
     )
 
 
+def _may_oscillate(kind: Kind, reference: MeasuredSweep) -> Iterator[Finding]:
+    sweep = reference.result.sweep
+    if kind != "amplifier" or not sweep.full:
+        return
+    mu = moving_average(stability(sweep.s).mu, _MU_NEIGHBOURS)
+    lowest = int(np.argmin(mu))
+    if mu[lowest] < 1.0 - _MU_SLACK:
+        where = format_si(float(sweep.frequency_hz[lowest]), "Hz")
+        yield Finding(
+            "may-oscillate",
+            "caution",
+            f"{reference.file}: µ is {mu[lowest]:.2f} at {where}: some passive source or load would make it oscillate",
+            "keep pads on both ports while it is powered, and load or neutralise it before it goes to its place",
+            reference.file,
+        )
+
+
 def buried_parameters(sweep: MeasuredSweep, doubts: SweepDoubts) -> dict[str, float]:
     """Return which reflections of a sweep are buried under added pads: parameter and doubt of its magnitude.
 
@@ -275,14 +297,15 @@ def buried_parameters(sweep: MeasuredSweep, doubts: SweepDoubts) -> dict[str, fl
     directivity, since a matched pad that is not quite matched is read as part of the device.
     """
     result = sweep.result
+    before_s22 = result.input_correction_db if doubts.turned else result.output_correction_db
     sides = (
         ("S11", result.input_correction_db, doubts.reflection_doubt("S11")),
-        ("S22", result.output_correction_db, doubts.reflection_doubt("S22")),
+        ("S22", before_s22, doubts.reflection_doubt("S22")),
     )
     return {
         name: vector
         for name, correction, vector in sides
-        if name in result.raw.measured and correction > 0.0 and vector > BURIED_UNCERTAINTY
+        if name in result.sweep.measured and correction > 0.0 and vector > BURIED_UNCERTAINTY
     }
 
 

@@ -12,13 +12,14 @@ from typing import Final
 import numpy as np
 
 from benchtool.errors import SweepFileError
-from benchtool.model import PARAMETERS, Finding, Sweep
+from benchtool.model import PARAMETERS, ComplexArray, Finding, Sweep
 from benchtool.units import format_si
 
-__all__ = ["join_reversed"]
+__all__ = ["join_reversed", "settle_ports"]
 
 _TURNED: Final = {"S12": "S21", "S22": "S11"}
 """What the sweep of the turned device holds each parameter as."""
+_SUBSTITUTIONS: Final = 30
 _ROUNDING: Final = 1e-9
 """Relative difference of frequencies that were written in different units."""
 
@@ -79,3 +80,26 @@ def _place(parameter: str) -> tuple[int, int]:
 
 def _fault(backward: Sweep, found: str, remedy: str) -> SweepFileError:
     return SweepFileError(backward.path or backward.name, found, remedy)
+
+
+def settle_ports(joined: Sweep, behind: ComplexArray) -> Sweep:
+    """Return a joined sweep with what stood behind the device taken out of all four parameters, exactly.
+
+    Swept one way, a device reads Γ = S11 + S12 S21 q/(1 - S22 q) and T = S21/(1 - S22 q), with q the reflection of
+    the pads behind it; turned round, the same with its ports exchanged. Both ways together settle all four by
+    repeated substitution, since |q| is small.
+
+    Parameters
+    ----------
+    joined : from :func:`join_reversed`, each sweep with the pads in front of the device already out
+    behind : (n,) the reflection q
+    """
+    if not np.any(behind):
+        return joined
+    one_way, turned = joined.s[[0, 1], 0], joined.s[[1, 0], 1]
+    s11, s21, s22, s12 = one_way[0], one_way[1], turned[0], turned[1]
+    for _ in range(_SUBSTITUTIONS):
+        loop1, loop2 = 1.0 - s11 * behind, 1.0 - s22 * behind
+        s21, s12 = one_way[1] * loop2, turned[1] * loop1
+        s11, s22 = one_way[0] - s12 * s21 * behind / loop2, turned[0] - s12 * s21 * behind / loop1
+    return replace(joined, s=np.array([[s11, s12], [s21, s22]]))

@@ -34,6 +34,7 @@ __all__ = [
     "invert",
     "levels",
     "matched_pad",
+    "output_reflection",
     "signal_path",
 ]
 
@@ -250,6 +251,19 @@ def _unknown_match(sweep: str, parameter: str, side: str, reflection: float) -> 
         "sweep the device in both directions, or use a better matched pad there",
         sweep,
     )
+
+
+def output_reflection(entry: SweepEntry, sheet: BenchSheet, bank: PadBank, frequency_hz: FloatArray) -> ComplexArray:
+    """Return what the device sees of the change of line behind it, (n,): zero where the pads there are matched."""
+    side = change_of_line(entry.output_pads, sheet.calibration.output_pads)
+
+    def network(name: str) -> ComplexArray:
+        return bank.network(name, frequency_hz)
+
+    now = _chain(side.now[::-1], network, frequency_hz.size)
+    before = _chain(side.calibration[::-1], network, frequency_hz.size)
+    seen: ComplexArray = cascade(now, invert(before))[0, 0]
+    return seen
 
 
 def levels(

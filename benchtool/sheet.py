@@ -243,6 +243,12 @@ class _Reading:
             if found.setdefault(file.resolve(), number) != number:
                 earlier = f"{keys.file.name!r} is already sweep[{found[file.resolve()] + 1}] of this device"
                 self.log.add((*place, "file"), earlier, "list each sweep once")
+            turned = None
+            if keys.reversed is not None:
+                turned = self._existing(keys.reversed, (*place, "reversed"))
+                if turned is not None and turned.resolve() == file.resolve():
+                    remedy = "name the sweep of the device turned end for end"
+                    self.log.add((*place, "reversed"), "the sweep is its own reverse", remedy)
             source = self.analyzer.source_dbm if keys.source_dbm is None else keys.source_dbm
             entries.append(
                 SweepEntry(
@@ -251,6 +257,7 @@ class _Reading:
                     input_pads=inputs,
                     output_pads=outputs,
                     source_dbm=source,
+                    reversed=turned,
                 )
             )
         return tuple(entries)

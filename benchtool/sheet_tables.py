@@ -165,6 +165,7 @@ class SweepKeys(Table):
     input_pads: Annotated[tuple[str, ...] | None, PlainValidator(optional(names))] = None
     output_pads: Annotated[tuple[str, ...] | None, PlainValidator(optional(names))] = None
     source_dbm: _Source = None
+    reversed: Annotated[Path | None, PlainValidator(optional(file_name))] = None
 
 
 class SweepEntry(Table):
@@ -177,6 +178,8 @@ class SweepEntry(Table):
     input_pads: tuple[str, ...] = ()
     output_pads: tuple[str, ...] = ()
     source_dbm: _Source = None
+    reversed: Path | None = None
+    """Sweep of the device turned end for end in the same line, absolute; it brings S12 and S22."""
 
     def source_at(self, hz: float) -> float | None:
         """Return the level leaving port 1 in dBm at a frequency; None where it is not known."""

@@ -34,6 +34,8 @@ FIGURE_UNITS: Final = MappingProxyType(
         "input_return_loss": "dB",
         "output_return_loss": "dB",
         "reverse_isolation": "dB",
+        "stability_k": "",
+        "stability_mu": "",
         "ripple": "dB",
         "shape_factor": "",
         "rejection": "dB",

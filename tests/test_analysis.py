@@ -10,7 +10,9 @@ from numpy.testing import assert_allclose
 
 from benchtool.analysis import analyse
 from benchtool.errors import BenchtoolError, FaultsError, SheetError, SweepFileError
+from benchtool.match import stability
 from benchtool.model import Sweep
+from benchtool.pads import cascade
 from benchtool.sheet import load_sheet
 from benchtool.touchstone import format_sweep
 
@@ -256,3 +258,48 @@ def test_inputs_are_never_changed(tmp_path):
     before = state()
     analyse(load_sheet(copy), trials=50)
     assert state() == before
+
+
+def test_a_sweep_of_the_turned_device_completes_all_four_parameters(tmp_path):
+    # A two-port swept one way each way through reflecting measured pads: exact removal, against the device itself.
+    rng = np.random.default_rng(8)
+
+    def smooth(level):
+        u = np.linspace(-1, 1, FREQUENCY.size)
+        return level * np.exp(1j * (rng.uniform(0, 6) + rng.uniform(-1, 1) * u)) * (1 + 0.2 * u)
+
+    device = np.array([[smooth(0.3), smooth(0.05)], [smooth(4.0), smooth(0.4)]])
+    pads = [np.array([[smooth(0.06), smooth(0.5)], [smooth(0.5), smooth(0.05)]]) for _ in range(2)]
+    folder = tmp_path / "b"
+    folder.mkdir()
+    for name, pad in zip(("p.s2p", "q.s2p"), pads, strict=True):
+        (folder / name).write_text(format_sweep(Sweep(name, FREQUENCY, pad)), encoding="utf-8")
+    turned = device[::-1, ::-1]
+    for name, inside in (("forward.s2p", device), ("turned.s2p", turned)):
+        shown = cascade(cascade(pads[0], inside), pads[1])
+        shown[0, 1] = shown[1, 1] = 0
+        (folder / name).write_text(format_sweep(Sweep(name, FREQUENCY, shown)), encoding="utf-8")
+    (folder / "bench.toml").write_text(
+        'version = 1\n[pads.p]\nfile = "p.s2p"\n[pads.q]\nfile = "q.s2p"\n[analyzer]\nsource_dbm = -40\n'
+        '[[device]]\nname = "d"\nkind = "amplifier"\ndesign_frequency = "21 MHz"\n'
+        "[device.targets]\nstability_mu = { min = 1 }\n"
+        '[[device.sweep]]\nfile = "forward.s2p"\nreversed = "turned.s2p"\ninput_pads = ["p"]\noutput_pads = ["q"]\n',
+        encoding="utf-8",
+    )
+    result = analyse(load_sheet(folder), trials=100).devices[0]
+    assert_allclose(result.sweeps[0].sweep.s, device, rtol=0, atol=1e-9)
+    at = int(np.argmin(np.abs(FREQUENCY - 21e6)))
+    near = stability(device)
+    for key, expected in (("stability_k", near.k), ("stability_mu", near.mu)):
+        assert_allclose(result.figures[key].value, np.interp(21e6, FREQUENCY, expected), rtol=1e-4, atol=0)
+    assert_allclose(result.figures["reverse_isolation"].value, -20 * np.log10(abs(device[0, 1, at])), rtol=0, atol=0.01)
+    assert "joined-sweep" in codes(result)
+
+
+def test_stability_is_refused_where_s12_was_not_measured(tmp_path):
+    sweep = '[device.targets]\nstability_mu = { min = 1 }\n[[device.sweep]]\nfile = "x.s2p"\n'
+    sheet = bench(tmp_path / "b", {"x.s2p": (FREQUENCY, single_tuned(FREQUENCY))}, SHEET + sweep)
+    device = analyse(sheet, trials=50).devices[0]
+    assert device.figures["stability_mu"].value is None
+    assert device.targets[0].verdict == "undecided"
+    assert any(f.code == "one-path" and "stability_mu" in f.message for f in device.findings)

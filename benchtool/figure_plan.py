@@ -1,0 +1,139 @@
+"""How one sweep's figures are extracted: the plan that is made once and applied to any number of copies.
+
+:class:`FigurePlan` holds what :mod:`benchtool.figures` decided; :class:`FigureBuilder` collects those decisions.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from benchtool.fitting import Curve, fit_curve
+from benchtool.model import Bound, ComplexArray, Figure, Finding, FloatArray, Kind, Sweep
+from benchtool.noise import NoiseModel
+from benchtool.response import Passband
+from benchtool.sheet import FIGURE_UNITS
+from benchtool.units import format_si, to_db
+
+__all__ = ["Extractor", "FigureBuilder", "FigurePlan"]
+
+Extractor = Callable[["FigurePlan", ComplexArray, Mapping[str, FloatArray]], FloatArray]
+
+
+@dataclass(frozen=True, eq=False)
+class FigurePlan:
+    """How the figures of one sweep are extracted.
+
+    `entries` are the figures in the order they are shown, with their units and bounds but without values; an entry
+    whose extractor is None cannot be known, and one of `findings` says why.
+    """
+
+    kind: Kind
+    design_hz: float
+    passband: Passband
+    design_curve: Curve
+    noise: Mapping[str, NoiseModel | None]
+    """Noise seen in each measured parameter."""
+    entries: tuple[Figure, ...]
+    extractors: Mapping[str, Extractor | None]
+    findings: tuple[Finding, ...] = field(default=())
+
+    def extract(self, s: ComplexArray) -> dict[str, FloatArray]:
+        """Return each figure that can be known, (...,), from scattering parameters (..., 2, 2, n) at the device.
+
+        NaN stands where a copy does not show the figure (an edge that moved out of the sweep).
+        """
+        found = self._passband_figures(s[..., 1, 0, :])
+        for key, extractor in self.extractors.items():
+            if extractor is not None and key not in found:
+                found[key] = extractor(self, s, found)
+        return {entry.key: found[entry.key] for entry in self.entries if self.extractors[entry.key] is not None}
+
+    def figures(self, s: ComplexArray) -> dict[str, Figure]:
+        """Return the figures of one sweep, (2, 2, n), with values and bounds, without intervals."""
+        values = self.extract(s)
+        figures = {}
+        for entry in self.entries:
+            number = float(values[entry.key]) if entry.key in values else float("nan")
+            value = number if np.isfinite(number) else None
+            figures[entry.key] = Figure(
+                entry.id,
+                value,
+                entry.unit,
+                bound=entry.bound if value is not None else None,
+                parameters=entry.parameters,
+            )
+        return figures
+
+    def _passband_figures(self, s21: ComplexArray) -> dict[str, FloatArray]:
+        band = self.passband
+        found = band.figures(s21)
+        lower = found.lower_edge if band.lower_inside else np.full_like(found.peak_gain, band.start_hz)
+        upper = found.upper_edge if band.upper_inside else np.full_like(found.peak_gain, band.stop_hz)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            centre = np.sqrt(lower * upper)
+            loaded_q = centre / (upper - lower)
+        gain, delay = self.design_curve.at(s21, self.design_hz)
+        return {
+            "gain": to_db(gain),
+            "insertion_loss": -to_db(gain),
+            "peak_gain": found.peak_gain,
+            "peak_frequency": found.peak_frequency,
+            "lower_edge": lower,
+            "upper_edge": upper,
+            "bandwidth": upper - lower,
+            "centre_frequency": centre,
+            "loaded_q": loaded_q,
+            "group_delay": delay,
+            "phase": np.degrees(np.angle(gain)),
+        }
+
+
+class FigureBuilder:
+    """Collects the entries of a plan."""
+
+    def __init__(self, sweep: Sweep, kind: Kind, noise: Mapping[str, NoiseModel | None]) -> None:
+        self.sweep = sweep
+        self.kind = kind
+        self.noise = noise
+        self.entries: list[Figure] = []
+        self.extractors: dict[str, Extractor | None] = {}
+        self.findings: list[Finding] = []
+
+    def add(
+        self,
+        figure: str,
+        extractor: Extractor | None,
+        bound: Bound | None = None,
+        parameters: Mapping[str, float | tuple[float, float]] | None = None,
+    ) -> None:
+        entry = Figure(figure, None, FIGURE_UNITS[figure], bound=bound, parameters=parameters or {})
+        if entry.key not in self.extractors:
+            self.entries.append(entry)
+            self.extractors[entry.key] = extractor
+
+    def finding(self, code: str, message: str, advice: str) -> None:
+        self.findings.append(Finding(code, "caution", f"{self.sweep.name}: {message}", advice, self.sweep.name))
+
+    def outside(self, what: str, low_hz: float, high_hz: float) -> bool:
+        """Whether a stretch is not in the sweep; then a finding says so."""
+        f = self.sweep.frequency_hz
+        if f[0] <= low_hz and high_hz <= f[-1]:
+            return False
+        asked = format_si(low_hz, "Hz", 6)
+        if high_hz != low_hz:
+            asked += f" to {format_si(high_hz, 'Hz', 6)}"
+        self.finding(
+            "outside-sweep",
+            f"{what} is asked for at {asked}, but the sweep runs from {format_si(f[0], 'Hz', 6)} to "
+            f"{format_si(f[-1], 'Hz', 6)}",
+            "sweep over that frequency, or change the target",
+        )
+        return True
+
+    def curve(self, parameter: tuple[int, int], low_hz: float, high_hz: float) -> Curve:
+        i, j = parameter
+        noise = self.noise.get(f"S{i + 1}{j + 1}")
+        return fit_curve(self.sweep.frequency_hz, self.sweep.s[i, j], low_hz, high_hz, noise)
