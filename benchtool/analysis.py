@@ -7,7 +7,6 @@ import os
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import replace
 from pathlib import Path
-from types import MappingProxyType
 
 import numpy as np
 
@@ -195,7 +194,7 @@ def analyse_device(
         device.window_hz,
         reference.file,
         tuple(sweep.result for sweep in measured),
-        MappingProxyType(figures),
+        figures,
         results,
         compression,
         findings,
@@ -230,7 +229,7 @@ def _study_drive(
     drive = DriveStudy(
         None if cause is None else cause.code,
         0.0 if cause is None else cause.confidence,
-        MappingProxyType({} if cause is None else {str(name): p for name, p in cause.probabilities.items()}),
+        {} if cause is None else {str(name): p for name, p in cause.probabilities.items()},
         () if cause is None else cause.pads,
         study.onset,
         study.map,

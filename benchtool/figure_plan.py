@@ -109,12 +109,14 @@ class FigureBuilder:
         bound: Bound | None = None,
         parameters: Mapping[str, float | tuple[float, float]] | None = None,
     ) -> None:
+        """Add a figure; an extractor of None means that it cannot be known. A figure that is there already stays."""
         entry = Figure(figure, None, FIGURE_UNITS[figure], bound=bound, parameters=parameters or {})
         if entry.key not in self.extractors:
             self.entries.append(entry)
             self.extractors[entry.key] = extractor
 
     def finding(self, code: str, message: str, advice: str) -> None:
+        """Note a doubt about the sweep."""
         self.findings.append(Finding(code, "caution", f"{self.sweep.name}: {message}", advice, self.sweep.name))
 
     def outside(self, what: str, low_hz: float, high_hz: float) -> bool:
@@ -134,6 +136,7 @@ class FigureBuilder:
         return True
 
     def curve(self, parameter: tuple[int, int], low_hz: float, high_hz: float) -> Curve:
+        """Return the smooth curve of one scattering parameter, (i, j) counted from 0."""
         i, j = parameter
         noise = self.noise.get(f"S{i + 1}{j + 1}")
         return fit_curve(self.sweep.frequency_hz, self.sweep.s[i, j], low_hz, high_hz, noise)

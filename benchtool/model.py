@@ -9,7 +9,6 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
-from types import MappingProxyType
 from typing import Any, Literal, TypeAlias, cast
 
 import numpy as np
@@ -207,9 +206,9 @@ class Figure:
     confidence: float | None = None
     bound: Bound | None = None
     standard_uncertainty: float | None = None
-    budget: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
+    budget: Mapping[str, float] = field(default_factory=dict)
     """Share of each source of doubt in the variance; the shares sum to one."""
-    parameters: Mapping[str, float | tuple[float, float]] = field(default_factory=lambda: MappingProxyType({}))
+    parameters: Mapping[str, float | tuple[float, float]] = field(default_factory=dict)
     """What the figure was asked for (`at_hz`, `over_hz`, `between_db`) or extracted with (`aperture_hz`)."""
 
     @property

@@ -12,7 +12,6 @@ from __future__ import annotations
 
 from collections.abc import Collection, Mapping
 from dataclasses import dataclass, replace
-from types import MappingProxyType
 from typing import Final, Protocol
 
 import numpy as np
@@ -105,7 +104,7 @@ def figure_trials(
         if figure.bound is None and finished[key].bound is not None:
             findings.append(_lost_finding(measured.file, key, lost))
     count = next(iter(raw.values())).size if raw else 0
-    return FigureTrials(MappingProxyType(finished), values, count, tuple(findings))
+    return FigureTrials(finished, values, count, tuple(findings))
 
 
 def _alone(block: _Block, source: str, size: int) -> dict[str, FloatArray]:
@@ -161,7 +160,7 @@ def _with_interval(figure: Figure, values: FloatArray, confidence: float, budget
         confidence=confidence,
         bound=bound,
         standard_uncertainty=spread,
-        budget=MappingProxyType(dict(budget)),
+        budget=dict(budget),
     )
 
 
