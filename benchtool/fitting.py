@@ -15,6 +15,7 @@ product.
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import cache, cached_property
 from itertools import pairwise
 from typing import Final
 
@@ -84,19 +85,53 @@ class Fit:
 
     def slope_basis(self, frequency_hz: FloatArray) -> FloatArray:
         """Return the derivative of the basis with frequency, (..., degree + 1), per Hz."""
-        u = (frequency_hz - self.centre_hz) / self.scale_hz
-        columns = [legendre.legval(u, legendre.legder(unit)) for unit in np.eye(self.degree + 1)]
-        return np.asarray(np.stack([np.broadcast_to(c, u.shape) for c in columns], axis=-1) / self.scale_hz)
+        return np.asarray(self.basis(frequency_hz) @ _legendre_slopes(self.degree) / self.scale_hz)
 
-    def evaluate(self, coefficients: ComplexArray, frequency_hz: FloatArray) -> tuple[ComplexArray, FloatArray]:
-        """Return S (its mean delay put back) and the group delay in s, both (..., g), at frequencies (g,)."""
-        polynomial = _times(coefficients, self.basis(frequency_hz).T)
-        slope = _times(coefficients, self.slope_basis(frequency_hz).T)
+
+@cache
+def _legendre_slopes(degree: int) -> FloatArray:
+    """Return the derivatives of the Legendre polynomials up to `degree`, each as a column of Legendre coefficients."""
+    slopes = np.zeros((degree + 1, degree + 1))
+    for column in range(1, degree + 1):
+        slopes[:column, column] = legendre.legder(np.eye(degree + 1)[column])[:column]
+    return slopes
+
+
+@dataclass(frozen=True, eq=False)
+class _Nodes:
+    """Frequencies at which one fit is evaluated, with what does not depend on the samples: made once, used often."""
+
+    fit: Fit
+    basis: FloatArray
+    """(degree + 1, g)."""
+    slope_basis: FloatArray
+    turn: ComplexArray
+
+    @classmethod
+    def of(cls, fit: Fit, frequency_hz: FloatArray) -> _Nodes:
+        turn = np.conj(rotation(frequency_hz, fit.delay_s))
+        return cls(fit, fit.basis(frequency_hz).T, fit.slope_basis(frequency_hz).T, turn)
+
+    def evaluate(self, s: ComplexArray) -> tuple[ComplexArray, FloatArray]:
+        """Return S (its mean delay put back) and the group delay in s, both (..., g)."""
+        coefficients = self.fit.coefficients(s)
+        polynomial = _times(coefficients, self.basis)
+        slope = _times(coefficients, self.slope_basis)
         with np.errstate(divide="ignore", invalid="ignore"):
             angle_slope = np.imag(slope / polynomial) / (2 * np.pi)
-            value = 1.0 / polynomial if self.inverse else polynomial
-        delay = self.delay_s + (angle_slope if self.inverse else -angle_slope)
-        return value * np.conj(rotation(frequency_hz, self.delay_s)), delay
+            value = 1.0 / polynomial if self.fit.inverse else polynomial
+        delay = self.fit.delay_s + (angle_slope if self.fit.inverse else -angle_slope)
+        return value * self.turn, delay
+
+    def level_db(self, s: ComplexArray) -> FloatArray:
+        """Return 20 log10 of the magnitude of S, (..., g): what the real and the imaginary part give, no more."""
+        coefficients = self.fit.coefficients(s)
+        power = (coefficients.real @ self.basis) ** 2
+        power += (coefficients.imag @ self.basis) ** 2
+        with np.errstate(divide="ignore"):
+            level = np.log10(power, out=power)
+        level *= -10.0 if self.fit.inverse else 10.0
+        return np.asarray(level)
 
 
 @dataclass(frozen=True, eq=False)
@@ -119,24 +154,41 @@ class Curve:
 
     def on_grid(self, s: ComplexArray) -> tuple[ComplexArray, FloatArray]:
         """Return S and group delay in s on `grid_hz`, both (..., g), of a trace or copies of it, (..., n)."""
-        return self._evaluate(s, self.grid_hz)
+        return _side_by_side([nodes.evaluate(s) for nodes in self._grid_nodes])
+
+    def level_on_grid(self, s: ComplexArray) -> FloatArray:
+        """Return the level of S in dB on `grid_hz`, (..., g), at a fraction of the cost of :meth:`on_grid`."""
+        levels = [nodes.level_db(s) for nodes in self._grid_nodes]
+        return levels[0] if len(levels) == 1 else np.concatenate(levels, axis=-1)
 
     def at(self, s: ComplexArray, frequency_hz: float) -> tuple[ComplexArray, FloatArray]:
         """Return S and group delay in s at one frequency, both (...,)."""
-        value, delay = self._evaluate(s, np.array([frequency_hz]))
+        if frequency_hz not in self._point_nodes:
+            self._point_nodes[frequency_hz] = self._nodes(np.array([frequency_hz]))
+        value, delay = _side_by_side([nodes.evaluate(s) for nodes in self._point_nodes[frequency_hz]])
         return value[..., 0], delay[..., 0]
 
-    def _evaluate(self, s: ComplexArray, frequency_hz: FloatArray) -> tuple[ComplexArray, FloatArray]:
+    @cached_property
+    def _grid_nodes(self) -> tuple[_Nodes, ...]:
+        return self._nodes(self.grid_hz)
+
+    @cached_property
+    def _point_nodes(self) -> dict[float, tuple[_Nodes, ...]]:
+        return {}
+
+    def _nodes(self, frequency_hz: FloatArray) -> tuple[_Nodes, ...]:
+        """Return rising frequencies shared out to the fits that speak for them."""
         borders = [fit.low_hz for fit in self.fits[1:]]
         owner = np.searchsorted(borders, frequency_hz, side="right")
-        values, delays = [], []
-        for index, fit in enumerate(self.fits):
-            mine = frequency_hz[owner == index]
-            if mine.size:
-                value, delay = fit.evaluate(fit.coefficients(s), mine)
-                values.append(value)
-                delays.append(delay)
-        return np.concatenate(values, axis=-1), np.concatenate(delays, axis=-1)
+        shared = ((fit, frequency_hz[owner == index]) for index, fit in enumerate(self.fits))
+        return tuple(_Nodes.of(fit, mine) for fit, mine in shared if mine.size)
+
+
+def _side_by_side(parts: list[tuple[ComplexArray, FloatArray]]) -> tuple[ComplexArray, FloatArray]:
+    """Return values and delays of neighbouring stretches as one of each."""
+    if len(parts) == 1:
+        return parts[0]
+    return np.concatenate([value for value, _ in parts], axis=-1), np.concatenate([d for _, d in parts], axis=-1)
 
 
 @dataclass(frozen=True)

@@ -127,6 +127,8 @@ def estimate_noise(frequency_hz: FloatArray, s: ComplexArray) -> NoiseModel | No
     """
     if s.size < _ORDERS[0] + 5:
         return None
+    if not np.any(s):
+        return NOISE_FREE
     turned = s * rotation(frequency_hz, trend_delay(frequency_hz, s))
     variance = _local_variance(frequency_hz, turned)
     power = moving_average(np.abs(s) ** 2, 5)
