@@ -7,6 +7,7 @@ import os
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import replace
 from pathlib import Path
+from typing import Final
 
 import numpy as np
 
@@ -150,6 +151,13 @@ def analyse_device(
     """
     measured = [_measure(sheet, device, number, entry, sweeps, bank) for entry in device.sweeps]
     reference, reason = choose_reference(measured)
+    drive, drive_findings = _study_drive(sheet, device, bank, measured, reference)
+    trusted = _trusted(measured, device, sheet, drive)
+    if drive is not None and trusted and reference not in trusted:
+        distrusted = reference.file
+        reference, reason = choose_reference(trusted)
+        reason += f", once {distrusted} is set aside: {_WHY_ASIDE[drive.cause or '']}"
+        drive, drive_findings = _study_drive(sheet, device, bank, measured, reference)
     at_hz = reference.plan.design_hz
     compression = compare_drives(measured, reference, reason, at_hz)
     doubts = [
@@ -170,7 +178,6 @@ def analyse_device(
         deciding=keys or [next(iter(reference.plan.extractors))],
     )
     figures, values = dict(trial.figures), dict(trial.values)
-    drive, drive_findings = _study_drive(sheet, device, bank, measured, reference, at_hz)
     if drive is not None and device.kind == "amplifier":
         figures, values = carry_drive_doubt(figures, values, drive.onset.reference, seed=number)
         figures.update(onset_figures(drive.onset))
@@ -182,7 +189,7 @@ def analyse_device(
         )
     )
     results = tuple(
-        judge(figures[key], target, values.get(key), confidence, _way_out(figures[key], bank, drive_findings))
+        judge(figures[key], target, values.get(key), confidence, _way_out(figures[key], sheet, bank, drive_findings))
         for key, target in zip(keys, device.targets, strict=True)
     )
     used = {pad for entry in device.sweeps for pad in pads_that_count(entry, sheet)}
@@ -205,17 +212,37 @@ def analyse_device(
     )
 
 
+_WHY_ASIDE: Final = {
+    "pad-value-suspect": "a pad in it is probably not what the sheet says",
+    "reference-not-repeating": "it does not repeat",
+}
+
+
+def _trusted(
+    measured: Sequence[MeasuredSweep], device: Device, sheet: BenchSheet, drive: DriveStudy | None
+) -> list[MeasuredSweep]:
+    """Return the sweeps that the cause of the gain changes leaves fit to be the reference."""
+    if drive is None or drive.cause not in _WHY_ASIDE:
+        return list(measured)
+    suspect = {pad.name for pad in drive.pads[:1]} if drive.cause == "pad-value-suspect" else set()
+    return [
+        sweep
+        for sweep, entry in zip(measured, device.sweeps, strict=True)
+        if sweep.file != drive.odd_sweep and not suspect & set(pads_that_count(entry, sheet))
+    ]
+
+
 def _study_drive(
     sheet: BenchSheet,
     device: Device,
     bank: PadBank,
     measured: Sequence[MeasuredSweep],
     reference: MeasuredSweep,
-    at_hz: float,
 ) -> tuple[DriveStudy | None, tuple[Finding, ...]]:
     """Return what the sweeps say about drive, with its findings; nothing for a passive device swept once."""
     if device.kind != "amplifier" and len(measured) < 2:
         return None, ()
+    at_hz = reference.plan.design_hz
     study = study_compression(measured, device.sweeps, sheet, bank, at_hz, reference.file, device.kind)
     if study is None:
         return None, ()
@@ -231,6 +258,7 @@ def _study_drive(
         0.0 if cause is None else cause.confidence,
         {} if cause is None else {str(name): p for name, p in cause.probabilities.items()},
         () if cause is None else cause.pads,
+        None if cause is None else cause.odd_sweep,
         study.onset,
         study.map,
         planned,
@@ -238,12 +266,12 @@ def _study_drive(
     return drive, tuple(findings)
 
 
-def _way_out(figure: Figure, bank: PadBank, drive_findings: Sequence[Finding]) -> str:
+def _way_out(figure: Figure, sheet: BenchSheet, bank: PadBank, drive_findings: Sequence[Finding]) -> str:
     """Return what would decide a target of this figure: a second drive where that is the doubt, else its budget's."""
     unproven = [finding for finding in drive_findings if finding.code == "drive-unproven"]
     if figure.bound is not None and figure.bound == BOUND_WHEN_COMPRESSED.get(figure.id) and unproven:
         return unproven[0].advice
-    return remedy(figure, bank)
+    return remedy(figure, bank, port_match_stated=sheet.analyzer.port_match_db is not None)
 
 
 def _measure(

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sys
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, NoReturn
 
@@ -11,9 +12,11 @@ import typer
 from benchtool import __version__
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator, Sequence
+    from collections.abc import Callable, Iterator, Sequence
 
+    from benchtool.lots import LotBench
     from benchtool.model import BenchResult
+    from benchtool.reporting import ReportOptions
     from benchtool.sheet import BenchSheet
 
 __all__ = ["app", "main"]
@@ -30,6 +33,17 @@ Bench = Annotated[
     typer.Argument(
         help="A folder holding bench.toml, a bench sheet, or .s2p files for a quick look.", show_default=False
     ),
+]
+BenchOrLot = Annotated[
+    list[Path],
+    typer.Argument(
+        help="A folder holding bench.toml, or folders that do (a lot); a bench sheet; or .s2p files for a quick look.",
+        show_default=False,
+    ),
+]
+Jobs = Annotated[
+    int | None,
+    typer.Option("--jobs", min=1, help="Processes that share the work; left out, one for each processor."),
 ]
 Out = Annotated[Path | None, typer.Option("--out", help="Folder for the results; made if it is not there.")]
 Strict = Annotated[bool, typer.Option("--strict", help="Refuse sweep files that do not follow the standard.")]
@@ -104,46 +118,110 @@ def _load(
         raise RequestError(
             f"{len(bench)} arguments that are not all .s2p files", "give one folder, one sheet, or only .s2p files"
         )
-    quick = {"--design": design, "--source": source, "--input-pad": inputs, "--output-pad": outputs}
-    given = [option for option, value in quick.items() if value]
-    if given:
-        raise RequestError(f"{' and '.join(given)} with a bench sheet", "write it in the sheet instead")
+    _refuse_quick_look(design, source, inputs, outputs)
     sheet = load_sheet(bench[0])
     return sheet, sheet.folder / "report"
 
 
-def _analyse(sheet: BenchSheet, strict: bool, trials: int | None) -> BenchResult:
-    from benchtool.analysis import analyse
+def _refuse_quick_look(
+    design: str | None, source: float | None, inputs: list[float] | None, outputs: list[float] | None
+) -> None:
+    """Refuse the options of a quick look where there is a sheet to say it."""
+    from benchtool.errors import RequestError
 
-    if len(sheet.devices) < 2 or not sys.stderr.isatty():
-        return analyse(sheet, strict=strict, trials=trials)
+    quick = {"--design": design, "--source": source, "--input-pad": inputs, "--output-pad": outputs}
+    given = [option for option, value in quick.items() if value]
+    if given:
+        raise RequestError(f"{' and '.join(given)} with a bench sheet", "write it in the sheet instead")
+
+
+@contextmanager
+def _interruptible() -> Iterator[None]:
+    """Answer an interrupt with one line and status 130, whatever the version of typer makes of it."""
+    try:
+        yield
+    except KeyboardInterrupt:
+        print("stopped; files already written are whole", file=sys.stderr)
+        raise typer.Exit(130) from None
+
+
+@contextmanager
+def _progress(what: str, total: int) -> Iterator[Callable[..., None]]:
+    """Give a function to call at each step; it moves a bar on a terminal, and is silent when piped."""
+    if total < 2 or not sys.stderr.isatty():
+        yield lambda *_: None
+        return
     from rich.console import Console
-    from rich.progress import Progress
+    from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
 
-    with Progress(console=Console(stderr=True), transient=True) as progress:
-        task = progress.add_task("Measuring", total=len(sheet.devices))
-        return analyse(sheet, lambda _name: progress.advance(task), strict=strict, trials=trials)
+    columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TimeRemainingColumn())
+    with Progress(*columns, console=Console(stderr=True), transient=True) as progress:
+        task = progress.add_task(what, total=total)
+        yield lambda *_: progress.advance(task)
 
 
-def _pages(result: BenchResult) -> Iterator[tuple[str, bytes]]:
-    """Yield name and content of every page file."""
-    from benchtool.export import unique_stems
-    from benchtool.page import render_page
+def _analyse(sheet: BenchSheet, strict: bool, trials: int | None) -> BenchResult:
+    from benchtool.processes import processors
+    from benchtool.reporting import ReportOptions, measure
 
-    stems = unique_stems(device.name for device in result.devices)
-    for stem, device in zip(stems, result.devices, strict=True):
-        pdf, png = render_page(result, device)
-        yield f"{stem}.pdf", pdf
-        yield f"{stem}.png", png
+    with _interruptible(), _progress("Devices", len(sheet.devices)) as advance:
+        return measure(sheet, ReportOptions(False, strict, trials), processors(), advance).result
+
+
+def _benches_of_lot(bench: Sequence[Path]) -> tuple[list[Path], list[LotBench]]:
+    """Return the benches of a lot, and the folders that cannot be listed; nothing where the argument is no lot."""
+    if len(bench) != 1 or not bench[0].is_dir() or (bench[0] / "bench.toml").is_file():
+        return [], []
+    from benchtool.lots import find_benches
+
+    return find_benches(bench[0])
+
+
+def _report_lot(
+    folder: Path,
+    benches: list[Path],
+    closed: list[LotBench],
+    out: Path | None,
+    options: ReportOptions,
+    jobs: int,
+    again: bool,
+) -> NoReturn:
+    from dataclasses import replace
+
+    from benchtool.lots import lot_csv, lot_lines, measure_lot
+    from benchtool.whole_files import prepare_folder, write_whole
+
+    summary = out or folder / "report"
+    # An output folder that cannot be made is told before hours of work, not after.
+    prepare_folder(summary)
+    with _progress("Benches", len(benches)) as advance:
+        lot = measure_lot(folder, benches, out, options, jobs=jobs, again=again, progress=advance)
+    lot = replace(lot, benches=(*lot.benches, *closed))
+    for bench in lot.unusable:
+        for line in bench.faults:
+            print(line, file=sys.stderr)
+    write_whole(summary / "lot.csv", lot_csv(lot))
+    if options.pages:
+        from benchtool.lot_page import render_lot
+
+        pdf, png = render_lot(lot)
+        write_whole(summary / "lot.pdf", pdf)
+        write_whole(summary / "lot.png", png)
+    for line in lot_lines(lot):
+        print("".join(c if c.isprintable() else c.encode("unicode_escape").decode() for c in line))
+    print(f"Written to {summary}")
+    raise typer.Exit(lot.exit_status)
 
 
 @app.command()
 def report(
-    bench: Bench,
+    bench: BenchOrLot,
     out: Out = None,
     no_page: Annotated[bool, typer.Option("--no-page", help="Write the numbers only.")] = False,
     strict: Strict = False,
     trials: Trials = None,
+    jobs: Jobs = None,
+    again: Annotated[bool, typer.Option("--again", help="Measure every bench of a lot, changed or not.")] = False,
     design: Design = None,
     source: Source = None,
     input_pad: InputPad = None,
@@ -151,21 +229,28 @@ def report(
 ) -> None:
     """Measure every device, judge it against its targets, and write one page for each.
 
+    A folder of bench folders is a lot: each bench has its own report, and the lot one page and lot.csv.
+
     Exit status: 0 every target met or none set; 1 a target missed or undecided; 2 the input cannot be used.
     """
-    from benchtool.export import prepare_folder, results_csv, results_json, write_whole
+    from benchtool.processes import processors
+    from benchtool.reporting import ReportOptions, measure, write_report
+
+    options, jobs = ReportOptions(not no_page, strict, trials), jobs or processors()
+    benches, closed = _benches_of_lot(bench)
+    if benches:
+        _refuse_quick_look(design, source, input_pad, output_pad)
+        with _interruptible():
+            _report_lot(bench[0], benches, closed, out, options, jobs, again)
     from benchtool.terminal import print_result
 
     sheet, folder = _load(bench, design, source, input_pad, output_pad)
     folder = out or folder
-    result = _analyse(sheet, strict, trials)
-    prepare_folder(folder)
-    for name, data in () if no_page else _pages(result):
-        write_whole(folder / name, data)
-    write_whole(folder / "results.csv", results_csv(result))
-    write_whole(folder / "results.json", results_json(result))
-    print_result(result, folder)
-    if any(device.verdict in ("missed", "undecided") for device in result.devices):
+    with _interruptible(), _progress("Devices", len(sheet.devices)) as advance:
+        measured = measure(sheet, options, jobs, advance)
+    write_report(measured, folder)
+    print_result(measured.result, folder)
+    if any(device.verdict in ("missed", "undecided") for device in measured.result.devices):
         raise typer.Exit(1)
 
 

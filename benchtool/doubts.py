@@ -51,10 +51,12 @@ ASSUMED: Final[Mapping[str, float]] = {
     "directivity": 36.0,
     "reading, standard uncertainty": 0.05,
     "source level tolerance": 0.5,
-    "return loss of a device port that was not measured": 10.0,
-    "how much of that changes across the resonance": 6.0,
+    "return loss of an input that was not measured": 10.0,
+    "return loss of an output that was not measured": 3.0,
 }
-"""What is taken where the sheet says nothing, in dB."""
+"""What is taken where the sheet says nothing, in dB. A tuned collector or drain is a poor match, and changes through
+its resonance: an unknown port is taken to have a part of that size that stands still and another that follows S21.
+"""
 
 _SMALL_PAD_DB: Final = 12.0
 
@@ -175,11 +177,11 @@ def _pad_reflection(name: str, bank: PadBank) -> float:
 
 
 def _joints_of(
-    weights: Mapping[str, int], device: str | None, port: float, bank: PadBank, at_hz: float
+    weights: Mapping[str, int], side: str, device: str | None, port: float, bank: PadBank, at_hz: float
 ) -> tuple[Joint, ...]:
     """Return the joints on one side; `device` names the reflection of the device there, None where it is not known."""
-    unknown = 1.0 if device else from_db(-ASSUMED["return loss of a device port that was not measured"])
-    resonant = 0.0 if device else unknown * from_db(-ASSUMED["how much of that changes across the resonance"])
+    unknown = 1.0 if device else from_db(-ASSUMED[f"return loss of an {side} that was not measured"])
+    resonant = 0.0 if device else unknown
     joints = [Joint(f"port and {pad}", port * _pad_reflection(pad, bank), None) for pad in weights]
     if weights:
         nearest = list(weights)[-1]
@@ -208,7 +210,8 @@ def sweep_doubts(sweep: Sweep, entry: SweepEntry, sheet: BenchSheet, bank: PadBa
         known = device in sweep.measured and float(np.hypot.reduce(vector)) <= BURIED_UNCERTAINTY
         weights.append(own)
         vectors.append(vector)
-        joints.append(_joints_of(own, device if known else None, port, bank, at_hz))
+        side = "input" if device == "S11" else "output"
+        joints.append(_joints_of(own, side, device if known else None, port, bank, at_hz))
         loss = sum(sign * bank.loss_db(pad, at_hz) for pad, sign in own.items())
         ports.append((port * from_db(-2.0 * max(loss, 0.0)), *_own_reflections(own, bank)[-1:]))
     reading = analyzer.reading_db

@@ -134,6 +134,8 @@ class DriveStudy:
     """Probability of that cause among its rivals."""
     probabilities: Mapping[str, float]
     pads: tuple[PadEstimate, ...]
+    odd_sweep: str | None
+    """The sweep that did not repeat, where one stands out."""
     onset: Onset
     map: CompressionMap | None
     next_sweeps: tuple[NextSweep, ...]

@@ -35,6 +35,8 @@ _ACCEPTED_EXCESS: Final = 1.6
 _ROUNDING: Final = 1e-11
 _GOOD_ENOUGH: Final = 2e-5
 """Misfit, as a share of the largest sample, below which no fit is split: 0.0002 dB."""
+_TINY: Final = 1e-150
+"""Stands in for zero where a trace is zero throughout."""
 _INVERSE_NEEDS_SNR: Final = 5.0
 """1/S is fitted only where the trace stands this far above the noise throughout (a ratio of amplitudes)."""
 
@@ -280,7 +282,7 @@ def _fit(frequency_hz: FloatArray, s: ComplexArray, low_hz: float, high_hz: floa
     smallest = _INVERSE_NEEDS_SNR * float(np.max(sigma)) if noisy else 1e-9 * float(np.max(magnitude))
     level = float(np.min(moving_average(magnitude, 5))) if noisy else float(np.min(magnitude))
     full = np.asarray(legendre.legvander((f - centre) / scale, max(min(MAX_DEGREE, f.size - 3), 0)), np.float64)
-    form = _best_form(f, trace, full, sigma, level > smallest, context.line_delay_s)
+    form = _best_form(f, trace, full, sigma, level > max(smallest, _TINY), context.line_delay_s)
     turn = rotation(f, form.delay_s)
     target = 1.0 / (trace * turn) if form.inverse else trace * turn
     degree = min(form.degree + 1, full.shape[1] - 1)
@@ -293,10 +295,12 @@ def _fit(frequency_hz: FloatArray, s: ComplexArray, low_hz: float, high_hz: floa
         fitted = target @ solve.T @ basis.T
         fitted = 1.0 / fitted if form.inverse else fitted
         smooth = np.maximum(np.abs(fitted), 1e-6 * np.max(magnitude))
-    allowed = np.hypot(noise.sigma(smooth), _GOOD_ENOUGH * np.max(magnitude))
+    allowed = np.maximum(np.hypot(noise.sigma(smooth), _GOOD_ENOUGH * np.max(magnitude)), _TINY)
     error = np.abs(fitted - trace * turn) ** 2
     freedom = max(f.size - degree - 1, 1)
-    excess = float(np.sum(error / allowed**2)) / freedom
+    # A trace of zeros allows no error and has none.
+    relative = np.divide(error, allowed**2, out=np.zeros_like(error), where=allowed > 0.0)
+    excess = float(np.sum(relative)) / freedom
     beyond = max(float(np.sum(error)) / freedom - float(np.mean(noise.sigma(smooth) ** 2)), 0.0)
     # Residuals scatter round the noise by their own uncertainty; only what stands clear of that is misfit.
     misfit = float(np.sqrt(beyond)) if excess > _ACCEPTED_EXCESS else 0.0

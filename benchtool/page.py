@@ -19,7 +19,7 @@ from matplotlib.figure import Figure as Canvas
 from benchtool.model import BenchResult, DeviceResult
 from benchtool.page_gain import draw_gain
 from benchtool.page_notes import cautions, findings_block, provenance
-from benchtool.page_panels import draw_panels
+from benchtool.page_panels import draw_panels, least_height
 from benchtool.page_paper import HEIGHT_PT, STYLE, Block, Paper
 from benchtool.page_path import path_strip
 from benchtool.page_scales import view_of
@@ -34,9 +34,11 @@ __all__ = ["draw_page", "render_page"]
 _GAP_PT: Final = 5.0
 _GAPS: Final = 9
 _LEAST_GAIN_PT: Final = 116.0
-_LEAST_PANELS_PT: Final = 84.0
 _MOST_GAIN_PT: Final = 250.0
 _MOST_PANELS_PT: Final = 170.0
+_GAIN_SHARE: Final = 0.6
+_GAIN_SHARE_BESIDE_DRIVE: Final = 0.4
+"""Share of the free height that goes to gain against frequency; the smaller diagrams get the rest."""
 _LEAST_FINDINGS_PT: Final = 46.0
 _PNG_DPI: Final = 150
 
@@ -48,16 +50,18 @@ def _compose(bench: BenchResult, device: DeviceResult) -> Canvas:
     top_parts = [head(bench, device), path_strip(device), sweep_list(device, looks)]
     foot_parts = [cautions(), provenance(bench, device, looks)]
     free = HEIGHT_PT - _GAP_PT * _GAPS - sum(part.height for part in [*top_parts, *foot_parts])
-    free -= _LEAST_GAIN_PT + _LEAST_PANELS_PT
+    least_panels = least_height(device, looks)
+    free -= _LEAST_GAIN_PT + least_panels
     tables, findings = _numbers_and_findings(device, free)
     free -= sum(part.height for part in [*tables, findings])
-    gain = _LEAST_GAIN_PT + min(0.6 * max(free, 0.0), _MOST_GAIN_PT - _LEAST_GAIN_PT)
-    panels = _LEAST_PANELS_PT + min(0.4 * max(free, 0.0), _MOST_PANELS_PT - _LEAST_PANELS_PT)
+    to_gain = _GAIN_SHARE if device.drive is None else _GAIN_SHARE_BESIDE_DRIVE
+    gain = _LEAST_GAIN_PT + min(to_gain * max(free, 0.0), _MOST_GAIN_PT - _LEAST_GAIN_PT)
+    panels = least_panels + min((1.0 - to_gain) * max(free, 0.0), _MOST_PANELS_PT - least_panels)
 
     y = _put(paper, top_parts, 0.0)
     draw_gain(paper, device, looks, view, y, gain)
     y += gain + _GAP_PT
-    draw_panels(paper, device, view, y, panels)
+    draw_panels(paper, device, looks, view, y, panels)
     y += panels + _GAP_PT
     _put(paper, [*tables, findings], y)
     _put(paper, foot_parts, HEIGHT_PT - sum(part.height for part in foot_parts) - _GAP_PT)

@@ -1,32 +1,35 @@
-"""A device in; the row of smaller diagrams under its gain out: gain against drive, match, group delay.
+"""A device in; the row of smaller diagrams under its gain out: gain against drive, compression, match, group delay.
 
-Where two drives or more are known there are three diagrams side by side: compression is what such a session was
-swept for, and the delay stays beside it because a limiting stage shows there too. Otherwise match and group delay
-share the row. What was not measured is said in words in its place.
+Where two drives or more are known compression is what the session was swept for: gain against drive stands first,
+beside it the map of compression where there are three drives, and the delay, because a limiting stage shows there
+too. Match stands among them where it can be shown. With one drive match and group delay share the row, and what was
+not measured is said in words in its place.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from functools import partial
 from typing import Final
 
 import numpy as np
 from matplotlib.axes import Axes
 
-from benchtool.digits import quantity, stated
-from benchtool.model import Compression, DeviceResult, FloatArray
-from benchtool.page_paper import BLUE, GREEN, HEADING_PT, INK, LIGHT, VERMILLION, WIDTH_PT, ZONE, Dash, Paper
+from benchtool.digits import quantity
+from benchtool.model import DeviceResult, FloatArray
+from benchtool.page_drive import LEAST_ABOVE_PT, draw_drive, drive_marks
+from benchtool.page_map import draw_map, map_shown
+from benchtool.page_panel import NOTE_PT, Panel
+from benchtool.page_paper import BLUE, GREEN, INK, WIDTH_PT, ZONE, Dash, Paper
 from benchtool.page_scales import View, decibels_of, frame, near_band, widened
-from benchtool.page_text import fit
+from benchtool.page_traces import Trace
 from benchtool.phase import group_delay_curve
 
-__all__ = ["draw_panels"]
+__all__ = ["draw_panels", "least_height"]
 
-_LEFT_PT: Final = 27.0
-_BELOW_PT: Final = 11.0
 _APERTURE_SHARE: Final = 0.15
-_NOTE_PT: Final = 12.0
 _GUTTER_PT: Final = 12.0
+_LEAST_PT: Final = 84.0
 _PORTS: Final[tuple[tuple[str, str, int, int, str, Dash], ...]] = (
     ("S11", "input_return_loss", 0, 0, INK, "-"),
     ("S22", "output_return_loss", 1, 1, BLUE, (0, (5, 1.5, 1.2, 1.5))),
@@ -35,58 +38,6 @@ _TIMES: Final = ((1.0, "s"), (1e-3, "ms"), (1e-6, "µs"), (1e-9, "ns"), (1e-12, 
 
 _Curve = tuple[str, FloatArray, FloatArray, str, Dash]
 """Name, frequency in the view's unit, return loss in dB, colour and dash."""
-
-Area = tuple[float, float, float, float]
-"""Left, top, width and height of a diagram with its heading, in points."""
-
-
-def _plot_area(area: Area, right_pt: float) -> Area:
-    """Return where the plotting area goes: under the heading and one line of notes."""
-    x, top, width, height = area
-    above = HEADING_PT + _NOTE_PT
-    return x + _LEFT_PT, top + above, width - _LEFT_PT - right_pt, height - above - _BELOW_PT
-
-
-def _note(paper: Paper, area: Area, note: str) -> None:
-    """Write the line between heading and diagram."""
-    paper.lines(area[0], area[1] + HEADING_PT - 1.5, fit(note, (6.5, 6.2, 6.0), area[2]), color=LIGHT)
-
-
-def _say(paper: Paper, area: Area, sentence: str) -> None:
-    x, top, width, _ = area
-    paper.lines(x, top + HEADING_PT + 6.0, fit(sentence, (7.0, 6.5), width, most=4), color=LIGHT)
-
-
-def _drive_points(compression: Compression | None) -> list[tuple[float, float, bool]]:
-    """Return drive, gain and whether compressed, of the sweeps whose drive is known, by rising drive."""
-    points = compression.points if compression else ()
-    return sorted((p.drive_dbm, p.gain_db, p.compressed) for p in points if p.drive_dbm is not None)
-
-
-def _draw_drive(paper: Paper, device: DeviceResult, area: Area) -> None:
-    """Draw gain at the design frequency against drive, with the line 1 dB below the reference's gain."""
-    compression = device.compression
-    points = _drive_points(compression)
-    if compression is None:
-        return
-    paper.heading(area[1], "Gain, dB against drive, dBm", area[0], area[2])
-    _note(paper, area, f"{stated(compression.at_hz, 'Hz')}; hollow: compressed; dotted: 1 dB down")
-    left, upper, wide, tall = _plot_area(area, 4.0)
-    axes = paper.axes(left, upper, wide, tall)
-    drives, gains = [p[0] for p in points], [p[1] for p in points]
-    reference = next((p.gain_db for p in compression.points if p.file == compression.reference), gains[0])
-    across = widened(drives, 0.1, 10.0)
-    frame(axes, across, widened([*gains, reference - 1.5], 0.15, 3.0), 5, tall)
-    axes.axhline(reference, color=LIGHT, linewidth=0.6)
-    axes.axhline(reference - 1.0, color=VERMILLION, linewidth=0.8, linestyle=(0, (1.5, 1.2)))
-    axes.plot(drives, gains, color=INK, linewidth=0.9)
-    for compressed, fill in ((False, INK), (True, "white")):
-        chosen = [(d, g) for d, g, c in points if c is compressed]
-        if chosen:
-            axes.plot(*zip(*chosen, strict=True), "o", color=INK, markerfacecolor=fill, markersize=4.5, zorder=3)
-    onset = device.figures.get("input_p1db")
-    if onset is not None and onset.value is not None and onset.bound is None:
-        axes.plot([onset.value], [reference - 1.0], "D", color=VERMILLION, markersize=4.5, zorder=4)
 
 
 def _return_losses(device: DeviceResult, view: View) -> tuple[list[_Curve], list[str]]:
@@ -106,18 +57,17 @@ def _return_losses(device: DeviceResult, view: View) -> tuple[list[_Curve], list
     return curves, missing
 
 
-def _draw_match(paper: Paper, device: DeviceResult, view: View, area: Area) -> None:
+def _draw_match(paper: Paper, device: DeviceResult, view: View, panel: Panel) -> None:
     """Draw the return loss at both ports, with the least that a target wants of it."""
-    x, top, width, _ = area
-    paper.heading(top, f"Return loss, dB against {view.unit}", x, width)
     curves, missing = _return_losses(device, view)
     if not curves:
-        _say(paper, area, " ".join(missing))
+        panel.heading(paper, "Return loss")
+        panel.say(paper, " ".join(missing))
         return
-    left, upper, wide, tall = _plot_area(area, 20.0)
-    if missing:
-        _note(paper, area, " ".join(missing))
-    axes = paper.axes(left, upper, wide, tall)
+    panel.heading_and_note(paper, "Return loss, dB", f"against {view.unit}", missing)
+    area = panel.plot(20.0)
+    left, upper, wide, tall = area.left, area.top, area.width, area.height
+    axes = area.axes(paper)
     limits = _match_limits(device, curves)
     frame(axes, (view.low_hz / view.factor, view.high_hz / view.factor), limits, 5, tall)
     for number, (_, frequency, loss, color, dash) in enumerate(curves):
@@ -178,14 +128,13 @@ def _drawn_aperture(device: DeviceResult) -> float:
     return max(_APERTURE_SHARE * bandwidth.value, 2.0 * spacing)
 
 
-def _draw_delay(paper: Paper, device: DeviceResult, view: View, area: Area) -> None:
+def _draw_delay(paper: Paper, device: DeviceResult, view: View, panel: Panel) -> None:
     """Draw the group delay of the reference sweep with the aperture it was taken with."""
-    x, top, width, _ = area
     sweep = device.reference.sweep
     aperture = _drawn_aperture(device)
     if len(sweep.frequency_hz) < 3 or aperture <= 0:
-        paper.heading(top, "Group delay", x, width)
-        _say(paper, area, "The sweep has too few points for a group delay.")
+        panel.heading(paper, "Group delay")
+        panel.say(paper, "The sweep has too few points for a group delay.")
         return
     shown = view.inside(sweep.frequency_hz)
     delay = group_delay_curve(sweep.frequency_hz, sweep.s21, aperture)[shown]
@@ -194,13 +143,13 @@ def _draw_delay(paper: Paper, device: DeviceResult, view: View, area: Area) -> N
     strong = delay[level > np.nanmax(level) - 20.0]
     low, high = widened([0.0, *strong.tolist()], 0.1, 1e-12)
     factor, unit = next((t for t in _TIMES if max(abs(low), abs(high)) >= 2 * t[0]), _TIMES[-1])
-    paper.heading(top, f"Group delay, {unit} against {view.unit}", x, width)
-    left, upper, wide, tall = _plot_area(area, 4.0)
-    axes = paper.axes(left, upper, wide, tall)
-    frame(axes, (view.low_hz / view.factor, view.high_hz / view.factor), (low / factor, high / factor), 5, tall)
+    notes = [f"aperture {quantity(aperture, 'Hz', digits=3)}", "ring: the figure"]
+    panel.heading_and_note(paper, f"Group delay, {unit}", f"against {view.unit}", notes)
+    area = panel.plot()
+    axes = area.axes(paper)
+    frame(axes, (view.low_hz / view.factor, view.high_hz / view.factor), (low / factor, high / factor), 5, area.height)
     axes.plot(sweep.frequency_hz[shown] / view.factor, delay / factor, color=INK, linewidth=1.1)
     _mark_delay(axes, device, view, factor)
-    _note(paper, area, f"aperture {quantity(aperture, 'Hz', digits=3)}; ring: the figure")
 
 
 def _mark_delay(axes: Axes, device: DeviceResult, view: View, factor: float) -> None:
@@ -220,17 +169,37 @@ def _mark_delay(axes: Axes, device: DeviceResult, view: View, factor: float) -> 
                     axes.plot([at], [limit / factor], "_", color=GREEN, markersize=7, zorder=1.5)
 
 
-def draw_panels(paper: Paper, device: DeviceResult, view: View, top: float, height: float) -> None:
-    """Draw the row of smaller diagrams into `height` points below `top`."""
+_Draw = Callable[[Panel], None]
+
+
+def _row(paper: Paper, device: DeviceResult, looks: Sequence[Trace], view: View) -> list[tuple[float, _Draw]]:
+    """Return the diagrams of the row from left to right, each with its share of the width."""
     near = near_band(device, view)
-    draws: list[Callable[[Area], None]] = []
-    if len(_drive_points(device.compression)) > 1:
-        draws.append(lambda area: _draw_drive(paper, device, area))
-        draws.append(lambda area: _draw_match(paper, device, near, area))
-        draws.append(lambda area: _draw_delay(paper, device, near, area))
-    else:
-        draws.append(lambda area: _draw_delay(paper, device, near, area))
-        draws.append(lambda area: _draw_match(paper, device, near, area))
-    width = (WIDTH_PT - _GUTTER_PT * (len(draws) - 1)) / len(draws)
-    for index, draw in enumerate(draws):
-        draw((index * (width + _GUTTER_PT), top, width, height))
+    delay: _Draw = partial(_draw_delay, paper, device, near)
+    match: _Draw = partial(_draw_match, paper, device, near)
+    marks, shown = drive_marks(device, looks), map_shown(device)
+    if not marks:
+        return [(1.0, delay), (1.0, match)]
+    row: list[tuple[float, _Draw]] = [(1.0, partial(draw_drive, paper, device, marks))]
+    if shown is not None:
+        row.append((1.0, partial(draw_map, paper, device, shown, view)))
+    if _return_losses(device, near)[0]:
+        row.append((0.8 if shown else 1.0, match))
+    return [*row, (0.8 if len(row) > 2 else 1.0, delay)]
+
+
+def least_height(device: DeviceResult, looks: Sequence[Trace]) -> float:
+    """Return the least height of the row in points: the words of a study of drive need room above the diagram."""
+    return _LEAST_PT + (LEAST_ABOVE_PT - NOTE_PT if device.drive and drive_marks(device, looks) else 0.0)
+
+
+def draw_panels(
+    paper: Paper, device: DeviceResult, looks: Sequence[Trace], view: View, top: float, height: float
+) -> None:
+    """Draw the row of smaller diagrams into `height` points below `top`."""
+    row = _row(paper, device, looks, view)
+    each = (WIDTH_PT - _GUTTER_PT * (len(row) - 1)) / sum(share for share, _ in row)
+    left = 0.0
+    for share, draw in row:
+        draw(Panel(left, top, share * each, height))
+        left += share * each + _GUTTER_PT

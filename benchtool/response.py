@@ -15,9 +15,11 @@ of perturbed copies of it, (..., n), by the same code. Decisions made on purpose
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Final
 
 import numpy as np
+from numpy.typing import NDArray
 
 from benchtool.fitting import Curve, fit_curve
 from benchtool.model import ComplexArray, FloatArray
@@ -41,9 +43,30 @@ class PassbandFigures:
     peak_frequency: FloatArray
     lower_edge: FloatArray
     upper_edge: FloatArray
-    delay_at_peak: FloatArray
-    phase_q: FloatArray
-    """Loaded Q from the width between the points where the phase has turned 45° either way from the peak."""
+    curve: Curve
+    trace: ComplexArray
+    peak_node: NDArray[np.intp]
+    """Node of the curve's grid nearest the peak; it serves what is worked out only when it is asked for."""
+
+    @cached_property
+    def _smooth(self) -> tuple[ComplexArray, FloatArray]:
+        return self.curve.on_grid(self.trace)
+
+    @cached_property
+    def delay_at_peak(self) -> FloatArray:
+        """Group delay at the peak, s."""
+        return _interpolate(self.curve.grid_hz, self._smooth[1], self.peak_frequency)
+
+    @cached_property
+    def phase_q(self) -> FloatArray:
+        """Loaded Q from the width between the points where the phase has turned 45° either way from the peak."""
+        grid = self.curve.grid_hz
+        angle = np.unwrap(np.angle(self._smooth[0]), axis=-1) * (180 / np.pi)
+        at_peak = _interpolate(grid, angle, self.peak_frequency)
+        early = crossing(grid, -angle, -at_peak - 45.0, self.peak_node, -1)
+        late = crossing(grid, angle, at_peak - 45.0, self.peak_node, +1)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            return np.asarray(np.sqrt(early * late) / (late - early))
 
     @property
     def bandwidth(self) -> FloatArray:
@@ -87,23 +110,15 @@ class Passband:
 
     def figures(self, s21: ComplexArray) -> PassbandFigures:
         """Return the figures of a trace, or of copies of it, (..., n)."""
-        value, delay = self.curve.on_grid(s21)
         grid = self.curve.grid_hz
-        level = to_db(value)
+        level = self.curve.level_on_grid(s21)
         start, stop = self.peak_range
         index = np.argmax(level[..., start:stop], axis=-1) + start
         peak_frequency, peak_gain = _vertex(grid, level, index, (start, stop))
         target = peak_gain - HALF_POWER_DB
         lower = crossing(grid, level, target, index, -1)
         upper = crossing(grid, level, target, index, +1)
-        delay_at_peak = _interpolate(grid, delay, peak_frequency)
-        angle = np.unwrap(np.angle(value), axis=-1) * (180 / np.pi)
-        at_peak = _interpolate(grid, angle, peak_frequency)
-        early = crossing(grid, -angle, -at_peak - 45.0, index, -1)
-        late = crossing(grid, angle, at_peak - 45.0, index, +1)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            phase_q = np.sqrt(early * late) / (late - early)
-        return PassbandFigures(peak_gain, peak_frequency, lower, upper, delay_at_peak, phase_q)
+        return PassbandFigures(peak_gain, peak_frequency, lower, upper, self.curve, s21, index)
 
 
 def _gather(values: FloatArray, index: np.ndarray) -> FloatArray:
@@ -285,7 +300,7 @@ class LevelWidth:
         target = peak_gain_db - self.below_db
         edges = []
         for curve, direction in ((self.lower, -1), (self.upper, 1)):
-            level = to_db(curve.on_grid(s21)[0])
+            level = curve.level_on_grid(s21)
             inner = np.full(target.shape, 0 if direction > 0 else curve.grid_hz.size - 1)
             edges.append(crossing(curve.grid_hz, level, target, inner, direction))
         return np.asarray(edges[1] - edges[0])

@@ -20,6 +20,7 @@ _WORD_WITH_COMMA: Final = re.compile(r"[^ \t\n,]*,[^ \t\n]*")
 _COMMENT: Final = re.compile(r"![^\n]*")
 _NO_NUMBERS: Final = re.compile(r"^[ \t]*[#\[][^\n]*", re.MULTILINE)
 _FORTRAN: Final = re.compile(r"(?<=[0-9.])[dD](?=[+-]?[0-9])")
+_FOREIGN: Final = re.compile(rf"[,;]|{_FORTRAN.pattern}")
 _COMMA_WORD: Final = re.compile(r"[+-]?(?:[0-9]+,?[0-9]*|,[0-9]+)(?:[eE][+-]?[0-9]+)?")
 _GROUPED: Final = re.compile(r"[+-]?[1-9][0-9]{0,2}(?:,[0-9]{3})+")
 """A number such as 21,400 that may have its thousands set apart."""
@@ -33,7 +34,7 @@ def mend_habits(text: str, start: int, stop: int, reading: Reading) -> str:
 
     Read strictly, the first such number is a fault that names its line and column.
     """
-    if reading.strict:
+    if reading.strict or not _FOREIGN.search(text, start, stop):
         return text
     body = _blank_out(_COMMENT, text[start:stop])
     numbers = _blank_out(_NO_NUMBERS, body)

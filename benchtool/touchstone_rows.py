@@ -10,7 +10,7 @@ import io
 import math
 import re
 from array import array
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Container
 from dataclasses import dataclass
 from typing import Final
 
@@ -20,7 +20,7 @@ from pydantic_core import from_json
 
 from benchtool.errors import SweepFileError
 from benchtool.model import FloatArray
-from benchtool.touchstone_table import NUMBER, Reading, quoted
+from benchtool.touchstone_table import NOISE_COLUMNS, NUMBER, Reading, quoted
 from benchtool.touchstone_text import Line, data_lines, line_of_text, words_of
 
 __all__ = ["DELETE_ROW", "UnevenRows", "is_cut", "line_finder", "lines_of", "rows_at_once", "rows_by_line"]
@@ -44,7 +44,8 @@ _NOT_FINITE: Final = re.compile(r"[+-]?(?:nan|inf|infinity)", re.IGNORECASE)
 _FORTRAN: Final = re.compile(r"[+-]?[0-9.]+[dD][+-]?[0-9]+")
 _CUT_NUMBER: Final = re.compile(r"[+-]?[0-9]*\.?[0-9]*(?:[eE][+-]?)?")
 _TAIL: Final = 4096
-_FIXED: Final = re.compile(r"[+-]?[0-9]+(\.[0-9]+)?([eE][+-]?[0-9]+)?")
+_ROWS_ALIKE: Final = 4
+_FIXED: Final = re.compile(r"[+-]?[0-9]+(\.[0-9]*)?([eE][+-]?[0-9]+)?")
 
 
 def rows_at_once(text: str, start: int, stop: int, columns: int) -> FloatArray | None:
@@ -137,7 +138,8 @@ class UnevenRows:
     def take(self, first: int, last: int, columns: int) -> FloatArray:
         """Return rows `first` up to `last`, which all have `columns` numbers."""
         begin = sum(self.counts[:first])
-        return np.array(self.values[begin : begin + (last - first) * columns]).reshape(-1, columns)
+        end = begin + (last - first) * columns
+        return np.array(np.frombuffer(self.values, np.float64)[begin:end]).reshape(-1, columns)
 
     def fault_of_mark(self, place: int, text: str, reading: Reading) -> SweepFileError:
         """Return the fault of the mark that stands at `place` in `values`."""
@@ -149,21 +151,29 @@ class UnevenRows:
 
 
 def rows_by_line(
-    text: str, start: int, stop: int, reading: Reading, other: Callable[[Line], bool] | None = None
+    text: str,
+    start: int,
+    stop: int,
+    reading: Reading,
+    *,
+    columns: Container[int],
+    other: Callable[[Line], bool] | None = None,
 ) -> UnevenRows:
     """Return the rows between two offsets, up to the first word that is neither a number nor a mark for none.
 
+    Behind a row that has not one of the counts in `columns` only the next is read, for what it tells of the file.
     `other` is asked first whether a line is something else than a row.
     """
     rows = UnevenRows(array("d"), array("q"), array("q"), array("q"))
-    lines: Iterator[Line] = data_lines(text, start, stop, reading)
-    for line in lines:
+    for line in data_lines(text, start, stop, reading):
         if other and other(line):
             continue
         try:
             _append_row(rows, line, reading)
         except SweepFileError as fault:
             rows.fault = fault
+            break
+        if len(rows.counts) > 1 and rows.counts[-2] not in columns:
             break
     if stop == len(text) and not text.endswith("\n") and rows.counts:
         _drop_cut_row(rows, text, reading)
@@ -216,7 +226,7 @@ def _drop_cut_row(rows: UnevenRows, text: str, reading: Reading) -> None:
         rows.fault = None
     elif len(rows.counts) > 1 and rows.lines[-1] == last_line:
         sign_alone = words[-1] in ("+", "-") and len(rows.marks) == 1
-        if rows.counts[-1] >= rows.counts[0] and not sign_alone and not is_cut(text):
+        if not (sign_alone or _ends_short(rows) or is_cut(text)):
             return
         for _ in range(rows.counts.pop()):
             rows.values.pop()
@@ -229,17 +239,27 @@ def _drop_cut_row(rows: UnevenRows, text: str, reading: Reading) -> None:
     reading.mend(found, "the row was left out", remedy, lines=[last_line])
 
 
+def _ends_short(rows: UnevenRows) -> bool:
+    """Return whether the last row has fewer numbers than the one above it, and does not begin a noise block."""
+    before, last = rows.counts[-2:]
+    begins_noise = last == NOISE_COLUMNS and rows.values[-last] <= rows.values[-last - before]
+    return last < before and not begins_noise
+
+
 def is_cut(text: str) -> bool:
     """Return whether the last number of a file without a last line end has fewer digits than all numbers above it.
 
-    Only where those above have as many decimals each, and an exponent or none alike, does that mean anything.
+    Only where a few rows above have as many decimals each, and an exponent or none alike, does that mean anything.
     """
     if text.endswith("\n") or "!" in text[text.rfind("\n") + 1 :]:
         return False
     *above, last = [words_of(line.partition("!")[0]) for line in text[-_TAIL:].split("\n")]
     rows = [words for words in above if words and NUMBER.fullmatch(words[0])]
     forms = {_form_of(words[-1]) for words in rows}
-    return bool(last) and len(rows) > 1 and len(forms) == 1 and None not in forms and _form_of(last[-1]) not in forms
+    if len(rows) < _ROWS_ALIKE or len(forms) > 1 or not last:
+        return False
+    form, usual = _form_of(last[-1]), forms.pop()
+    return form is not None and usual is not None and (form[0] < usual[0] or form[1] < usual[1])
 
 
 def _form_of(word: str) -> tuple[int, int] | None:

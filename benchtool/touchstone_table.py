@@ -15,8 +15,22 @@ from typing import Final
 from benchtool.errors import SweepFileError
 from benchtool.model import Finding, FloatArray, Severity
 
-__all__ = ["NUMBER", "OptionLine", "Reading", "SweepTable", "count_of", "quoted", "shown"]
+__all__ = [
+    "NOISE_COLUMNS",
+    "NUMBER",
+    "ROW_COLUMNS",
+    "OptionLine",
+    "Reading",
+    "SweepTable",
+    "count_of",
+    "quoted",
+    "shown",
+]
 
+ROW_COLUMNS: Final = 9
+"""A two-port row: frequency, then N11 N21 N12 N22 as two numbers each."""
+NOISE_COLUMNS: Final = 5
+"""A noise row: frequency, minimum noise figure in dB, magnitude and angle of the optimum Γ, noise resistance."""
 NUMBER: Final = re.compile(r"[+-]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[eE][+-]?[0-9]+)?")
 """A number as both versions of the standard write it, in ASCII digits with a decimal point."""
 _LONGEST_SHOWN: Final = 24

@@ -28,15 +28,21 @@ from benchtool.touchstone_rows import (
     rows_at_once,
     rows_by_line,
 )
-from benchtool.touchstone_table import NUMBER, OptionLine, Reading, SweepTable, count_of, quoted
+from benchtool.touchstone_table import (
+    NOISE_COLUMNS,
+    NUMBER,
+    ROW_COLUMNS,
+    OptionLine,
+    Reading,
+    SweepTable,
+    count_of,
+    quoted,
+)
 from benchtool.touchstone_text import Line, data_lines, first_data_line, line_number, words_of
 
-__all__ = ["NOISE_COLUMNS", "ROW_COLUMNS", "noise_rows", "read_version_1", "sound_rows"]
+__all__ = ["noise_rows", "read_version_1", "sound_rows"]
 
-ROW_COLUMNS: Final = 9
-"""A two-port row: frequency, then N11 N21 N12 N22 as two numbers each."""
-NOISE_COLUMNS: Final = 5
-"""A noise row: frequency, minimum noise figure in dB, magnitude and angle of the optimum Γ, Rn / R."""
+_MOST_OPTION_LINES: Final = 100
 _EXPORT: Final = "export a two-port sweep (.s2p) with S11, S21, S12 and S22"
 _SAVE_ALL: Final = "sweep again and save all of the file"
 _OPTION_WORDS: Final = re.compile(r"#[ \t]*(?:[kmg]?hz|[syzgh]|db|ma|ri|r)\b", re.IGNORECASE)
@@ -96,7 +102,9 @@ def _no_option_line(text: str, line: str, number: int, reading: Reading) -> Swee
 
 def _read_uneven(text: str, start: int, option: OptionLine, reading: Reading) -> SweepTable:
     text = mend_habits(text, start, len(text), reading)
-    rows = rows_by_line(text, start, len(text), reading, lambda line: _is_option_line(line, option, reading))
+    columns, others = {ROW_COLUMNS, NOISE_COLUMNS}, _OtherLines(option, reading)
+    rows = rows_by_line(text, start, len(text), reading, columns=columns, other=others.take)
+    others.tell()
     counts = np.array(rows.counts)
     if not len(counts):
         raise rows.fault or reading.fault("no data rows after the option line", _SAVE_ALL)
@@ -122,19 +130,34 @@ def _read_uneven(text: str, start: int, option: OptionLine, reading: Reading) ->
     return SweepTable(option, True, frequency_hz, pairs, noise, lines_of(network.lines), missing)
 
 
-def _is_option_line(line: Line, option: OptionLine, reading: Reading) -> bool:
-    """Return whether a line is a later option line, which the standard says to ignore; say so where it contradicts."""
-    if line.words[0].startswith("["):
-        found = f"the keyword {quoted(' '.join(line.words))} in a file that does not begin with [Version]"
-        remedy = "begin the file with '[Version] 2.0' if it is of version 2; else delete the line"
-        raise reading.fault(found, remedy, line=line.number)
-    if not line.words[0].startswith("#"):
-        return False
-    if not repeats_option_line(line.words, option):
-        found, done = "a second option line that differs from the first", "it was ignored, as the standard says"
-        remedy = "if two files were joined here, split them; else delete the line"
-        reading.mend(found, done, remedy, lines=[line.number])
-    return True
+class _OtherLines:
+    """Lines among the rows that are none: later option lines, which the standard says to ignore, and keywords."""
+
+    def __init__(self, option: OptionLine, reading: Reading) -> None:
+        self._option = option
+        self._reading = reading
+        self._contradicting: list[int] = []
+
+    def take(self, line: Line) -> bool:
+        """Return whether a line is a later option line; one that says the same as the first needs no word."""
+        first = line.words[0][0]
+        if first == "[":
+            found = f"the keyword {quoted(' '.join(line.words))} in a file that does not begin with [Version]"
+            remedy = "begin the file with '[Version] 2.0' if it is of version 2; else delete the line"
+            raise self._reading.fault(found, remedy, line=line.number)
+        if first == "#" and not repeats_option_line(line.words, self._option):
+            self._contradicting.append(line.number)
+            if len(self._contradicting) > _MOST_OPTION_LINES:
+                found = f"more than {_MOST_OPTION_LINES} option lines"
+                raise self._reading.fault(found, "split the file into one sweep each", line=line.number)
+        return first == "#"
+
+    def tell(self) -> None:
+        """Say which later option lines contradict the first."""
+        if self._contradicting:
+            found, done = "a second option line that differs from the first", "it was ignored, as the standard says"
+            remedy = "if two files were joined here, split them; else delete the line"
+            self._reading.mend(found, done, remedy, lines=self._contradicting)
 
 
 def _is_one_path(rows: UnevenRows, counts: NDArray[np.int64], option: OptionLine) -> bool:

@@ -21,9 +21,19 @@ from benchtool.touchstone_habits import mend_habits
 from benchtool.touchstone_option import EXAMPLE, parse_option_line
 from benchtool.touchstone_order import PlacedRows, in_hertz, in_rising_order
 from benchtool.touchstone_rows import is_cut, line_finder, lines_of, rows_by_line
-from benchtool.touchstone_table import NUMBER, OptionLine, Reading, SweepTable, count_of, quoted, shown
+from benchtool.touchstone_table import (
+    NOISE_COLUMNS,
+    NUMBER,
+    ROW_COLUMNS,
+    OptionLine,
+    Reading,
+    SweepTable,
+    count_of,
+    quoted,
+    shown,
+)
 from benchtool.touchstone_text import data_lines, line_number, words_of
-from benchtool.touchstone_v1 import NOISE_COLUMNS, ROW_COLUMNS, noise_rows, sound_rows
+from benchtool.touchstone_v1 import noise_rows, sound_rows
 
 __all__ = ["read_version_2"]
 
@@ -255,7 +265,7 @@ def _network(text: str, section: _Section, columns: int, option: OptionLine, rea
         line = line_finder(text, start, stop, reading)
         return SweepTable(option, False, rows[:, 0], rows[:, 1:], none, line)
     text = mend_habits(text, start, stop, reading)
-    uneven = rows_by_line(text, start, stop, reading)
+    uneven = rows_by_line(text, start, stop, reading, columns={columns})
     for count, number in zip(uneven.counts, uneven.lines, strict=True):
         if count != columns:
             found = f"{count_of(count, 'number')} in the row, where a row of this file has {columns}"
@@ -279,7 +289,7 @@ def _noise(text: str, sections: dict[str, _Section], option: OptionLine, reading
         _check_count(sections, "number of noise frequencies", 0, reading, needed=False)
         return np.empty((0, NOISE_COLUMNS))
     text = mend_habits(text, section.start, section.stop, reading)
-    rows = rows_by_line(text, section.start, section.stop, reading)
+    rows = rows_by_line(text, section.start, section.stop, reading, columns={NOISE_COLUMNS})
     if rows.fault or rows.marks:
         raise rows.fault or rows.fault_of_mark(rows.marks[0], text, reading)
     noise = noise_rows(rows, 0, option, text, reading)

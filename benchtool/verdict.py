@@ -88,8 +88,11 @@ _CURES: Final = {
 """What would shrink a source of doubt, and to what share of its standard uncertainty (common practice, no source)."""
 
 
-def remedy(figure: Figure, bank: PadBank) -> str:
-    """Return what would narrow a figure most, with what it would come to; empty where its budget is empty."""
+def remedy(figure: Figure, bank: PadBank, *, port_match_stated: bool = True) -> str:
+    """Return what would narrow a figure most, with what it would come to; empty where its budget is empty.
+
+    Where the port match was only assumed, stating it comes before improving it.
+    """
     if not figure.budget or not figure.standard_uncertainty or figure.low is None or figure.high is None:
         return ""
     source, share = max(figure.budget.items(), key=lambda item: item[1])
@@ -99,6 +102,9 @@ def remedy(figure: Figure, bank: PadBank) -> str:
         was = rectangular_u(width) if is_limit else width
         left = min(ASSUMED["measured pad, standard uncertainty"] / was, 1.0) if was > 0.0 else 1.0
         action = f"measure pad {name} as a .s2p file"
+    elif source == "mismatch" and not port_match_stated:
+        left = 0.5
+        action = f"find the port match and state analyzer.port_match_db ({ASSUMED['port match']:g} dB is assumed)"
     else:
         left, action = _CURES[source]
     half = 0.5 * (figure.high - figure.low)

@@ -5,8 +5,8 @@ exactly, by wave-transfer matrices (D. A. Frickey, IEEE Trans. MTT 42(2), 1994, 
 
 The analyzer was calibrated with some pads in line, which puts its planes at their far ends. What is left of its
 errors is a noise floor, raised by the loss of those pads, noise in proportion to the trace, a slow drift of the
-transmission reading from sweep to sweep, and a residual directivity. Its ports are taken to be matched, and its
-receiver to be linear.
+transmission reading from sweep to sweep, and a residual directivity. Its ports are taken to be matched. Its receiver
+at port 2 compresses by Rapp's law on the level that comes in through the whole output line, or is taken to be linear.
 """
 
 from __future__ import annotations
@@ -21,7 +21,7 @@ import numpy as np
 from circuits import REFERENCE_OHM, Circuit, ComplexArray, FloatArray, limiting, scattering
 from numpy.random import Generator
 
-__all__ = ["Pad", "Reading", "cascade", "drive_dbm", "measure", "read_device"]
+__all__ = ["Pad", "Reading", "Receiver", "cascade", "drive_dbm", "measure", "read_device"]
 
 RECEIVER_FLOOR_DB: Final = -85.0
 """Noise of a receiver below the level that a direct connection gives; pads inside the calibration raise it."""
@@ -48,13 +48,37 @@ class Pad:
         return s
 
 
+@dataclass(frozen=True)
+class Receiver:
+    """Where and how the receiver at port 2 compresses: the level that comes in at its 1 dB point, and Rapp's p."""
+
+    p1db_dbm: float
+    smoothness: float
+
+    def limiting(self, level_dbm: FloatArray) -> FloatArray:
+        """Return the factor, at most 1, by which the receiver reads a level too low, (n,).
+
+        `level_dbm` is what a linear receiver would read. The 1 dB point lies at x = (10^(p/10) − 1)^(1/2p) of the
+        saturation level (C. Rapp, Proc. 2nd European Conf. on Satellite Communications, 1991).
+        """
+        power = 2.0 * self.smoothness
+        at_p1db = 10.0 ** (self.smoothness / 10.0) - 1.0
+        return np.asarray((1.0 + at_p1db * 10.0 ** (power * (level_dbm - self.p1db_dbm) / 20.0)) ** (-1.0 / power))
+
+
 @dataclass(frozen=True, eq=False)
 class Reading:
-    """A sweep as the analyzer shows it, and what was true at the device meanwhile; arrays run over frequency."""
+    """A sweep as the analyzer shows it, and what was true meanwhile; arrays run over frequency.
+
+    Drive and compression are the device's. `port2_dbm` is the level that comes in at port 2, `receiver_compression_db`
+    by how much it is read too low.
+    """
 
     shown: ComplexArray
     drive_dbm: FloatArray
     compression_db: FloatArray
+    port2_dbm: FloatArray
+    receiver_compression_db: FloatArray
 
 
 def _transfer(s: ComplexArray) -> ComplexArray:
@@ -114,11 +138,13 @@ def read_device(
     calibrated: tuple[Sequence[Pad], Sequence[Pad]],
     added: tuple[Sequence[Pad], Sequence[Pad]],
     rng: Generator,
+    receiver: Receiver | None = None,
 ) -> Reading:
     """Return the sweep of a device with pads on the input and on the output side.
 
     `calibrated` and `added` hold the pads inside and outside the calibration, input side and output side, each from
-    the analyzer towards the device.
+    the analyzer towards the device. A receiver of None is linear. At calibration the receiver saw less than it ever
+    compresses at.
     """
     device = scattering(circuit, frequency_hz)
     behind, before = ([[pad.scattering(frequency_hz) for pad in side] for side in pads] for pads in (calibrated, added))
@@ -128,5 +154,12 @@ def read_device(
     fall = limiting(circuit, frequency_hz, incident_volts)
     device[1, 0] *= fall
     seen = cascade([*before[0], device, *reversed(before[1])])
+    whole = cascade([*input_line, device, *reversed([*behind[1], *before[1]])])
+    port2_dbm = np.asarray(source_dbm + 20.0 * np.log10(np.abs(whole[1, 0])), dtype=np.float64)
+    read_low = np.ones_like(frequency_hz)
+    if receiver is not None:
+        read_low = receiver.limiting(port2_dbm)
+        seen[1, 0] *= read_low
     calibrated_db = (sum(pad.loss_db for pad in calibrated[0]), sum(pad.loss_db for pad in calibrated[1]))
-    return Reading(measure(seen, frequency_hz, calibrated_db, rng), drive, 0.0 - 20.0 * np.log10(fall))
+    shown = measure(seen, frequency_hz, calibrated_db, rng)
+    return Reading(shown, drive, 0.0 - 20.0 * np.log10(fall), port2_dbm, 0.0 - 20.0 * np.log10(read_low))

@@ -6,8 +6,9 @@ open-circuit source voltage of 2 V the incident wave is 1 V, so S11 = v1 − 1 a
 Engineering*, 4th ed., sec. 4.3).
 
 An inductor has a series resistance that gives its unloaded Q at 21.4 MHz. Transistors are unilateral: the few
-femtofarads of feedback of a cascode are left out, so S12 of an amplifier is zero. An amplifier limits at its
-collector by Rapp's law, at each frequency for itself: not on the skirts, where the collector swings little.
+femtofarads of feedback of a cascode are left out, so S12 of an amplifier is zero. An amplifier limits by Rapp's law,
+at each frequency for itself: at its collector, where it swings little on the skirts, or at its base, ahead of the
+tuned circuit and so at every frequency alike.
 """
 
 from __future__ import annotations
@@ -122,6 +123,61 @@ CIRCUITS: Final[Mapping[str, Circuit]] = {
         ),
         Limiter("collector", saturation_volts=2.6, smoothness=2.0),
     ),
+    "buffer amplifier": Circuit(
+        _single_tuned_amplifier(
+            bias_ohm=56.0, gm=30e-3, inductor=(0.33e-6, 60.0), trimmer=16.8e-12, tap=(220e-12, 430e-12)
+        ),
+        Limiter("collector", saturation_volts=2.6, smoothness=2.0),
+    ),
+    "second IF stage": Circuit(
+        _single_tuned_amplifier(
+            bias_ohm=62.0, gm=75e-3, inductor=(0.82e-6, 80.0), trimmer=23.1e-12, tap=(47e-12, 390e-12)
+        ),
+        Limiter("collector", saturation_volts=3.6, smoothness=1.8),
+    ),
+    "preamplifier": Circuit(
+        _single_tuned_amplifier(
+            bias_ohm=62.0, gm=50e-3, inductor=(0.47e-6, 60.0), trimmer=22.0e-12, tap=(120e-12, 390e-12)
+        ),
+        Limiter("base", saturation_volts=25e-3, smoothness=1.2),
+    ),
+    "mixer amplifier": Circuit(
+        _single_tuned_amplifier(
+            bias_ohm=62.0, gm=35e-3, inductor=(0.47e-6, 60.0), trimmer=22.0e-12, tap=(120e-12, 390e-12)
+        ),
+        Limiter("base", saturation_volts=30e-3, smoothness=1.2),
+    ),
+    "oscillator buffer": Circuit(
+        _single_tuned_amplifier(
+            bias_ohm=56.0, gm=45e-3, inductor=(0.47e-6, 60.0), trimmer=4.8e-12, tap=(150e-12, 390e-12)
+        ),
+        Limiter("collector", saturation_volts=4.0, smoothness=2.0),
+    ),
+    "third IF stage": Circuit(
+        _single_tuned_amplifier(
+            bias_ohm=62.0, gm=0.18, inductor=(0.33e-6, 60.0), trimmer=16.8e-12, tap=(220e-12, 430e-12)
+        ),
+        Limiter("collector", saturation_volts=7.0, smoothness=3.0),
+    ),
+    "narrow stage": Circuit(
+        _single_tuned_amplifier(
+            bias_ohm=68.0, gm=14e-3, inductor=(0.47e-6, 110.0), trimmer=64.0e-12, tap=(56e-12, 680e-12)
+        ),
+        Limiter("collector", saturation_volts=5.0, smoothness=2.0),
+    ),
+    "converter stage": Circuit(
+        _single_tuned_amplifier(
+            bias_ohm=62.0, gm=60e-3, inductor=(0.47e-6, 70.0), trimmer=34.5e-12, tap=(100e-12, 390e-12)
+        ),
+        Limiter("collector", saturation_volts=5.0, smoothness=2.0),
+    ),
+    # The same stage just after switching on: less current, and a tank that has yet to settle.
+    "converter stage, cold": Circuit(
+        _single_tuned_amplifier(
+            bias_ohm=62.0, gm=54e-3, inductor=(0.47e-6, 70.0), trimmer=35.1e-12, tap=(100e-12, 390e-12)
+        ),
+        Limiter("collector", saturation_volts=5.0, smoothness=2.0),
+    ),
     "post-mixer filter": Circuit(
         (
             Element("C", "in", "first", 20.8e-12),
@@ -202,8 +258,8 @@ def scattering(circuit: Circuit, frequency_hz: FloatArray) -> ComplexArray:
 def limiting(circuit: Circuit, frequency_hz: FloatArray, incident_volts: FloatArray) -> FloatArray:
     """Return the factor, at most 1, by which S21 falls when the incident wave at port 1 has this rms voltage, (n,).
 
-    Rapp's law for the fundamental: 1/(1 + (v/Vs)^2p)^(1/2p), with v the collector voltage the linear circuit would
-    have (C. Rapp, Proc. 2nd European Conf. on Satellite Communications, 1991).
+    Rapp's law for the fundamental: 1/(1 + (v/Vs)^2p)^(1/2p), with v the voltage of the limiting node in the linear
+    circuit (C. Rapp, Proc. 2nd European Conf. on Satellite Communications, 1991).
     """
     if circuit.limiter is None:
         return np.ones_like(frequency_hz)

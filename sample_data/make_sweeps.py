@@ -1,11 +1,11 @@
 """The bench sheet of a session in; the sweeps that session would have left, and the true figures, out.
 
-    python sample_data/make_sweeps.py [--out DIR]
+    python sample_data/make_sweeps.py [SESSION] [--out DIR]
 
 The sheet says which device was swept, into which file and through which pads. The devices come from `circuits.py`,
-what the analyzer makes of them from `analyzer.py`, their true figures from `truth.py`, and how each file is written
-from the table below. Everything random comes from one seed and the name of what is drawn: the same files come out
-each time, and one more file changes no other.
+what the analyzer makes of them from `analyzer.py`, their true figures from `truth.py`, and how each file is written,
+with all that the sheet does not know, from `sessions.py`. Everything random comes from one seed and the name of what
+is drawn: the same files come out each time, and one more file changes no other.
 """
 
 from __future__ import annotations
@@ -13,53 +13,26 @@ from __future__ import annotations
 import argparse
 import json
 import tomllib
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
 from pathlib import Path
-from typing import Any, Final, Literal, TypeAlias
+from typing import Any, Final
 
 import numpy as np
-from analyzer import Pad, read_device
+from analyzer import Pad, Reading, read_device
 from circuits import CIRCUITS, DESIGN_HZ, ComplexArray, FloatArray
 from numpy.random import PCG64, Generator
+from sessions import SESSIONS, Pairs, Recording, ReversePass, Session
 from truth import true_figures
 
-__all__ = ["HOME", "RECORDINGS", "draw_pads", "draw_source_dbm", "line_of", "main", "make"]
+__all__ = ["SESSIONS", "draw_pads", "draw_source_dbm", "line_of", "main", "make"]
 
-HOME: Final = Path(__file__).resolve().parent / "telemetry"
 SEED: Final = 2188
-POINTS: Final = 401
 SIDES: Final = ("input_pads", "output_pads")
 
-Pairs: TypeAlias = Literal["RI", "MA", "DB"]
-ReversePass: TypeAlias = Literal["measured", "zeros", "copies"]
 HERTZ: Final = {"Hz": (1.0, 0), "kHz": (1e3, 3), "MHz": (1e6, 6), "GHz": (1e9, 9)}
 """For each unit: how many Hz it has, and how many decimals hold a whole number of Hz."""
 
 
-@dataclass(frozen=True)
-class Recording:
-    """How a sweep was taken and written. Several legal forms occur, as in files from several programs."""
-
-    span_mhz: tuple[float, float]
-    option_line: str
-    unit: str
-    pairs: Pairs
-    reverse_pass: ReversePass = "zeros"
-    separator: str = " "
-    newline: str = "\n"
-
-
-RECORDINGS: Final = {
-    "first_low.s2p": Recording((18.4, 24.4), "# HZ S RI R 50", "Hz", "RI"),
-    "first_mid.s2p": Recording((18.4, 24.4), "# MHz S MA R 50", "MHz", "MA", separator="\t"),
-    "first_high.s2p": Recording((18.4, 24.4), "# HZ S RI R 50", "Hz", "RI", newline="\r\n"),
-    "limiter.s2p": Recording((15.4, 27.4), "# R 50 RI S KHZ", "kHz", "RI"),
-    "driver_low.s2p": Recording((13.4, 29.4), "#", "GHz", "MA"),
-    "driver_high.s2p": Recording((13.4, 29.4), "# ghz s ri", "GHz", "RI"),
-    "filter.s2p": Recording((18.9, 23.9), "# MHz S DB R 50", "MHz", "DB", "measured"),
-    "discriminator.s2p": Recording((19.4, 23.4), "#MHz S MA R 50.0", "MHz", "MA", "copies"),
-}
 PAD_RECORDING: Final = Recording((10.0, 40.0), "# MHz S DB R 50", "MHz", "DB", "measured")
 
 # The labels of pads that were measured instead of trusted.
@@ -82,14 +55,15 @@ def draw_source_dbm(sheet: dict[str, Any]) -> float:
     return float(sheet["analyzer"]["source_dbm"] + _generator("source").uniform(-SOURCE_LIMITS_DB, SOURCE_LIMITS_DB))
 
 
-def draw_pads(sheet: dict[str, Any]) -> dict[str, Pad]:
-    """Return the pads of the session as they are, by name."""
+def draw_pads(sheet: dict[str, Any], off_label_db: Mapping[str, float] | None = None) -> dict[str, Pad]:
+    """Return the pads of the session as they are, by name; `off_label_db` is what a pad loses beyond its label."""
     labels = {name: entry.get("loss_db", MEASURED_PAD_LABELS_DB.get(name)) for name, entry in sheet["pads"].items()}
-    return {name: _draw_pad(label, _generator(f"pad {name}")) for name, label in labels.items()}
+    off = off_label_db or {}
+    return {name: _draw_pad(label + off.get(name, 0.0), _generator(f"pad {name}")) for name, label in labels.items()}
 
 
 def _draw_pad(label_db: float, rng: Generator) -> Pad:
-    """Return a pad that keeps what its label promises, no more."""
+    """Return a pad that keeps what this label promises, no more."""
     loss_db = label_db + rng.uniform(-LOSS_LIMITS_DB, LOSS_LIMITS_DB)
     delay_s = DELAY_S + rng.uniform(-DELAY_LIMITS_S, DELAY_LIMITS_S)
     sizes = 10.0 ** (-rng.uniform(*RETURN_LOSS_DB, size=2) / 20.0)
@@ -170,11 +144,11 @@ def line_of(
     return (inside[0], inside[1]), (outside[0], outside[1])
 
 
-def make(out: Path) -> None:
-    """Write sheet, sweeps, pad file and true figures into the folder `out`."""
-    sheet_text = (HOME / "bench.toml").read_text(encoding="utf-8")
+def make(out: Path, session: Session = SESSIONS["telemetry"]) -> None:
+    """Write sheet, sweeps, pad files and true figures of a session into the folder `out`."""
+    sheet_text = (session.home / "bench.toml").read_text(encoding="utf-8")
     sheet: dict[str, Any] = tomllib.loads(sheet_text)
-    source_dbm, pads = draw_source_dbm(sheet), draw_pads(sheet)
+    source_dbm, pads = draw_source_dbm(sheet), draw_pads(sheet, session.off_label_db)
     truth: dict[str, Any] = {
         "format": "sample-truth/1",
         "seed": SEED,
@@ -182,36 +156,54 @@ def make(out: Path) -> None:
         "pads": {n: {"loss_db": round(p.loss_db, 6), "delay_s": float(f"{p.delay_s:.6e}")} for n, p in pads.items()},
         "devices": {},
     }
+    if session.receiver is not None:
+        truth["receiver"] = {"p1db_dbm": session.receiver.p1db_dbm}
     for device in sheet["device"]:
-        figures = true_figures(CIRCUITS[device["name"]], device)
+        name = device["name"]
+        figures = true_figures(CIRCUITS[name], device)
         sweeps: dict[str, dict[str, float]] = {}
         for entry in device["sweep"]:
-            recording = RECORDINGS[entry["file"]]
-            frequency_hz = _grid(recording, POINTS)
+            recording = session.recordings[entry["file"]]
+            frequency_hz = _grid(recording, session.points)
             inside, outside = line_of(entry, sheet, pads)
+            circuit = CIRCUITS[session.swept_as.get(entry["file"], name)]
             reading = read_device(
-                CIRCUITS[device["name"]],
+                circuit,
                 frequency_hz,
                 source_dbm=source_dbm,
                 calibrated=inside,
                 added=outside,
                 rng=_generator(entry["file"]),
+                receiver=session.receiver,
             )
-            text = touchstone_text(device["name"], frequency_hz, reading.shown, recording)
-            _write(out / entry["file"], text)
-            drive, compression = (
-                float(np.interp(DESIGN_HZ, frequency_hz, trace))
-                for trace in (reading.drive_dbm, reading.compression_db)
-            )
-            sweeps[entry["file"]] = {
-                "drive_dbm": round(drive, 6),
-                "gain_db": round(figures["gain_db"] - compression, 6),
-                "compression_db": round(compression, 6),
-            }
-        truth["devices"][device["name"]] = {"figures": figures, "sweeps": sweeps}
+            _write(out / entry["file"], touchstone_text(name, frequency_hz, reading.shown, recording))
+            small_signal_db = true_figures(circuit, device)["gain_db"]
+            sweeps[entry["file"]] = _true_levels(frequency_hz, reading, small_signal_db, session)
+        cause = {"cause": session.causes[name]} if name in session.causes else {}
+        truth["devices"][name] = {**cause, "figures": figures, "sweeps": sweeps}
     _write_pads(out, sheet, pads)
     _write(out / "truth.json", json.dumps(truth, indent=2) + "\n")
     _write(out / "bench.toml", sheet_text)
+
+
+def _true_levels(
+    frequency_hz: FloatArray, reading: Reading, small_signal_db: float, session: Session
+) -> dict[str, float]:
+    """Return what was true at the design frequency during a sweep; of port 2 only where its receiver compresses."""
+
+    def at_design(trace: FloatArray) -> float:
+        return float(np.interp(DESIGN_HZ, frequency_hz, trace))
+
+    compression = at_design(reading.compression_db)
+    levels = {
+        "drive_dbm": round(at_design(reading.drive_dbm), 6),
+        "gain_db": round(small_signal_db - compression, 6),
+        "compression_db": round(compression, 6),
+    }
+    if session.receiver is not None:
+        levels["port2_dbm"] = round(at_design(reading.port2_dbm), 6)
+        levels["receiver_compression_db"] = round(at_design(reading.receiver_compression_db), 6)
+    return levels
 
 
 def _write_pads(out: Path, sheet: dict[str, Any], pads: dict[str, Pad]) -> None:
@@ -228,12 +220,15 @@ def _write_pads(out: Path, sheet: dict[str, Any], pads: dict[str, Pad]) -> None:
 
 
 def main(arguments: Sequence[str] | None = None) -> None:
-    """Make the sample session from the command line."""
-    parser = argparse.ArgumentParser(description="Make the sweeps of the sample session, always the same ones.")
-    parser.add_argument("--out", type=Path, default=HOME, help="folder to write to (default: %(default)s)")
-    out: Path = parser.parse_args(arguments).out
-    make(out)
-    print(f"wrote {len(RECORDINGS)} sweeps, the sheet and the true figures to {out}")
+    """Make a sample session from the command line."""
+    parser = argparse.ArgumentParser(description="Make the sweeps of a sample session, always the same ones.")
+    parser.add_argument("session", nargs="?", choices=sorted(SESSIONS), default="telemetry")
+    parser.add_argument("--out", type=Path, help="folder to write to (default: the folder of the session)")
+    options = parser.parse_args(arguments)
+    session = SESSIONS[options.session]
+    out: Path = options.out or session.home
+    make(out, session)
+    print(f"wrote {len(session.recordings)} sweeps, the sheet and the true figures to {out}")
 
 
 if __name__ == "__main__":

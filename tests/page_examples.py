@@ -8,8 +8,10 @@ from dataclasses import replace
 
 import numpy as np
 
+from benchtool.drive_results import Basis, CompressionMap, DrivePoint, DriveStudy, Estimate, Onset, ReferenceProof
 from benchtool.model import (
     BenchResult,
+    Bound,
     Compression,
     CompressionPoint,
     DeviceResult,
@@ -348,6 +350,124 @@ def named(name: str) -> Callable[[], DeviceResult]:
     return build
 
 
+def rapp_drop_db(below_knee_db: np.ndarray) -> np.ndarray:
+    """Return the drop in dB of a Rapp limiter with p = 2, at drives in dB from its knee: 1 dB at −1.165 dB."""
+    return np.asarray(5.0 * np.log10(1.0 + 10.0 ** (4.0 * np.asarray(below_knee_db) / 20.0)))
+
+
+def within(value: float | None, half: float) -> Estimate:
+    """Return an estimate of `value` give or take `half`."""
+    return Estimate(value, value - half, value + half) if value is not None else Estimate(None)
+
+
+def study_of(
+    device: DeviceResult,
+    p1db: Estimate,
+    safe: Estimate,
+    *,
+    mapped: bool = False,
+    spoiled: Sequence[str] = (),
+    known: bool = True,
+) -> DriveStudy:
+    """Return a study whose curve is that of a Rapp limiter with its 1 dB point at `p1db`, 20 dB above all if None."""
+    compression = device.compression
+    points = compression.points if compression else ()
+    drives = np.array([0.0 if p.drive_dbm is None else p.drive_dbm for p in points])
+    gains = np.array([p.gain_db for p in points])
+    knee = 1.165 + (max(drives) + 20.0 if p1db.value is None or p1db.bound else p1db.value)
+    along = np.linspace(min(drives) - 3.0, max(drives) + 5.0, 61)
+    middle = gains[0] - rapp_drop_db(along - knee)
+    curve = np.array([middle - 0.2 - 0.2 * (gains[0] - middle), middle, middle + 0.15])
+    changes = 0.4 * (gains[0] - gains)
+    marks = tuple(
+        DrivePoint(
+            p.file,
+            float(drives[k]),
+            within(p.gain_db, 0.4) if known else Estimate(p.gain_db),
+            within(float(gains[0] - gains[k]), 0.1) if known else Estimate(None),
+            float(gains[0]),
+            (within(float(changes[k]), 1.1) if k else Estimate(0.0, 0.0, 0.0)) if known else Estimate(None),
+            float((changes[k] - changes[k - 1]) / (drives[k] - drives[k - 1])) if k and known else None,
+            p.file in spoiled,
+        )
+        for k, p in enumerate(points)
+    )
+    output = Estimate(None) if p1db.value is None else within(p1db.value + float(gains[0]) - 1.0, 0.5)
+    basis: Basis = "none" if p1db.value is None else "bound" if p1db.bound else "fitted"
+    onset = Onset(
+        F0_HZ, 0.95, len(points), basis, p1db, output, safe,
+        within(float(gains[0]), 0.3) if known else Estimate(None),
+        ReferenceProof(points[0].file, known, within(0.02, 0.01) if known else Estimate(None)),
+        marks, along, curve,
+    )  # fmt: skip
+    frequency = np.linspace(18e6, 25e6, 15)
+    level = 20 * np.log10(np.abs(single_tuned(frequency, 0.0)))
+    drop = rapp_drop_db(drives[:, np.newaxis] + level - knee)
+    study_map = CompressionMap(frequency, drives, tuple(p.file for p in points), drop - drop[0]) if mapped else None
+    return DriveStudy(
+        cause="output-limited" if known else None,
+        confidence=0.98,
+        probabilities={},
+        pads=(),
+        odd_sweep=None,
+        onset=onset,
+        map=study_map,
+        next_sweeps=(),
+    )
+
+
+FITTED_P1DB = Estimate(-46.9, -47.6, -46.1)
+
+
+def drives_with_study(
+    full: bool = False, spoiled: Sequence[str] = (), findings: tuple[Finding, ...] = FINDINGS
+) -> DeviceResult:
+    device = three_drives(intervals=True)
+    if full:
+        low = replace(device.sweeps[0], sweep=make_sweep("stage2_low.s2p", 40.12, full=True))
+        figures = {**device.figures, "output_return_loss": Figure("output_return_loss", 12.2, "dB", 11.4, 13.0)}
+        device = replace(device, sweeps=(low, *device.sweeps[1:]), figures=figures)
+    else:
+        figures = {**device.figures, "input_return_loss": Figure("input_return_loss", None, "dB")}
+        device = replace(device, figures=figures)
+    study = study_of(device, FITTED_P1DB, Estimate(-54.1, -55.4), mapped=True, spoiled=spoiled)
+    return replace(device, drive=study, findings=findings)
+
+
+def two_drives_with_bound(bound: Bound = "at least") -> DeviceResult:
+    device = three_drives(intervals=True)
+    gains = [40.12, 40.02] if bound == "at least" else [33.0, 28.0]
+    compression = compression_of(device.sweeps[:2], gains)
+    device = replace(device, sweeps=device.sweeps[:2], compression=compression)
+    value = -46.8 if bound == "at least" else -60.3
+    low, high = (value, None) if bound == "at least" else (None, value)
+    safe = Estimate(-61.5, -61.5, None, "at least") if bound == "at least" else Estimate(None)
+    return replace(device, drive=study_of(device, Estimate(value, low, high, bound), safe))
+
+
+def one_drive_with_study() -> DeviceResult:
+    device = one_path()
+    compression = compression_of(device.sweeps, [18.3])
+    device = replace(device, compression=compression)
+    return replace(device, drive=study_of(device, Estimate(None), Estimate(None)))
+
+
+def study_without_values() -> DeviceResult:
+    """Return drives of which nothing is known but the gain, against a source whose level is not known."""
+    device = three_drives()
+    sweeps = tuple(replace(s, path=replace(s.path, source_dbm=None, drive_dbm=None)) for s in device.sweeps)
+    study = study_of(device, Estimate(None), Estimate(None), known=False)
+    points = tuple(replace(p, drive_dbm=None) for p in device.compression.points) if device.compression else ()
+    compression = replace(device.compression, points=points) if device.compression else None
+    return replace(device, sweeps=sweeps, compression=compression, drive=study)
+
+
+def ten_drives_with_study() -> DeviceResult:
+    device = crowded()
+    study = study_of(device, Estimate(-44.9, -45.2, -44.6), Estimate(-51.0, -52.0), mapped=True)
+    return replace(device, drive=study)
+
+
 CASES: dict[str, Callable[[], DeviceResult]] = {
     "three_drives": three_drives,
     "three_drives_intervals": lambda: three_drives(intervals=True),
@@ -359,6 +479,15 @@ CASES: dict[str, Callable[[], DeviceResult]] = {
     "ten_sweeps": ten_sweeps,
     "crowded": crowded,
     "six_pads_a_side": six_pads_a_side,
+    "drives_with_study": drives_with_study,
+    "drives_with_study_and_match": lambda: drives_with_study(full=True),
+    "drives_with_study_tall": lambda: drives_with_study(findings=()),
+    "drives_with_one_spoiled": lambda: drives_with_study(spoiled=("stage2_high.s2p",)),
+    "two_drives_with_bound": two_drives_with_bound,
+    "two_drives_with_upper_bound": lambda: two_drives_with_bound("at most"),
+    "one_drive_with_study": one_drive_with_study,
+    "study_without_values": study_without_values,
+    "ten_drives_with_study": ten_drives_with_study,
     "name_40": named(NAME_40),
     "name_60": named(NAME_60),
     **{f"evil_{k}": named(name) for k, name in enumerate(EVIL_NAMES)},

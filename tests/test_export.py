@@ -23,7 +23,7 @@ def test_a_write_that_fails_leaves_the_old_file(tmp_path, monkeypatch):
     def full(_handle):
         raise OSError(28, "No space left on device")
 
-    monkeypatch.setattr("benchtool.export.os.fsync", full)
+    monkeypatch.setattr("benchtool.whole_files.os.fsync", full)
     with pytest.raises(OutputError, match="cannot be written \\(No space left on device\\); free the disk"):
         write_whole(path, b"new")
     assert path.read_bytes() == b"old"

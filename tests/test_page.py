@@ -18,6 +18,7 @@ import numpy as np
 import pytest
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.contour import ContourSet
 from matplotlib.figure import Figure as Canvas
 from matplotlib.lines import Line2D
 from matplotlib.text import Text
@@ -94,6 +95,11 @@ def _y(line: Line2D) -> FloatArray:
     return np.asarray(line.get_ydata(), dtype=float)
 
 
+def _xy(line: Line2D) -> FloatArray:
+    """Return (2, n): where the points of a line stand, across and up."""
+    return np.stack([_x(line), _y(line)])
+
+
 def _share(one: Bbox, other: Bbox) -> float:
     """Return the area that two boxes share, in square pixels."""
     wide = min(one.x1, other.x1) - max(one.x0, other.x0)
@@ -153,6 +159,13 @@ def test_pdf_is_one_a4_page_with_its_fonts_embedded(case: str) -> None:
     assert pdf.count(b"/FontFile2") == pdf.count(b"/Type /FontDescriptor") > 0
     assert png.startswith(b"\x89PNG")
     assert [int.from_bytes(png[k : k + 4], "big") for k in (16, 20)] == [1240, 1753]
+
+
+def test_each_font_is_embedded_once() -> None:
+    device = _device("drives_with_study")
+    pdf, _ = render_page(examples.make_bench(device), device)
+    # The upright face and the bold one.
+    assert pdf.count(b"/FontFile2") == 2
 
 
 def test_same_result_same_bytes_whatever_the_settings(monkeypatch: pytest.MonkeyPatch) -> None:
@@ -308,6 +321,142 @@ def test_drive_panel_has_every_drive() -> None:
     assert_allclose(_y(points), [40.12, 39.52, 32.02], rtol=0, atol=1e-9)
     hollow = next(line for line in axes.get_lines() if line.get_markerfacecolor() == "white")
     assert_allclose([_x(hollow)[0], _y(hollow)[0]], [-38, 32.02], rtol=0, atol=1e-9)
+
+
+def _drive_axes(case: str) -> tuple[Axes, Axes]:
+    """Return the diagram of gain against drive and the strip of phase below it."""
+    axes = _page_of(case).get_axes()
+    return axes[1], axes[2]
+
+
+def _whisker(axes: Axes) -> tuple[list[float], list[float]]:
+    """Return the lower and the upper ends of the whiskers, from left to right."""
+    caps = next(line for line in axes.get_lines() if line.get_marker() == "_")
+    half = len(_y(caps)) // 2
+    return _y(caps)[:half].tolist(), _y(caps)[half:].tolist()
+
+
+def test_drive_panel_shows_gain_curve_and_onset_of_the_study() -> None:
+    gain, _ = _drive_axes("drives_with_study")
+    lines = gain.get_lines()
+    full = next(li for li in lines if li.get_marker() == "o" and li.get_markerfacecolor() == "#1b2127")
+    hollow = next(li for li in lines if li.get_marker() == "o" and li.get_markerfacecolor() == "white")
+    assert_allclose(_xy(full), [[-58.0, -48.0], [40.12, 39.52]], rtol=0, atol=1e-9)
+    assert_allclose(_xy(hollow), [[-38.0], [32.02]], rtol=0, atol=1e-9)
+    low, high = _whisker(gain)
+    assert_allclose(low, [39.72, 39.12, 31.62], rtol=0, atol=1e-9)
+    assert_allclose(high, [40.52, 39.92, 32.42], rtol=0, atol=1e-9)
+    study = _device("drives_with_study").drive
+    assert study is not None
+    curve = _curve(gain, 0.9)
+    assert_allclose(_x(curve), study.onset.curve_drive_dbm, rtol=0, atol=1e-12)
+    assert_allclose(_y(curve), study.onset.curve_gain_db[1], rtol=0, atol=1e-12)
+    point = next(li for li in lines if li.get_marker() == "D")
+    assert_allclose([_x(point)[0], _y(point)[0]], [-46.9, 40.12 - 1.0], rtol=0, atol=1e-9)
+    interval = next(li for li in lines if li.get_marker() == "|" and li.get_linestyle() == "-")
+    assert_allclose(_x(interval), [-47.6, -46.1], rtol=0, atol=1e-9)
+    limit = next(li for li in lines if li.get_color() == "#0072B2")
+    assert_allclose(_x(limit), [-55.4, -55.4], rtol=0, atol=1e-9)
+    words = _words(_page_of("drives_with_study"))
+    assert "input P1dB −46.9 dBm (−47.6 to −46.1)" in words
+    assert "safe to −55.4 dBm" in words and "compressed" in words and "left out" not in words
+
+
+def test_sweep_numbers_stand_over_their_drives() -> None:
+    canvas = _page_of("drives_with_study")
+    gain = canvas.get_axes()[1]
+    for number, drive in (("1", -58.0), ("2", -48.0), ("3", -38.0)):
+        x, top = gain.transData.transform((drive, gain.get_ylim()[1]))
+        over = [b for t, b in _texts(canvas) if t.get_text() == number and 0.0 < b.y0 - top < 12.0]
+        assert len(over) == 1
+        assert_allclose((over[0].x0 + over[0].x1) / 2.0, x, rtol=0, atol=1.0)
+
+
+def test_phase_change_has_a_strip_below_the_gain() -> None:
+    gain, phase = _drive_axes("drives_with_study")
+    assert phase.bbox.y1 < gain.bbox.y0 and phase.get_xlim() == gain.get_xlim()
+    marks = next(li for li in phase.get_lines() if li.get_marker() == "s")
+    assert_allclose(_xy(marks), [[-58.0, -48.0, -38.0], [0.0, 0.24, 3.24]], rtol=0, atol=1e-9)
+    low, high = _whisker(phase)
+    assert_allclose(low, [0.0, -0.86, 2.14], rtol=0, atol=1e-9)
+    assert_allclose(high, [0.0, 1.34, 4.34], rtol=0, atol=1e-9)
+    assert "phase change, °; up to 0.30°/dB" in _words(_page_of("drives_with_study"))
+    assert not [w for w in _words(_page_of("study_without_values")) if w.startswith("phase change")]
+
+
+def test_bound_of_the_1_db_point_is_an_arrow_away_from_it() -> None:
+    for case, shape, bound in (("two_drives_with_bound", ">", -46.8), ("two_drives_with_upper_bound", "<", -60.3)):
+        gain, _ = _drive_axes(case)
+        assert not [li for li in gain.get_lines() if li.get_marker() == "D"]
+        head = next(li for li in gain.get_lines() if li.get_marker() == shape)
+        foot = [li for li in gain.get_lines() if li.get_marker() == "|" and li.get_color() == "#D55E00"]
+        assert_allclose(_x(foot[0]), [bound], rtol=0, atol=1e-9)
+        away = _x(head)[0] - bound
+        assert (away > 1.0) if shape == ">" else (away < -1.0)
+        side = "at least" if shape == ">" else "at most"
+        assert f"input P1dB {side} −{-bound} dBm" in _words(_page_of(case))
+    assert "safe to −61.5 dBm" in _words(_page_of("two_drives_with_bound"))
+    assert "safe drive not known" in _words(_page_of("two_drives_with_upper_bound"))
+
+
+def test_spoiled_sweep_is_crossed_and_not_mapped() -> None:
+    canvas = _page_of("drives_with_one_spoiled")
+    crossed = next(li for li in canvas.get_axes()[1].get_lines() if li.get_marker() == "x")
+    assert_allclose(_xy(crossed), [[-38.0], [32.02]], rtol=0, atol=1e-9)
+    assert not [li for li in canvas.get_axes()[1].get_lines() if li.get_markerfacecolor() == "white"]
+    words = _words(canvas)
+    assert "left out" in words and "Compression, dB" not in words
+    # Steepest between the two sweeps that are not spoiled: 0.24° over 10 dB.
+    assert "phase change, °; up to 0.02°/dB" in words
+    assert "Compression, dB" in _words(_page_of("drives_with_study"))
+
+
+def test_one_drive_has_no_drive_panel() -> None:
+    canvas = _page_of("one_drive_with_study")
+    assert not [w for w in _words(canvas) if "against drive" in w]
+    assert len(canvas.get_axes()) == 3
+
+
+def test_study_without_values_says_so() -> None:
+    canvas = _page_of("study_without_values")
+    words = _words(canvas)
+    assert "safe drive not known" in words and "Gain, dB against drive, dB" in words
+    assert "drive against the source; its level is unknown" in words
+    assert not [w for w in words if "nan" in w.lower() or "None" in w]
+    lines = canvas.get_axes()[1].get_lines()
+    assert sorted(str(line.get_marker()) for line in lines) == ["o", "o", "|"]
+
+
+def test_map_has_the_1_db_contour_where_the_sweeps_put_it() -> None:
+    device = _device("drives_with_study")
+    assert device.drive is not None and device.drive.map is not None
+    measured = device.drive.map
+    axes = _page_of("drives_with_study").get_axes()[3]
+    contours = [c for c in axes.collections if isinstance(c, ContourSet)]
+    filled, lines = (next(c for c in contours if c.filled is kind) for kind in (True, False))
+    assert list(lines.levels) == [0.5, 1.0, 2.0, 3.0, 6.0]
+    ring = np.asarray(lines.get_paths()[1].vertices, dtype=float)
+    node = int(np.argmax(measured.compression_db[2]))
+    middle, high = measured.compression_db[1:, node]
+    # Compression as a power of the drive between −48 and −38 dBm: straight in its logarithm.
+    expected = -48.0 + 10.0 * np.log(1.0 / middle) / np.log(high / middle)
+    at_node = ring[np.abs(ring[:, 0] - measured.frequency_hz[node] / 1e6) < 1e-6]
+    assert_allclose(at_node[:, 1], [expected], rtol=0, atol=0.1)
+    grey = np.asarray(filled.get_facecolor())[:, :3] @ [0.2126, 0.7152, 0.0722]
+    assert len(grey) == 6 and np.all(np.diff(grey) < -0.05)
+
+
+def test_nothing_is_mapped_where_nothing_compressed() -> None:
+    device = _device("drives_with_study")
+    assert device.drive is not None
+    unproven = replace(device.drive, onset=replace(device.drive.onset, basis="bound"))
+    assert "Compression, dB" not in _words(_page(replace(device, drive=unproven)))
+
+
+def test_match_gives_way_to_the_map_only_where_it_cannot_be_shown() -> None:
+    assert not [w for w in _words(_page_of("drives_with_study")) if w.startswith("Return loss")]
+    words = _words(_page_of("drives_with_study_and_match"))
+    assert {"Compression, dB", "Return loss, dB", "Group delay, ns", "against MHz"} <= set(words)
 
 
 def test_match_and_delay_curves() -> None:

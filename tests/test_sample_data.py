@@ -40,7 +40,7 @@ Real = NDArray[np.float64]
 @pytest.fixture(scope="module")
 def maker() -> Iterator[Any]:
     """The maker as a module, with its neighbours importable meanwhile."""
-    names = ("analyzer", "circuits", "truth", "make_sweeps")
+    names = ("analyzer", "circuits", "sessions", "truth", "make_sweeps")
     sys.path.insert(0, str(SAMPLE_DATA))
     try:
         yield importlib.import_module("make_sweeps")

@@ -303,6 +303,47 @@ def test_forms_that_the_standard_allows_need_no_mending(text):
         assert_array_equal(sweep.s21, np.full(len(sweep.frequency_hz), 3.5 - 0.4j)) if "0.125" not in text else None
 
 
+NUMBERS = "0.1 0.2 3.5 -0.4 0.05 0.06 -0.7 "
+
+
+@pytest.mark.parametrize(
+    "ends",
+    [
+        ("0.80", "0.81", "0.82", "0.83", "0.845"),  # longer, not shorter
+        ("0.8", "0.81", "0.82", "0.83", "0.8"),  # as above in one row
+        ("0.80", "0.81", "0.82", "0.8"),  # too few rows to tell
+        ("8E-1", "8.1E-1", "8.2E-1", "8.3E-1", "8E-1"),
+    ],
+)
+def test_a_last_number_without_line_end_is_whole_where_its_form_says_nothing(ends):
+    text = HEAD + "\n".join(f"{f} {NUMBERS}{end}" for f, end in enumerate(ends, 1))
+    sweep = parse(text, strict=True)
+    assert sweep.findings == ()
+    assert_array_equal(sweep.s22.imag, [float(end) for end in ends])
+
+
+@pytest.mark.parametrize("last", ["0.8", "0.", "0", "-", "8.4E", "8.4E-", "8.4E-0"])
+def test_a_last_number_of_another_form_without_line_end_is_cut(last):
+    end = "8.40E-01" if "E" in last else "0.84"
+    text = HEAD + "".join(f"{f} {NUMBERS}{end}\n" for f in range(1, 6))
+    sweep = parse(text + f"6 {NUMBERS}{last}")
+    assert_array_equal(sweep.s22.imag, [0.84] * 5)
+    assert said(text + f"6 {NUMBERS}{last}") == ["line 7: the file breaks off in its last row; the row was left out"]
+
+
+@pytest.mark.parametrize("noise", ["2 1.1 0.3 64 0.4", "2 1.1 0.3 64 0.4\n3 1.2 0.3 64 0.4"])
+def test_a_noise_block_without_a_last_line_end_is_whole(noise):
+    sweep = parse(HEAD + f"1 {ROW}\n2 {ROW}\n{noise}", strict=True)
+    assert sweep.findings == ()
+    assert sweep.noise is not None and sweep.noise.nf_min_db[0] == 1.1
+
+
+def test_a_noise_block_that_breaks_off_loses_its_last_row():
+    sweep = parse(HEAD + f"1 {ROW}\n2 {ROW}\n1 1.1 0.3 64 0.4\n2 1.2 0.3")
+    assert sweep.noise is not None and len(sweep.noise.frequency_hz) == 1
+    assert [finding.code for finding in sweep.findings] == ["file-mended"]
+
+
 # Commas: one reading or none.
 
 

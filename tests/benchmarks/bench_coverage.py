@@ -174,9 +174,10 @@ def draw_bench(rng):
         if kind == "network":
             full = False
     delay = rng.uniform(0, 0.3) / b if kind == "network" else rng.uniform(0, 0.02) / b
-    # What the tool assumes of a port it cannot see is drawn as assumed: 10 dB return loss, half of it resonant.
-    s11 = (10 ** (-10 / 20) * phasor(rng), 10 ** (-16 / 20) * phasor(rng))
-    s22 = (10 ** (-10 / 20) * phasor(rng), 10 ** (-16 / 20) * phasor(rng))
+    # What the tool assumes of a port it cannot see is drawn as assumed: 10 dB return loss at the input and 3 dB at the
+    # output, and as much again that follows the resonance.
+    s11 = (10 ** (-10 / 20) * phasor(rng), 10 ** (-10 / 20) * phasor(rng))
+    s22 = (10 ** (-3 / 20) * phasor(rng), 10 ** (-3 / 20) * phasor(rng))
     if kind == "filter":
         s11, s22 = (phasor(rng), 0.0), (phasor(rng), 0.0)
     points = int(rng.choice([101, 201, 401, 801, 1601]))

@@ -15,12 +15,15 @@ sys.path.insert(0, str(Path(__file__).resolve().parents[2]))
 from benchtool.touchstone import read_sweep
 
 REPEATS = 7
+LIMITS = {"RI": ((-1, 1), (-1, 1)), "MA": ((0, 1), (-180, 180)), "DB": ((-60, 0), (-180, 180))}
 FORMATS = {"9 digits": "{:.8e}", "17 digits": "{!r}"}
 
 
 def write_sweep(path: Path, points: int, number: str, form: str) -> None:
-    """Write a file of `points` rows of noise, whose digits cost most to read."""
-    values = np.random.default_rng(1).normal(size=(points, 8))
+    """Write a file of `points` rows of random numbers such as an analyzer gives, all digits of which count."""
+    rng = np.random.default_rng(1)
+    first, second = LIMITS[form]
+    values = np.stack([rng.uniform(*first, (points, 4)), rng.uniform(*second, (points, 4))], axis=2).reshape(points, 8)
     rows = np.column_stack([np.linspace(1e6, 1e9, points), values]).tolist()
     lines = [" ".join(number.format(value) for value in row) for row in rows]
     path.write_text(f"# Hz S {form} R 50\n" + "\n".join(lines) + "\n", encoding="utf-8")

@@ -65,6 +65,8 @@ class Bench:
     entries: list
     sweeps: list
     design_hz: float
+    pad_losses_db: dict = field(default_factory=dict)
+    """What each pad truly loses."""
     input_p1db_dbm: float | None = None
     shape_db: float = 0.0
     """By how much more the gain truly changes at one node than at another, largest over the sweeps."""
@@ -88,14 +90,14 @@ def make_bench(seed: int, cause: str | None = None) -> Bench:
     ladder = [(list(pads), []) for pads in LADDERS[rng.integers(len(LADDERS))]]
     if cause in ("output", "receiver", "clean") and rng.uniform() < 0.5:
         ladder.append((ladder[-1][0], ["d10"]))
-    if cause == "drift" and rng.uniform() < 0.6:
-        ladder.append(ladder[0])
-    elif rng.uniform() < 0.15:
+    if (cause == "drift" and rng.uniform() < 0.6) or rng.uniform() < 0.15:
         ladder.append(ladder[0])
     ladder = ladder[:6]
     f0 = 21.4e6
     band = rng.uniform(0.4e6, 1.5e6)
-    f = np.linspace(f0 - 0.5 * band * rng.uniform(5, 10), f0 + 0.5 * band * rng.uniform(5, 10), int(rng.choice([201, 401])))
+    f = np.linspace(
+        f0 - 0.5 * band * rng.uniform(5, 10), f0 + 0.5 * band * rng.uniform(5, 10), int(rng.choice([201, 401]))
+    )
     peak = f0 + rng.uniform(-0.1, 0.1) * band
     gain_db = rng.uniform(15, 38)
     sections = int(rng.integers(1, 3))
@@ -130,7 +132,8 @@ def make_bench(seed: int, cause: str | None = None) -> Bench:
         p1db = float(np.max(drive)) + level.max() - excess_for(deepest, law, p)
         if rng.uniform() < 0.25:
             near = True
-            stated = at_port2 + rng.uniform(-2.0, 1.0)
+            # What the receiver would have to be stated as to explain the very same drop.
+            stated = at_port2 - excess_for(deepest, law, p) - 1.0 + rng.uniform(-2, 2)
     elif cause == "input":
         follows = "input"
         p1db = float(np.max(drive)) - excess_for(deepest, law, p)
@@ -151,14 +154,17 @@ def make_bench(seed: int, cause: str | None = None) -> Bench:
         drift_db = rng.normal(0, 1.0, len(ladder))
         drift_db[0] += rng.choice([-1, 1]) * 0.5
         drift_hz = rng.normal(0, 0.05 * band, len(ladder)) * (rng.uniform() < 0.6)
+    tilt_db = rng.normal(0, 0.3) * (f - f0) / np.ptp(f)  # the load, and so the output limit, changes over the sweep
+    pull_hz = rng.normal(0, 0.003 * band) * (rng.uniform() < 0.5) * (cause == "output" and not near)  # a dB of drop
     turn = rng.uniform(0, 3.0) * (rng.uniform() < 0.5)
     entries, sweeps, drops, true = [], [], [], []
     for k, (pads, out) in enumerate(ladder):
         own = response(drift_hz[k]) * 10 ** (drift_db[k] / 20)
         own_db = 20 * np.log10(np.abs(own))
         at_input = drive[k] + np.zeros(f.size)
-        excess = at_input - p1db + (own_db if follows == "output" else 0.0)
+        excess = at_input - p1db + (own_db - tilt_db if follows == "output" else 0.0)
         drop = fundamental_drop_db(excess, law, p)
+        own = own * response(pull_hz * float(np.max(drop))) / device
         if receiver_p1db is not None:
             drop = drop + fundamental_drop_db(drive[k] + own_db - drop - out_db[k] - receiver_p1db, law, p)
         s21 = own * 10 ** (-drop / 20) * np.exp(1j * np.radians(turn * drop))
@@ -195,13 +201,11 @@ def make_bench(seed: int, cause: str | None = None) -> Bench:
             reading_db=READING_DB,
             port_match_db=30.5,
         ),
-        pads={
-            name: Pad(loss_db=value, tolerance_db=TOLERANCE_DB, return_loss_db=28) for name, value in LOSSES.items()
-        },
+        pads={name: Pad(loss_db=value, tolerance_db=TOLERANCE_DB, return_loss_db=28) for name, value in LOSSES.items()},
         calibration=Calibration(input_pads=("b10",), output_pads=("c10",)),
         devices=(Device(name="device", kind="amplifier", design_hz=f0, sweeps=tuple(entries)),),
     )
-    bench = Bench(seed, cause, law, p, sheet, entries, sweeps, f0)
+    bench = Bench(seed, cause, law, p, sheet, entries, sweeps, f0, loss)
     bench.input_p1db_dbm = p1db - (at_design if follows == "output" else 0.0)
     _note_truth(bench, ladder, np.array(drops), np.array(true), level, floor_db)
     bench.receiver_near = near
