@@ -315,6 +315,7 @@ def correct(
     bench: Bench,
     out: Out = None,
     strict: Strict = False,
+    touchstone: Annotated[int, typer.Option("--touchstone", min=1, max=2, help="Version of the files written.")] = 1,
     design: Design = None,
     source: Source = None,
     input_pad: InputPad = None,
@@ -325,7 +326,7 @@ def correct(
 
     sheet, folder = _load(bench, design, source, input_pad, output_pad)
     folder = out or folder.parent / "corrected"
-    files = corrected_files(sheet, strict=strict)
+    files = corrected_files(sheet, strict=strict, version=2 if touchstone == 2 else 1)
     prepare_folder(folder)
     for name, text in files:
         write_whole(folder / name, text.encode())

@@ -59,6 +59,10 @@ its resonance: an unknown port is taken to have a part of that size that stands 
 """
 
 _SMALL_PAD_DB: Final = 12.0
+_LENGTH_DOUBT: Final = 1.06
+"""A vector of known length and unknown phase errs mostly by its whole length, so an interval that is short of it by
+a few percent misses often: second-order reflections make each vector about that much longer.
+"""
 
 
 @dataclass(frozen=True)
@@ -99,6 +103,8 @@ class SweepDoubts:
     input_ports: tuple[float, ...]
     """Reflections that the device sees on its input side: the nearest added pad, and the port through the pads."""
     output_ports: tuple[float, ...]
+    input_between: tuple[float, ...] = ()
+    """Port and pad seeing each other in front of the device, once for each way round: twice their product."""
     turned: bool = False
     """Whether S22 comes from the device turned round, read through the input-side pads."""
 
@@ -164,7 +170,7 @@ def _error_vectors(weights: Mapping[str, int], directivity: float, bank: PadBank
 
     What the added pads themselves reflect adds to the directivity; a measured pad's reflection is taken out exactly.
     """
-    grown = from_db(2.0 * sum(sign * bank.loss_db(pad, at_hz) for pad, sign in weights.items()))
+    grown = _LENGTH_DOUBT * from_db(2.0 * sum(sign * bank.loss_db(pad, at_hz) for pad, sign in weights.items()))
     return tuple(grown * length for length in (directivity, *_own_reflections(weights, bank)))
 
 
@@ -226,6 +232,7 @@ def sweep_doubts(sweep: Sweep, entry: SweepEntry, sheet: BenchSheet, bank: PadBa
         vectors[0] if entry.reversed is not None else vectors[1],
         ports[0],
         ports[1],
+        tuple(2.0 * port * reflection for reflection in _own_reflections(weights[0], bank)),
         entry.reversed is not None,
     )
 
@@ -335,6 +342,9 @@ class Draws:
         sides = (doubts.input_ports, doubts.output_ports)
         near, far = sides if port == 0 else sides[::-1]
         added: ComplexArray = sum(size * self.phasor() for size in near) * sweep.s[port, port] ** 2
+        if port == 0:
+            for product in doubts.input_between:
+                added = added + product * self.phasor() * sweep.s11
         if "S12" in sweep.measured and "S21" in sweep.measured:
             added = added + sum(size * self.phasor() for size in far) * (sweep.s12 * sweep.s21)
         return added

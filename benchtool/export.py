@@ -8,7 +8,7 @@ import json
 import math
 from collections.abc import Mapping
 from pathlib import Path
-from typing import Any, Final
+from typing import Any, Final, Literal
 
 import numpy as np
 
@@ -252,8 +252,10 @@ def results_csv(bench: BenchResult) -> bytes:
     return stream.getvalue().encode()
 
 
-def corrected_files(sheet: BenchSheet, *, strict: bool = False) -> list[tuple[str, str]]:
+def corrected_files(sheet: BenchSheet, *, strict: bool = False, version: Literal[1, 2] = 1) -> list[tuple[str, str]]:
     """Return name and Touchstone text of every sweep at the device's own ports, one file for each, names all different.
+
+    `version` is that of the Touchstone format.
 
     Raises
     ------
@@ -275,5 +277,5 @@ def corrected_files(sheet: BenchSheet, *, strict: bool = False) -> list[tuple[st
             f"{result.output_correction_db:g} dB on the output side",
             f"measured: {', '.join(result.sweep.measured)}; made by benchtool {__version__}",
         ]
-        files.append((f"{stem}.s2p", format_sweep(result.sweep, comments=comments)))
+        files.append((f"{stem}.s2p", format_sweep(result.sweep, comments=comments, version=version)))
     return files

@@ -159,15 +159,16 @@ def _points(
 ) -> tuple[DrivePoint, ...]:
     reach = NormalDist().inv_cdf(0.5 + confidence / 2.0)
     of_pads = np.array([pad.u_db * pad.reads for pad in table.pads]).reshape(-1, table.sweeps)
-    own = np.hypot(table.reading_u_db, table.design_noise_db)
-    gain_u = np.sqrt(own**2 + np.sum(of_pads**2, axis=0))
+    own = table.design_covariance_db2 + np.diag(table.design_noise_db**2)
+    gain_u = np.sqrt(np.diag(own) + np.sum(of_pads**2, axis=0))
+    from_first = np.sqrt(np.diag(own) + own[0, 0] - 2.0 * own[0])
     points = []
     for k, file in enumerate(table.files):
         gain = float(table.design_gain_db[k])
         drop = _interval(drop_at(belief, float(drive[k])), confidence)
         turned = float(wrap_degrees(float(table.design_phase_deg[k] - table.design_phase_deg[0])))
         # A reading's doubt is the same share in magnitude and in phase.
-        doubt = 0.0 if k == 0 else reach * float(np.degrees(np.log(10.0) / 20.0 * np.hypot(own[k], own[0])))
+        doubt = reach * float(np.degrees(np.log(10.0) / 20.0 * from_first[k]))
         step = float(drive[k] - drive[k - 1]) if k else 0.0
         turn = float(wrap_degrees(float(table.design_phase_deg[k] - table.design_phase_deg[k - 1])))
         points.append(

@@ -93,10 +93,10 @@ def log_likelihood(
     drop_db, slope : (G, k) drop of gain of each sweep and its derivative by drive, dB/dB
     allow : what is known of causes other than the device
     """
-    own = table.reading_u_db**2 + table.design_noise_db**2 + allow.unsteady_db**2 + 1e-12
+    own = table.design_noise_db**2 + allow.unsteady_db**2 + 1e-12
     variance = own + (_LAW_DOUBT * drop_db) ** 2
     k = table.sweeps
-    covariance = variance[..., None] * np.eye(k)
+    covariance = variance[..., None] * np.eye(k) + table.design_covariance_db2
     if table.pads:
         reads, drives = _split_common(table.pads)
         bears = reads[:, None, :] - slope * drives[:, None, :]

@@ -225,7 +225,7 @@ def _worth(bench: _Bench, line: Line, likely: Sequence[Rival]) -> float:
         **change_of_line(line.input_pads, cal.input_pads).weights(),
         **change_of_line(line.output_pads, cal.output_pads).weights(),
     }
-    variance = 2.0 * float(np.mean(bench.table.reading_u_db**2))
+    variance = 2.0 * float(np.mean(np.diag(bench.table.design_covariance_db2)))
     for pad in weights:
         width, is_limit = pad_doubt_db(pad, bench.bank)
         variance += (rectangular_u(width) if is_limit else width) ** 2

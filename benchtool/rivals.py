@@ -23,6 +23,7 @@ from typing import Final, Literal, TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.linalg import block_diag
 
 from benchtool.drive_table import DriveTable
 from benchtool.limiting import HARDEST_P, SOFTEST_P, Law
@@ -193,13 +194,20 @@ def _freedoms(
 ) -> tuple[FloatArray, FloatArray]:
     """Return what the priors leave free, (G, k, j, m), and its precision, (m, m).
 
-    First the flat doubts of each sweep, then how far the law may be out in each and, if it `detunes`, how far limiting
-    tunes the device off, then the extras.
+    First the flat doubts of each sweep, then the forms that mismatch may give it, then how far the law may be out in
+    each and, if it `detunes`, how far limiting tunes the device off, then the extras.
     """
     trials, k, nodes = drop.shape
     each = np.eye(k)[:, None, :]
     flat = np.broadcast_to(each, (trials, k, nodes, k))
     parts: list[FloatArray] = [flat]
+    replaced = next((extra.pad for extra in extras if extra.pad), "")
+    known = [np.linalg.inv(_flat_covariance(table, replaced))]
+    for form in table.mismatch:
+        # What equal lines have in common goes with the gain of the device, which is free.
+        if np.max(np.abs(form.between)) > _LEAST_U_DB**2:
+            parts.append(np.broadcast_to(form.pattern[:, None] * each, (trials, k, nodes, k)))
+            known.append(np.linalg.inv(form.between + _LEAST_U_DB**2 * np.eye(k)))
     widths: list[float] = []
     if np.any(drop):
         parts.append(drop[..., None] * each)
@@ -209,12 +217,8 @@ def _freedoms(
         widths += [_DETUNING] * k
     parts += [np.broadcast_to(extra.pattern[..., None], (trials, k, nodes, 1)) for extra in extras]
     basis = np.concatenate(parts, axis=-1)
-    precision = np.zeros((basis.shape[-1],) * 2)
-    replaced = next((extra.pad for extra in extras if extra.pad), "")
-    precision[:k, :k] = np.linalg.inv(_flat_covariance(table, replaced))
-    for i, u in enumerate([*widths, *(extra.u for extra in extras)], start=k):
-        precision[i, i] = u**-2
-    return basis, precision
+    free = np.array([*widths, *(extra.u for extra in extras)])
+    return basis, block_diag(*known, np.diag(free**-2.0)) if free.size else block_diag(*known)
 
 
 def _without_law(table: DriveTable, cause: Cause, about: str, extras: Sequence[_Extra], share: float = 1.0) -> _Weighed:

@@ -4,17 +4,22 @@ from __future__ import annotations
 
 import os
 import re
-import tempfile
+import secrets
 from collections.abc import Iterable
+from contextlib import suppress
 from pathlib import Path
 from typing import Final
 
 from benchtool.errors import OutputError
 
-__all__ = ["cell_text", "file_stem", "prepare_folder", "unique_stems", "write_whole"]
+__all__ = ["cell_text", "file_stem", "prepare_folder", "remove_unfinished", "unique_stems", "write_whole"]
 
 _LONGEST_STEM: Final = 100
 """Bytes of a file name that leave room for a suffix within the 255 that file systems allow."""
+
+
+_UNFINISHED: Final[set[Path]] = set()
+"""Files that are being written, by names that nobody else has."""
 
 
 def write_whole(path: Path, data: bytes) -> None:
@@ -24,25 +29,29 @@ def write_whole(path: Path, data: bytes) -> None:
     ------
     OutputError : the disk is full, or the folder cannot be written.
     """
-    handle, name = -1, ""
+    part = path.parent / f".benchtool-{secrets.token_hex(8)}"
+    _UNFINISHED.add(part)
     try:
-        handle, name = tempfile.mkstemp(prefix=".benchtool-", dir=path.parent)
-        with os.fdopen(handle, "wb") as stream:
+        with part.open("xb") as stream:
             stream.write(data)
             stream.flush()
             os.fsync(stream.fileno())
-        # mkstemp makes files for the owner's eyes only; a page is meant to be passed on.
-        umask = os.umask(0)
-        os.umask(umask)
-        Path(name).chmod(0o666 & ~umask)
-        Path(name).replace(path)
+        part.replace(path)
     except OSError as error:
         raise OutputError(
             path, f"cannot be written ({error.strerror or error})", "free the disk, or choose another folder with --out"
         ) from None
     finally:
-        if name:
-            Path(name).unlink(missing_ok=True)
+        with suppress(OSError):
+            part.unlink()
+        _UNFINISHED.discard(part)
+
+
+def remove_unfinished() -> None:
+    """Remove what is being written just now; for a process that must end at once."""
+    for part in tuple(_UNFINISHED):
+        with suppress(OSError):
+            part.unlink()
 
 
 def prepare_folder(folder: Path) -> None:

@@ -14,6 +14,7 @@ import skrf
 from numpy.testing import assert_allclose
 
 from benchtool.cli import main
+from benchtool.touchstone import read_sweep
 
 ROOT = Path(__file__).parents[1]
 SAMPLE = ROOT / "sample_data" / "telemetry"
@@ -131,6 +132,16 @@ def test_correct_writes_sweeps_at_the_device(tmp_path):
     turn = 10 * np.exp(2j * np.pi * raw.f * 95e-12)
     assert_allclose(corrected.s[:, 1, 0], raw.s[:, 1, 0] * turn, rtol=1e-12, atol=0)
     assert len(list(tmp_path.iterdir())) == 8
+
+
+def test_correct_writes_version_2_on_request(tmp_path):
+    done = run("correct", SAMPLE, "--out", tmp_path, "--touchstone", "2")
+    assert done.returncode == 0, done.stderr
+    text = (tmp_path / "filter_at_device.s2p").read_text(encoding="utf-8")
+    assert "[Version] 2" in text
+    assert "[Two-Port Data Order] 21_12" in text
+    first, second = (read_sweep(tmp_path / "filter_at_device.s2p"), skrf.Network(tmp_path / "filter_at_device.s2p"))
+    assert_allclose(np.moveaxis(first.s, -1, 0), second.s, rtol=1e-12, atol=0)
 
 
 def test_inspect_shows_what_is_in_a_file():

@@ -13,6 +13,8 @@ PACKAGE = Path(benchtool.__file__).parent
 
 LAYERS = [
     "errors",
+    "whole_files",
+    "processes",
     "units",
     "aliases",
     "drive_results",
@@ -78,8 +80,9 @@ LAYERS = [
     "page_notes",
     "page",
     "export",
-    "lot_page",
+    "reporting",
     "lots",
+    "lot_page",
     "draft",
     "terminal",
     "cli",

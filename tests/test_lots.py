@@ -398,6 +398,18 @@ def test_a_fault_of_the_program_at_one_bench_loses_no_other(lot, monkeypatch):
     assert len(result.devices) == 2
 
 
+def gone(group):
+    """Whether a group of processes has ended; its last one may take a moment."""
+    end = time.monotonic() + 10
+    while time.monotonic() < end:
+        try:
+            os.killpg(group, 0)
+        except ProcessLookupError:
+            return True
+        time.sleep(0.02)
+    return False
+
+
 @pytest.mark.skipif(sys.platform == "win32", reason="no such signal there")
 def test_an_interrupt_stops_the_workers_and_leaves_whole_files_only(tmp_path):
     lot = tmp_path / "lot"
@@ -417,8 +429,7 @@ def test_an_interrupt_stops_the_workers_and_leaves_whole_files_only(tmp_path):
     _, said = process.communicate(timeout=30)
     assert process.returncode == 130, said
     assert said == "stopped; files already written are whole\n"
-    with pytest.raises(ProcessLookupError):  # no worker is left in its group
-        os.killpg(process.pid, 0)
+    assert gone(process.pid)  # with every worker in its group
     results = list(lot.glob("*/report/results.json"))
     assert 0 < len(results) < 30
     for path in lot.rglob("report/*"):

@@ -105,9 +105,7 @@ def test_half_decibel_chebyshev_half_power_points(order, edge):
     assert_allclose(found.bandwidth / 4e6, edge, rtol=3e-5, atol=0)
 
 
-@pytest.mark.parametrize(
-    ("order", "edge"), [(2, 1.361654), (3, 1.755672), (4, 2.113918), (5, 2.427411), (6, 2.703395)]
-)
+@pytest.mark.parametrize(("order", "edge"), [(2, 1.361654), (3, 1.755672), (4, 2.113918), (5, 2.427411), (6, 2.703395)])
 def test_bessel_half_power_points(order, edge):
     # Tabulated ω3dB of unit-delay Bessel low-passes (Zverev 1967, from memory; recomputed with scipy.signal.besselap).
     f = np.linspace(55e6, 85e6, 801)
