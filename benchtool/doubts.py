@@ -59,9 +59,9 @@ its resonance: an unknown port is taken to have a part of that size that stands 
 """
 
 _SMALL_PAD_DB: Final = 12.0
-_LENGTH_DOUBT: Final = 1.06
+_LENGTH_DOUBT: Final = 1.1
 """A vector of known length and unknown phase errs mostly by its whole length, so an interval that is short of it by
-a few percent misses often: second-order reflections make each vector about that much longer.
+a few percent misses often: second-order reflections can make each vector that much longer.
 """
 
 

@@ -143,6 +143,10 @@ def _checked_name(match: re.Match[str], before: Container[str], text: str, readi
     elif name in _BARE and match[3].strip(" \t"):
         found, remedy = f"{quoted(match[3].strip())} on the line of {shown(word)}", "put it on the next line"
     else:
+        if name != match[1].lower():
+            found, remedy = f"odd blanks in the keyword {quoted(word)}", f"write '{_title(name)}'"
+            line = line_number(text, match.start())
+            reading.mend(found, "it was read without them", remedy, lines=[line], severity="note")
         return name
     raise reading.fault(found, remedy, line=line_number(text, match.start()))
 
@@ -299,7 +303,7 @@ def _noise(text: str, sections: dict[str, _Section], option: OptionLine, reading
 
 def _check_count(sections: dict[str, _Section], name: str, rows: int, reading: Reading, *, needed: bool = True) -> None:
     """Compare the promised number of rows with those that stand in the file."""
-    title = f"[{name.title().replace(' Of ', ' of ')}]"
+    title = _title(name)
     if name not in sections:
         if needed:
             done, remedy = f"the {rows} in the file were read", f"write '{title} {rows}'"
@@ -309,6 +313,11 @@ def _check_count(sections: dict[str, _Section], name: str, rows: int, reading: R
     if promised != rows:
         found = f"{title} says {quoted(sections[name].argument)} where {rows} stand in the file"
         reading.mend(found, "those that stand there were read", _COPY_AGAIN, lines=[sections[name].line])
+
+
+def _title(name: str) -> str:
+    """Return a keyword as the standard writes it."""
+    return f"[{name.title().replace(' Of ', ' of ')}]"
 
 
 def _count(section: _Section, title: str, reading: Reading) -> int:

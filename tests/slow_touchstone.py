@@ -169,7 +169,7 @@ def parse_2(lines: list[str]):
     option, name, inside, bare_argument = None, "", False, False
     for line in lines:
         match = re.match(r"\[([^\]]*)\](.*)", line)
-        key = " ".join(re.split("[ \t]+", match[1].lower())) if match else ""
+        key = match[1].lower() if match else ""
         if inside:
             inside = key != "end information"
             continue

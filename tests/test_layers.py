@@ -52,6 +52,7 @@ LAYERS = [
     "compression",
     "uncertainty",
     "limiting",
+    "drive_doubts",
     "drive_table",
     "rivals",
     "onset_belief",

@@ -57,6 +57,24 @@ CASES = {
         ("S11", "S21"),
         "S12 is zero in every row and S22 is a copy of S11",
     ),
+    "S12 at -200 dB": (
+        (MATCH_1, GAIN, ZERO + 1e-10, ZERO + 0.3),
+        ("S11", "S21"),
+        "S12 and S22 are one number in every row",
+    ),
+    "S12 at -200 dB, S22 zero": (
+        (MATCH_1, GAIN, ZERO + 1e-10, ZERO),
+        ("S11", "S21"),
+        "S22 is zero in every row and S12 is one number in every row",
+    ),
+    "S12 zero, S22 one": (
+        (MATCH_1, GAIN, ZERO, ZERO + 1),
+        ("S11", "S21"),
+        "S12 is zero in every row and S22 is one number in every row",
+    ),
+    "both one": ((MATCH_1, GAIN, ZERO + 1, ZERO + 1), ("S11", "S21"), "S12 and S22 are one number in every row"),
+    "both of one number that a device may have": ((MATCH_1, GAIN, ZERO + 0.01, ZERO + 0.3), PARAMETERS, None),
+    "S12 of -110 dB": ((MATCH_1, GAIN, ZERO + 3e-6, ZERO + 0.3), PARAMETERS, None),
     "S22 copied": ((MATCH_1, GAIN, LOSSY, MATCH_1), ("S11", "S21", "S12"), "S22 is a copy of S11"),
 }
 

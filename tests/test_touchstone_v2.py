@@ -179,6 +179,16 @@ def test_a_file_that_breaks_off_says_where_and_how_much_is_missing():
     ]
 
 
+@pytest.mark.parametrize("keyword", ["[Number of  Ports]", "[ Number of Ports]", "[Number\tof Ports ]"])
+def test_odd_blanks_in_a_keyword_are_mended(keyword):
+    text = BASE.replace("[Number of Ports]", keyword)
+    sweep = parse(text)
+    assert_array_equal(sweep.s, S)
+    assert [(finding.code, finding.severity) for finding in sweep.findings] == [("file-mended", "note")]
+    with pytest.raises(SweepFileError, match=r"^x\.s2p:3: odd blanks in the keyword .*; write '\[Number of Ports\]'"):
+        parse(text, strict=True)
+
+
 def test_triangles_need_no_data_order():
     text = BASE.replace("[Two-Port Data Order] 21_12\n", "[Matrix Format] Lower\n").replace(" 0.05 0.06", "")
     sweep = parse(text.replace(" 0.06 0.07", ""))
