@@ -58,9 +58,9 @@ def measured_parameters(
     absent = zero | fixed | missing
     same_transfer = "S21" not in absent and np.array_equal(s12, s21)
     same_match = len(s11) > 1 and "S11" not in absent and np.array_equal(s22, s11)
-    if absent == zero == {"S11", "S22"} and same_transfer:
-        zero, absent, same_match = set(), set(), True
     gain = same_transfer and bool((np.abs(s21) > _GAIN).any())
+    if absent == zero == {"S11", "S22"} and same_transfer and not gain and not _shows_noise(s21):
+        zero, absent, same_match = set(), set(), True
     noisy = same_transfer and same_match and (_shows_noise(s11) or _shows_noise(s21))
     copied = {"S12"} if gain or noisy or (same_transfer and "S22" in absent) else set()
     if same_match and (not same_transfer or copied):

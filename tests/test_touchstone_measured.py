@@ -31,6 +31,7 @@ def read(s11, s21, s12, s22, digits=None) -> Sweep:
 
 LOSSY = 0.6 * RESONANCE
 GAIN = 40 * RESONANCE
+NOISE = noise(1e-3)
 
 CASES = {
     "all four": ((MATCH_1, GAIN, 0.01 * RESONANCE, MATCH_2), PARAMETERS, None),
@@ -75,6 +76,16 @@ CASES = {
     "both one": ((MATCH_1, GAIN, ZERO + 1, ZERO + 1), ("S11", "S21"), "S12 and S22 are one number in every row"),
     "both of one number that a device may have": ((MATCH_1, GAIN, ZERO + 0.01, ZERO + 0.3), PARAMETERS, None),
     "S12 of -110 dB": ((MATCH_1, GAIN, ZERO + 3e-6, ZERO + 0.3), PARAMETERS, None),
+    "matched line with gain": (
+        (ZERO, GAIN, GAIN, ZERO),
+        ("S21",),
+        "S11 and S22 are zero in every row and S12 is a copy of S21",
+    ),
+    "matched line with noise": (
+        (ZERO, LOSSY + NOISE, LOSSY + NOISE, ZERO),
+        ("S21",),
+        "S11 and S22 are zero in every row and S12 is a copy of S21",
+    ),
     "S22 copied": ((MATCH_1, GAIN, LOSSY, MATCH_1), ("S11", "S21", "S12"), "S22 is a copy of S11"),
 }
 

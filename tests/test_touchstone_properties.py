@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from hypothesis import given, settings
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 from numpy.testing import assert_array_equal
 
@@ -48,6 +48,7 @@ def test_reading_what_was_written_gives_every_measured_number_to_the_bit(sweep):
 
 @quick
 @given(sweeps(st.sampled_from([0.0, 0.5, 2.0])))
+@example(Sweep("matched, with gain", np.array([0.0]), np.array([[[0.0], [2.0]], [[2.0], [0.0]]])))
 def test_writing_and_reading_a_second_time_changes_nothing(sweep):
     once = read_back(sweep)
     twice = read_back(once)
