@@ -16,6 +16,7 @@ from typing import Final, Literal, TypeAlias
 import numpy as np
 from scipy.special import gammaincc
 
+from benchtool.digits import level_text
 from benchtool.drive_results import PadEstimate
 from benchtool.drive_table import DriveTable
 from benchtool.model import Finding, FloatArray
@@ -49,6 +50,8 @@ _DOUBTED_PAD_DB: Final = 6.0
 """Standard uncertainty of a pad that may be another pad altogether."""
 _UNSPOILED_DB: Final = 0.2
 """A sweep that may have lost less than this in the receiver can still bear on the device."""
+_MORE_PAD_DB: Final = 1.0
+_SAME_DRIVE_DB: Final = 0.5
 _UNSTEADY_DB: Final = 1.0
 """Standard uncertainty of each sweep of a device that does not repeat."""
 _CODE: Final[Mapping[Cause, CauseCode]] = {
@@ -60,7 +63,7 @@ _CODE: Final[Mapping[Cause, CauseCode]] = {
     "not-repeating": "reference-not-repeating",
 }
 _WORDS: Final[Mapping[Cause, str]] = {
-    "clean": "nothing wrong",
+    "clean": "nothing is wrong",
     "output-limited": "the device limits at its output",
     "input-limited": "the device limits at its input",
     "receiver-overload": "the receiver at port 2 compresses",
@@ -216,10 +219,14 @@ def _evidence(table: DriveTable) -> _Evidence:
     )
 
 
+def _lower(drop_db: float) -> str:
+    return f"{abs(drop_db):.2f} dB {'lower' if drop_db >= 0.0 else 'higher'}"
+
+
 def _shown(seen: _Evidence) -> str:
     return (
-        f"{seen.high} reads {seen.drop_db:+.2f} dB below {seen.low} at {seen.at_mhz:.4g} MHz and "
-        f"{seen.least_db:+.2f} dB at {seen.least_at_mhz:.4g} MHz"
+        f"{seen.high} reads {_lower(seen.drop_db)} than {seen.low} at {seen.at_mhz:.4g} MHz and "
+        f"{_lower(seen.least_db)} at {seen.least_at_mhz:.4g} MHz"
     )
 
 
@@ -233,7 +240,7 @@ def _value(verdict: CauseVerdict, cause: Cause) -> str:
     if rival.value is None or rival.u is None:
         return "not known"
     reached = rival.value - (0.0 if cause == "input-limited" else 1.0)
-    return f"{reached:.1f} dBm ± {1.96 * rival.u:.1f} dB"
+    return f"{level_text(round(reached, 1))} ± {1.96 * rival.u:.1f} dB"
 
 
 def _output_limited(table: DriveTable, verdict: CauseVerdict) -> Finding:
@@ -242,7 +249,8 @@ def _output_limited(table: DriveTable, verdict: CauseVerdict) -> Finding:
     return Finding(
         "output-limited",
         "caution",
-        f"the device limits at its output ({_sure(verdict)}): {_shown(seen)}, as the level at its output has it{where}",
+        f"the device limits at its output ({_sure(verdict)}): {_shown(seen)}, and the drop follows the level at its "
+        f"output{where}",
         "take figures from a sweep below the safe drive; gain and bandwidth at higher drives are not the device's",
         seen.high,
     )
@@ -254,8 +262,8 @@ def _input_limited(table: DriveTable, verdict: CauseVerdict) -> Finding:
     return Finding(
         "input-limited",
         "caution",
-        f"the device limits ahead of its selectivity ({_sure(verdict)}): {_shown(seen)}, alike over the sweep and "
-        f"by the drive{where}",
+        f"the device limits ahead of its selectivity ({_sure(verdict)}): {_shown(seen)}, alike over the sweep, and "
+        f"the drop follows the drive{where}",
         "take figures from a sweep below the safe drive",
         seen.high,
     )
@@ -267,10 +275,26 @@ def _receiver(table: DriveTable, verdict: CauseVerdict) -> Finding:
     return Finding(
         "receiver-overload",
         "caution",
-        f"the analyzer's receiver compresses ({_sure(verdict)}): {_shown(seen)}, as the level at port 2 has it{where}",
-        "sweep again with 10 dB more output pad, calibrated or entered in the sheet; more input pad would only hide it",
+        f"the analyzer's receiver compresses ({_sure(verdict)}): {_shown(seen)}, and the drop follows the level at "
+        f"port 2{where}",
+        _receiver_advice(table, verdict, table.files.index(seen.high)),
         seen.high,
     )
+
+
+def _receiver_advice(table: DriveTable, verdict: CauseVerdict, worst: int) -> str:
+    """Return which sweep with more output pad to trust instead of the worst, or what to sweep where there is none."""
+    more_db = table.output_loss_db - table.output_loss_db[worst]
+    padded = [k for k in range(table.sweeps) if more_db[k] > _MORE_PAD_DB]
+    lost = _receiver_drop(table, verdict)
+    sound = [k for k in padded if lost[k] < _UNSPOILED_DB]
+    if sound:
+        drive = np.mean(table.drive_dbm, axis=1)
+        best = min(sound, key=lambda k: abs(float(drive[k] - drive[worst])))
+        alike = "at the same drive" if abs(drive[best] - drive[worst]) < _SAME_DRIVE_DB else "at another drive"
+        return f"trust {table.files[best]}, swept with {more_db[best]:.0f} dB more output pad {alike}"
+    than = f" than {table.files[max(padded, key=lambda k: more_db[k])]} had" if padded else ""
+    return f"sweep again with 10 dB more output pad{than} and enter it in the sheet; more input pad would only hide it"
 
 
 def _pad_text(pad: PadEstimate) -> str:
@@ -286,7 +310,7 @@ def _pad_value(table: DriveTable, verdict: CauseVerdict) -> Finding:
         "caution",
         f"a pad is not what the sheet says ({_sure(verdict)}): {_shown(_evidence(table))}, alike over the "
         f"sweep; {which}",
-        "measure the pad by itself and enter its value or its file in the sheet",
+        f"measure pad {' and pad '.join(pad.name for pad in likely)} as a .s2p file and enter it in the sheet",
     )
 
 
@@ -322,7 +346,8 @@ def _not_repeating(table: DriveTable, verdict: CauseVerdict) -> Finding:
         "reference-not-repeating",
         "caution",
         f"sweeps do not repeat ({_sure(verdict)}): {why}" + (f"; {odd} stands apart most" if odd else ""),
-        "let the bench warm up, tighten connectors, look for oscillation, then take the reference twice",
+        "let the bench warm up, tighten connectors, look for oscillation, then sweep the line of "
+        f"{odd or table.files[0]} again, twice in a row",
         odd,
     )
 
@@ -332,24 +357,34 @@ def _noise(table: DriveTable, verdict: CauseVerdict) -> Finding:
     return Finding(
         "noise-limited",
         "caution",
-        f"{table.files[worst]}: {table.buried[worst]:.0%} of its span stands less than 10 dB above its noise, and "
-        f"nothing else is needed to explain how it differs (probability {verdict.confidence:.2f})",
+        f"{table.files[worst]}: {table.buried[worst]:.0%} of its span stands less than 10 dB above its noise; where "
+        f"its signal is clear it agrees with the other sweeps (probability {verdict.confidence:.2f})",
         "narrow the measuring bandwidth, average, or take pads out where the levels allow",
         table.files[worst],
     )
 
 
 def _unclear(table: DriveTable, verdict: CauseVerdict) -> Finding:
-    if verdict.confidence == 0.0:
-        why = "no single cause explains it: two may be at work at once, or the device was changed between sweeps"
-    else:
-        left = sorted(verdict.probabilities.items(), key=lambda item: -item[1])
-        why = "possible: " + ", ".join(f"{_WORDS[cause]} ({p:.2f})" for cause, p in left if p >= _STILL_POSSIBLE)
     return Finding(
         "cause-unclear",
         "caution",
-        f"{_shown(_evidence(table))}; {why}",
+        f"{_shown(_evidence(table))}; {_rivals_left(verdict)}",
         "`benchtool next` names the sweeps that would settle it",
+    )
+
+
+def _rivals_left(verdict: CauseVerdict) -> str:
+    """Return the causes that are left with their probabilities, or why even the best of them is not believed."""
+    left = sorted(verdict.probabilities.items(), key=lambda item: -item[1])
+    if verdict.confidence > 0.0:
+        return "possible: " + ", ".join(f"{_WORDS[cause]} ({p:.2f})" for cause, p in left if p >= _STILL_POSSIBLE)
+    cause, p = left[0]
+    best = next(rival for rival in verdict.rivals if rival.cause == cause)
+    misfit = f"(χ² {best.chi2:.0f} over {best.freedom} readings)"
+    leads = f"that {_WORDS[cause]} is by far the likeliest ({p:.2f}), but " if p > _NAMED else ""
+    return (
+        f"{leads}no single cause explains the sweeps to within their doubts {misfit}: two may be at work at once, or "
+        "the device changed between sweeps"
     )
 
 

@@ -19,10 +19,12 @@ from benchtool.drive_table import DriveTable
 from benchtool.pads import PadBank
 from benchtool.sheet import BenchSheet, SweepEntry
 
-__all__ = ["STEP_UP_DB", "Line", "port2_limit_dbm", "possible_lines"]
+__all__ = ["IN_EFFECT_DB", "STEP_UP_DB", "Line", "in_effect_taken", "port2_limit_dbm", "possible_lines"]
 
 STEP_UP_DB: Final = 10.0
 """How far past the highest drive so far a device may be driven to find where it compresses."""
+IN_EFFECT_DB: Final = 0.5
+"""Lines whose total pads differ by no more than this, on either side, are one line in effect."""
 _MOST_ADDED: Final = 2
 """Pads added to a side; more joints would cost more than they settle."""
 _BELOW_DAMAGE_DB: Final = 10.0
@@ -84,6 +86,21 @@ def possible_lines(
             if too_high or drive > highest_drive + (STEP_UP_DB if table.levels_known else 0.0):
                 continue
             yield Line(pads_in, pads_out, drive, drive + gain, port2, doubt)
+
+
+def in_effect_taken(line: Line, entries: Sequence[SweepEntry], bank: PadBank, at_hz: float) -> bool:
+    """Return whether a sweep has been taken with the total pads of a line on both sides, and with the same source."""
+
+    def loss_db(pads: Sequence[str]) -> float:
+        return sum(bank.loss_db(pad, at_hz) for pad in pads)
+
+    source = entries[0].source_at(at_hz)
+    return any(
+        abs(loss_db(entry.input_pads) - loss_db(line.input_pads)) <= IN_EFFECT_DB
+        and abs(loss_db(entry.output_pads) - loss_db(line.output_pads)) <= IN_EFFECT_DB
+        and entry.source_at(at_hz) == source
+        for entry in entries
+    )
 
 
 def _half_width(pad: str, bank: PadBank) -> float:

@@ -7,7 +7,7 @@ rivals times how far apart they say it will read, in units of its doubt (one les
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import combinations
 from typing import Final
 
@@ -15,13 +15,14 @@ import numpy as np
 
 from benchtool.causes import CauseVerdict
 from benchtool.compression_study import CompressionStudy
+from benchtool.digits import level_text
 from benchtool.doubts import pad_doubt_db
-from benchtool.drive_results import NextSweep, Onset
+from benchtool.drive_results import Estimate, NextSweep, Onset
 from benchtool.drive_table import DriveTable
 from benchtool.limiting import Law
-from benchtool.model import Finding
+from benchtool.model import Finding, Severity
 from benchtool.onset import SAFE_DROP_DB
-from benchtool.pad_stock import STEP_UP_DB, Line, port2_limit_dbm, possible_lines
+from benchtool.pad_stock import IN_EFFECT_DB, STEP_UP_DB, Line, in_effect_taken, port2_limit_dbm, possible_lines
 from benchtool.pads import PadBank, change_of_line
 from benchtool.propagation import rectangular_u
 from benchtool.rivals import Rival
@@ -33,11 +34,16 @@ _MOST: Final = 3
 _NEW_DRIVE_DB: Final = 1.5
 """A drive that is no further from one already swept shows nothing new."""
 _STILL_POSSIBLE: Final = 0.02
+_SURE: Final = 0.95
+"""Probability of a cause from which no sweep is spent on telling it from its rivals."""
+_MATTERS_DB: Final = 0.2
+"""A reference that cannot read lower than this by compression needs no caution."""
 _WORTH: Final = 0.02
 _WIDE_DB: Final = 2.0
 _PROOF_STEP_DB: Final = 10.0
 _RELIEF_DB: Final = 10.0
 """How much less level at port 2 puts it out of the receiver's reach."""
+_RELIEVED_DB: Final = 3.0
 _LIFT_DB: Final = 10.0
 _READABLE_DB: Final = 30.0
 _GUESS: Final = Law("rapp", 2.0)
@@ -80,9 +86,12 @@ def plan_next(
     ordered = tuple(by_name[file] for file in study.table.files)
     found = tuple(possible_lines(sheet, bank, ordered, study.table))
     bench = _Bench(sheet, bank, study, ordered, signal_to_noise_db, found)
+    if (again := _repeat(bench)) is not None:
+        # Nothing else is worth a sweep until the bench repeats.
+        return (again,)
     planned: list[NextSweep] = []
     lines: set[tuple[tuple[str, ...], tuple[str, ...]]] = set()
-    for propose in (_repeat, _lift_signal, _relieve_receiver, _separate, _prove_reference, _bracket):
+    for propose in (_measure_pad, _lift_signal, _relieve_receiver, _separate, _prove_reference, _bracket):
         proposal = propose(bench)
         if proposal is None or (proposal.input_pads, proposal.output_pads) in lines:
             continue
@@ -121,7 +130,11 @@ def _best(lines: Sequence[Line], cost: Callable[[Line], float]) -> Line | None:
 
 
 def _taken(bench: _Bench, line: Line) -> bool:
-    return any((entry.input_pads, entry.output_pads) == (line.input_pads, line.output_pads) for entry in bench.entries)
+    return in_effect_taken(line, bench.entries, bench.bank, bench.table.at_hz)
+
+
+def _loss_db(bench: _Bench, pads: Sequence[str]) -> float:
+    return sum(bench.bank.loss_db(pad, bench.table.at_hz) for pad in pads)
 
 
 def _repeat(bench: _Bench) -> NextSweep | None:
@@ -138,6 +151,26 @@ def _repeat(bench: _Bench) -> NextSweep | None:
         bench,
         same[0],
         f"{reference} again, twice in a row: whether the device has settled, or still drifts or oscillates",
+    )
+
+
+def _measure_pad(bench: _Bench) -> NextSweep | None:
+    """Propose to measure a pad that is surely not what the sheet says: by itself, in the place of the device."""
+    verdict, cal = bench.study.verdict, bench.sheet.calibration
+    if verdict is None or verdict.code != "pad-value-suspect" or verdict.confidence < _SURE or not verdict.pads:
+        return None
+    pad = verdict.pads[0].name
+    if pad in (*cal.input_pads, *cal.output_pads):
+        return None
+    drive = (bench.entries[0].source_at(bench.table.at_hz) or 0.0) - _loss_db(bench, cal.input_pads)
+    output, doubt = drive - _loss_db(bench, [pad]), bench.table.source_half_width_db
+    line = Line(cal.input_pads, cal.output_pads, drive, output, output - _loss_db(bench, cal.output_pads), doubt)
+    if (limit := port2_limit_dbm(bench.sheet)) is not None and line.port2 + doubt > limit:
+        return None
+    return _as_proposal(
+        bench,
+        line,
+        f"what {pad} truly loses: measure pad {pad} as a .s2p file, in the device's place, and enter it in the sheet",
     )
 
 
@@ -170,11 +203,16 @@ def _relieve_receiver(bench: _Bench) -> NextSweep | None:
     if verdict is None or verdict.probabilities["receiver-overload"] < 0.1:
         return None
     level = np.max(table.drive_dbm + table.gain_db, axis=1) - table.output_loss_db
-    strongest = bench.entries[int(np.argmax(level))]
+    worst = int(np.argmax(level))
+    drives = np.mean(table.drive_dbm, axis=1)
+    relieved = (np.abs(drives - drives[worst]) <= IN_EFFECT_DB) & (level <= level[worst] - _RELIEVED_DB)
+    if verdict.code == "receiver-overload" and verdict.confidence >= _SURE and np.any(relieved):
+        return None
+    strongest = bench.entries[worst]
     lines = [
         line
         for line in bench.candidates
-        if line.input_pads == strongest.input_pads and line.port2 <= float(np.max(level)) - 3.0
+        if line.input_pads == strongest.input_pads and line.port2 <= float(np.max(level)) - _RELIEVED_DB
     ]
     best = _best(
         [line for line in lines if not _taken(bench, line)],
@@ -195,6 +233,8 @@ def _separate(bench: _Bench) -> NextSweep | None:
     verdict = bench.study.verdict
     if verdict is None or verdict.code not in ("input-limited-or-pad", "cause-unclear", "pad-value-suspect"):
         return None
+    if verdict.confidence >= _SURE:
+        return None
     likely = [rival for rival in verdict.rivals if rival.probability >= _STILL_POSSIBLE]
     if verdict.code == "pad-value-suspect":
         likely = likely[:1] + [rival for rival in verdict.rivals if rival.cause == "clean"]
@@ -209,7 +249,7 @@ def _separate(bench: _Bench) -> NextSweep | None:
 
 def _named(rival: Rival) -> str:
     return {
-        "clean": "nothing wrong",
+        "clean": "nothing is wrong",
         "output-limited": "device limits at its output",
         "input-limited": "device limits at its input",
         "receiver-overload": "receiver compresses",
@@ -218,13 +258,18 @@ def _named(rival: Rival) -> str:
     }[rival.cause]
 
 
-def _worth(bench: _Bench, line: Line, likely: Sequence[Rival]) -> float:
-    """Return how much a sweep would separate the rivals: probability of each pair times how far it parts them."""
+def _added(bench: _Bench, line: Line) -> dict[str, int]:
+    """Return the pads that a line adds (1) to those of the calibration, or takes away (-1)."""
     cal = bench.sheet.calibration
-    weights = {
+    return {
         **change_of_line(line.input_pads, cal.input_pads).weights(),
         **change_of_line(line.output_pads, cal.output_pads).weights(),
     }
+
+
+def _worth(bench: _Bench, line: Line, likely: Sequence[Rival]) -> float:
+    """Return how much a sweep would separate the rivals: probability of each pair times how far it parts them."""
+    weights = _added(bench, line)
     variance = 2.0 * float(np.mean(np.diag(bench.table.design_covariance_db2)))
     for pad in weights:
         width, is_limit = pad_doubt_db(pad, bench.bank)
@@ -233,9 +278,18 @@ def _worth(bench: _Bench, line: Line, likely: Sequence[Rival]) -> float:
     worth = 0.0
     for a, b in combinations(likely, 2):
         apart = _foretold(bench, line, a) - _foretold(bench, line, b)
+        doubt = variance + _foretold_u(bench, line, a) ** 2 + _foretold_u(bench, line, b) ** 2
         share = max(a.probability, floor) * max(b.probability, floor)
-        worth += share * (1.0 - float(np.exp(-(apart**2) / (8.0 * variance))))
+        worth += share * (1.0 - float(np.exp(-(apart**2) / (8.0 * doubt))))
     return worth
+
+
+def _foretold_u(bench: _Bench, line: Line, rival: Rival) -> float:
+    """Return the standard uncertainty of a foretold gain for the 1 dB point, or the pad, not being known better, dB."""
+    if rival.value is None or rival.u is None:
+        return 0.0
+    ends = [_foretold(bench, line, replace(rival, value=rival.value + sign * rival.u)) for sign in (-1.0, 1.0)]
+    return abs(ends[1] - ends[0]) / 2.0
 
 
 def _foretold(bench: _Bench, line: Line, rival: Rival) -> float:
@@ -250,20 +304,14 @@ def _foretold(bench: _Bench, line: Line, rival: Rival) -> float:
         return float(np.mean(read[kept]))
     if rival.cause == "pad-value":
         pad = next(pad for pad in table.pads if pad.name == rival.about)
-        cal = bench.sheet.calibration
-        changed = {
-            **change_of_line(line.input_pads, cal.input_pads).weights(),
-            **change_of_line(line.output_pads, cal.output_pads).weights(),
-        }
-        return float(np.mean(read - pad.reads * value)) - changed.get(pad.name, 0) * value
-    # The lowest drive stands for the gain; the drop there is taken as foretold too.
-    if rival.cause == "input-limited":
-        past = np.array([drive[0], line.drive]) - value
-    else:
-        lost = np.array([table.output_loss_db[0], line.output - line.port2]) * (rival.cause == "receiver-overload")
-        past = np.array([drive[0], line.drive]) + read[0] - lost - value
+        return float(np.mean(read - pad.reads * value)) - _added(bench, line).get(pad.name, 0) * value
+    # The sweep whose level is nearest stands for the gain there, so that only the step from it follows the guessed law.
+    lost = np.append(table.output_loss_db, line.output - line.port2) * (rival.cause == "receiver-overload")
+    lift = 0.0 if rival.cause == "input-limited" else read[0]
+    past = np.append(drive, line.drive) + lift - lost - value
+    nearest = int(np.argmin(np.abs(past[:-1] - past[-1])))
     drop = _GUESS.drop_past_p1db(past)
-    return float(read[0] + drop[0] - drop[1])
+    return float(read[nearest] + drop[nearest] - drop[-1])
 
 
 def _reference_drive(bench: _Bench) -> float:
@@ -306,11 +354,14 @@ def _bracket(bench: _Bench) -> NextSweep | None:
     if p1db.bound is None and p1db.low is not None and p1db.high is not None:
         if p1db.high - p1db.low <= _WIDE_DB + 2.0 * bench.table.source_half_width_db:
             return None
-        aim, what = p1db.value, f"the 1 dB point, now {p1db.low:.1f} to {p1db.high:.1f} dBm, far more closely"
+        aim, what = (
+            p1db.value,
+            f"the 1 dB point, now {level_text(p1db.low)} to {level_text(p1db.high)}, far more closely",
+        )
     elif p1db.bound == "at least":
-        aim, what = float(np.max(drives)) + STEP_UP_DB, f"where it compresses: so far at least {p1db.value:.1f} dBm"
+        aim, what = float(np.max(drives)) + STEP_UP_DB, f"where it compresses: so far at least {level_text(p1db.value)}"
     else:
-        aim, what = float(np.min(drives)) - STEP_UP_DB, f"where it compresses: so far at most {p1db.value:.1f} dBm"
+        aim, what = float(np.min(drives)) - STEP_UP_DB, f"where it compresses: so far at most {level_text(p1db.value)}"
     lines = [
         line
         for line in bench.candidates
@@ -325,22 +376,25 @@ def reference_finding(onset: Onset, verdict: CauseVerdict | None, planned: Seque
     proof, low = onset.reference, onset.reference.reads_low_db
     if proof.proven:
         return Finding(
-            "drive-proven",
-            "note",
-            f"{proof.file} is small-signal: its gain reads low by no more than {low.high:.2f} dB",
-            "nothing to do",
-            proof.file,
+            "drive-proven", "note", f"{proof.file} is small-signal: {_reads_low(low)}", "nothing to do", proof.file
         )
     how = "sweep again with 10 dB more input pad; if the gain agrees, it stands"
     lower = [sweep for sweep in planned if "small-signal" in sweep.settles]
     if lower:
-        drive = f" ({lower[0].drive_dbm:.1f} dBm drive)" if lower[0].drive_dbm is not None else ""
+        drive = f" ({level_text(lower[0].drive_dbm)} drive)" if lower[0].drive_dbm is not None else ""
         pads = ", ".join(lower[0].input_pads) or "no pad"
         how = f"sweep again with {pads} at the input{drive}; if the gain agrees, it stands"
-    if low.high is None:
-        said = "nothing shows that it is not compressed: there is no second drive to compare it with"
-    else:
-        said = f"its gain may read low by {low.value:.2f} dB ({low.low:.2f} to {low.high:.2f} dB)"
     if verdict is not None and verdict.code == "noise-limited":
         how = f"noise outweighs the compression looked for: average first; then {how}"
-    return Finding("drive-unproven", "caution", f"{proof.file}: {said}", how, proof.file)
+    if verdict is not None and verdict.code == "reference-not-repeating":
+        how = f"sweep {proof.file} again, its line unchanged, until two sweeps agree; then {how}"
+    severity: Severity = "note" if low.high is not None and low.high < _MATTERS_DB else "caution"
+    return Finding("drive-unproven", severity, f"{proof.file}: {_reads_low(low)}", how, proof.file)
+
+
+def _reads_low(low: Estimate) -> str:
+    if low.high is None:
+        return "nothing shows that it is not compressed: there is no second drive to compare it with"
+    if low.low is None or low.high <= SAFE_DROP_DB:
+        return f"its gain reads low by no more than {low.high:.2f} dB"
+    return f"its gain may read low by {low.low:.2f} to {low.high:.2f} dB"

@@ -1,6 +1,7 @@
 """Causes of a gain change told apart, and the onset of compression, on benches whose truth is known."""
 
 import importlib.util
+import re
 import sys
 from dataclasses import replace
 from pathlib import Path
@@ -11,7 +12,7 @@ from numpy.testing import assert_allclose
 
 from benchtool.causes import cause_finding, find_cause
 from benchtool.compression_study import onset_figures, study_compression
-from benchtool.drive_table import DriveTable, PadDoubt
+from benchtool.drive_table import DriveTable, PadDoubt, drive_table
 from benchtool.limiting import Law
 from benchtool.onset import estimate_onset
 from benchtool.onset_belief import Allowances, log_likelihood
@@ -164,6 +165,129 @@ def test_two_causes_at_once_are_not_given_one_name():
     drop = limited(DRIVES, 5.0, Law("rapp", 2.0), "output")
     verdict = find_cause(table(DRIVES, drop, offsets=[3.0, 3.0, 0.0, 0.0], pads=LADDER, limit=20.0))
     assert verdict.code == "cause-unclear"
+
+
+def test_two_causes_name_the_one_that_leads_and_its_misfit():
+    drop = limited(DRIVES, 5.0, Law("rapp", 2.0), "output")
+    seen = table(DRIVES, drop, offsets=[3.0, 3.0, 0.0, 0.0], pads=LADDER, limit=20.0)
+    verdict = find_cause(seen)
+    leads, p = max(verdict.probabilities.items(), key=lambda item: item[1])
+    said = cause_finding(seen, verdict).message
+    assert leads == "output-limited" and p > 0.9
+    best = next(rival for rival in verdict.rivals if rival.cause == leads)
+    assert f"that the device limits at its output is by far the likeliest ({p:.2f}), but no single cause" in said
+    assert f"χ² {best.chi2:.0f} over 45 readings" in said
+
+
+def test_changes_are_said_in_words():
+    lower = table(DRIVES, limited(DRIVES, 5.0, Law("rapp", 2.0), "output"), pads=LADDER, limit=20.0)
+    said = cause_finding(lower, find_cause(lower)).message
+    assert "s3.s2p reads 5.98 dB lower than s0.s2p at 21.4 MHz and" in said and "dB lower at" in said
+    assert "the drop follows the level at its output" in said
+    higher = table(DRIVES, offsets=[-2.0, -2.0, 0.0, 0.0], pads=LADDER)
+    said = cause_finding(higher, find_cause(higher)).message
+    assert "reads 2.00 dB higher than s0.s2p" in said
+    flat = table(DRIVES, limited(DRIVES, -28.0, Law("rapp", 1.2), "input"), pads=LADDER)
+    said = cause_finding(flat, find_cause(flat)).message
+    assert "1 dB point near −2" in said and not re.search(r"-\d", said)  # a real minus sign
+
+
+def overloaded(drives, out):
+    level = np.array(drives)[:, None] + SHAPE_DB - np.array(out)[:, None]
+    pads = (
+        pad("a20", 20.0, [-float(d < -30.0) for d in drives], [-float(d < -30.0) for d in drives]),
+        pad("d10", 10.0, [-float(o > 10.0) for o in out], [0.0] * len(drives)),
+    )
+    drop = Law("rapp", 2.0).drop_past_p1db(level)
+    return table(drives, drop, output_pads=out, pads=pads, limit=-1.0)
+
+
+def test_overloaded_receiver_names_the_sweep_to_trust():
+    seen = overloaded((-38.0, -28.0, -18.0, -18.0), (10.0, 10.0, 10.0, 20.0))
+    finding = cause_finding(seen, find_cause(seen))
+    assert finding.sweep == "s2.s2p"
+    assert finding.advice == "trust s3.s2p, swept with 10 dB more output pad at the same drive"
+
+
+def test_overloaded_receiver_asks_for_pad_where_none_was_tried():
+    seen = overloaded((-38.0, -28.0, -18.0, -18.0), (10.0, 10.0, 10.0, 20.0)).only([0, 1, 2])
+    told = replace(find_cause(overloaded((-38.0, -28.0, -18.0, -18.0), (10.0, 10.0, 10.0, 20.0))), code=None)
+    finding = cause_finding(seen, replace(told, code="receiver-overload"))
+    assert finding.advice.startswith("sweep again with 10 dB more output pad and enter it")
+
+
+def measured_bench(seed, cause="clean"):
+    bench = load("bench_compression")
+    made = bench.make_bench(seed, cause)
+    measured, bank = bench.measure(made)
+    return made, drive_table(measured, made.entries, made.sheet, bank, made.design_hz)
+
+
+def test_mismatch_cancels_between_sweeps_of_one_line_and_is_no_noise_of_nodes():
+    met = set()
+    for seed in range(40):
+        made, seen = measured_bench(seed)
+        assert seen.mismatch
+        by_name = {entry.name: entry for entry in made.entries}
+        lines = [by_name[file] for file in seen.files]
+        for form in seen.mismatch:
+            c = form.covariance
+            assert np.all(np.linalg.eigvalsh(c) > -1e-12)
+            for a, b in zip(*np.triu_indices(seen.sweeps, 1), strict=True):
+                same = (lines[a].input_pads == lines[b].input_pads, lines[a].output_pads == lines[b].output_pads)
+                met.add(same)
+                left = c[a, a] + c[b, b] - 2.0 * c[a, b]
+                if all(same):
+                    assert_allclose(left, 0.0, rtol=0, atol=1e-12)  # dB²
+                elif not any(same):
+                    assert_allclose(left, c[a, a] + c[b, b], rtol=1e-9, atol=0)
+        # Node noise is what the receiver adds, and ripple of 0.02 dB; mismatch of some 0.2 dB is not in it.
+        assert np.min(seen.noise_db) < 0.03
+        if len(met) == 4:
+            return
+    assert {(True, True), (False, True), (True, False)} <= met
+
+
+def follow_the_output_tank(seen):
+    """What mismatch a tuned port of unknown size may give: patterns that are not flat and not nothing at the design."""
+    return [form for form in seen.mismatch if np.ptp(form.pattern) > 0.02 and form.at_design != 0.0]
+
+
+def test_resonant_mismatch_of_the_output_is_as_large_as_assumed_and_cancels_where_output_pads_are_alike():
+    u = 20.0 / np.log(10.0) / np.sqrt(2.0) * 10.0 ** (-30.5 / 20.0) * 10.0 ** (-3.0 / 20.0)  # dB: port and output
+    alike = different = 0
+    for seed in range(40):
+        made, seen = measured_bench(seed)
+        if not any(entry.input_pads == ("b10",) for entry in made.entries):
+            continue  # without an unpadded sweep the input is not known either
+        by_name = {entry.name: entry for entry in made.entries}
+        padded = np.array([len(by_name[file].output_pads) > 1 for file in seen.files])
+        forms = follow_the_output_tank(seen)
+        assert forms
+        for form in forms:
+            own = np.diag(form.covariance)
+            assert_allclose(own[~padded], u**2, rtol=1e-6, atol=0)  # dB²
+            if np.any(padded):
+                different += 1
+                assert np.min(own[padded]) > 1.5 * u**2  # d10 reflects more than the port behind 10 dB
+                assert_allclose(form.between[np.ix_(padded, padded)], np.max(own) + u**2, rtol=1e-6, atol=0)
+            else:
+                alike += 1
+                assert_allclose(form.between, 0.0, rtol=0, atol=1e-12)
+    assert alike >= 3 and different >= 3
+
+
+def test_resonant_patterns_have_the_size_of_a_tank_of_one_circuit_or_of_two():
+    # |1/(1 + jx)|² is the selectivity in power of one circuit, and its root where two share the selectivity: the mean.
+    for seed in range(12):
+        made, seen = measured_bench(seed)
+        sweep = next(sweep for sweep in made.sweeps if sweep.name == seen.files[0])
+        entry = next(entry for entry in made.entries if entry.name == seen.files[0])
+        added = sum(made.sheet.pads[name].loss_db for name in (*entry.input_pads[1:], *entry.output_pads[1:]))
+        peak_db = 20.0 * np.log10(np.max(np.abs(sweep.s21))) + added
+        level = 10.0 ** ((seen.gain_db[0] - peak_db) / 10.0)
+        found = sum(form.pattern**2 for form in follow_the_output_tank(seen))
+        assert_allclose(found, 0.5 * (level + np.sqrt(level)), rtol=0, atol=0.01)
 
 
 def test_one_sweep_says_nothing():

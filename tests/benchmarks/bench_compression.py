@@ -3,9 +3,9 @@
 Run ``python tests/benchmarks/bench_compression.py [BENCHES] [SEED] [-v]``. Each bench has one cause at work: clean,
 device limiting at its output or at its input, a pad 0.5 to 3 dB off, receiver overload, noise, or a device that changes
 between sweeps. Limiting is by Rapp (p 0.7 to 5), tanh or cubic, with and without phase change; there are 2 to 6 sweeps
-at 2 to 5 drives, pads within ±0.3 dB, readings good to 0.05 dB, joints of 28 dB pads, an output limit that changes
-over the sweep by 0.3 dB (rms) and in half of the benches pulls the tuning by 0.3 % of the band (rms) for each dB of
-drop (where that would not give the receiver away), and noise.
+at 2 to 5 drives, pads within ±0.3 dB, readings good to 0.05 dB, 28 dB pads at device ports that reflect up to 0.8 and
+change through the resonance, an output limit that changes over the sweep by 0.3 dB (rms) and in half of the benches
+pulls the tuning by 0.3 % of the band (rms) for each dB of drop (where that would not give the receiver away); noise.
 
 Which benches can be told, by argument and not by the tool
 ----------------------------------------------------------
@@ -65,13 +65,19 @@ RIGHT = {
 UNNAMED = {"clean", "noise-limited", "input-limited-or-pad", "cause-unclear"}
 
 
-def study(bench: Bench) -> CompressionStudy:
-    """Return what the tool says of a bench."""
+def measure(bench: Bench) -> tuple[list[MeasuredSweep], PadBank]:
+    """Return the sweeps at the device's ports, in the order of the bench, and its pads."""
     bank = PadBank.of(bench.sheet)
     measured = []
     for entry, sweep in zip(bench.entries, bench.sweeps, strict=True):
         result = correct_sweep(bench.sheet, entry, sweep, bank, bench.design_hz)
         measured.append(MeasuredSweep(result, plan_figures(result.sweep, "amplifier", bench.design_hz, None, ())))
+    return measured, bank
+
+
+def study(bench: Bench) -> CompressionStudy:
+    """Return what the tool says of a bench."""
+    measured, bank = measure(bench)
     lowest = min(measured, key=lambda sweep: sweep.drive_dbm or 0.0)
     found = study_compression(measured, bench.entries, bench.sheet, bank, bench.design_hz, lowest.file)
     assert found is not None

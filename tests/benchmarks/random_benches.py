@@ -1,7 +1,9 @@
 """A seed in; a random bench session whose one cause is known out: sheet, sweeps as the analyzer would read them, truth.
 
 The maker shares nothing with the tool but the sheet and the sweep: laws of limiting are written out again here, and
-pads, readings, mismatch and noise are drawn as a bench draws them.
+pads, readings and noise are drawn as a bench draws them. Mismatch is not drawn but follows: every pad has two faces
+that reflect, the device's ports reflect up to 0.8 and change through their tank's resonance, and the line is cascaded
+whole, so that sweeps through the same pads have the same mismatch.
 """
 
 from __future__ import annotations
@@ -20,6 +22,10 @@ READING_DB = 0.05
 SOURCE_DBM, SOURCE_HALF_DB = -8.0, 0.5
 LOSSES = {"b10": 10.0, "c10": 10.0, "a3": 3.0, "a6": 6.0, "a10": 10.0, "a20": 20.0, "d10": 10.0}
 TOLERANCE_DB = 0.3
+PAD_REFLECTION, PORT_REFLECTION = 0.04, 0.03
+"""28 dB of the sheet's pads, 30.5 dB of its ports."""
+INPUT_REFLECTION, OUTPUT_REFLECTION = (0.05, 0.8), (0.2, 0.8)
+"""Reach of the device's own reflections, on and off resonance each (common practice, no source)."""
 LADDERS = (
     [("a20",), ()],
     [("a10",), ()],
@@ -51,6 +57,41 @@ def fundamental_drop_db(excess_db, law, p):
 def excess_for(drop_db, law, p):
     """Return the level over the 1 dB point at which gain has dropped by `drop_db`."""
     return brentq(lambda e: float(fundamental_drop_db(np.array([e]), law, p)[0]) - drop_db, -70.0, 60.0)
+
+
+def phasor(rng, f, most_delay_s=0.0):
+    """Return a vector of unit length whose phase nobody knows, turning along a line of some length."""
+    return np.exp(2j * np.pi * (rng.uniform() - f * rng.uniform(0, most_delay_s)))
+
+
+class Line:
+    """What stands either side of the device, drawn once for a bench, and the device's own reflections."""
+
+    def __init__(self, rng, f, loss, tank):
+        self.f = f
+        self.pads = {}
+        for name, loss_db in loss.items():
+            faces = [PAD_REFLECTION * phasor(rng, f, 1e-9) for _ in range(2)]
+            self.pads[name] = (faces, 10 ** (-loss_db / 20) * np.exp(-2j * np.pi * f * 95e-12))
+        self.source, self.load = (PORT_REFLECTION * phasor(rng, f, 2e-9) for _ in range(2))
+        self.s11, self.s22 = (self._port(rng, reach, tank) for reach in (INPUT_REFLECTION, OUTPUT_REFLECTION))
+
+    def _port(self, rng, reach, tank):
+        off, on = (rng.uniform(*reach) * phasor(rng, self.f) for _ in range(2))
+        return off + (on - off) * tank
+
+    def measure(self, s21, pads_in, pads_out):
+        """Return S11 and S21 as read at the calibration planes, pads from the analyzer outwards, nothing else wrong."""
+        s11, s22 = self.s11, self.s22
+        for name in reversed(pads_in):
+            (near, far), through = self.pads[name]
+            round_trip = 1 - far * s11
+            s11, s21 = near + through**2 * s11 / round_trip, s21 * through / round_trip
+        for name in reversed(pads_out):
+            (near, far), through = self.pads[name]
+            round_trip = 1 - s22 * far
+            s22, s21 = near + through**2 * s22 / round_trip, s21 * through / round_trip
+        return s11 / (1 - self.source * s11), s21 / ((1 - self.source * s11) * (1 - self.load * s22))
 
 
 @dataclass
@@ -101,7 +142,10 @@ def make_bench(seed: int, cause: str | None = None) -> Bench:
     peak = f0 + rng.uniform(-0.1, 0.1) * band
     gain_db = rng.uniform(15, 38)
     sections = int(rng.integers(1, 3))
-    reflection = rng.uniform(0.05, 0.3) * np.exp(2j * np.pi * rng.uniform())
+
+    def tank():
+        q = peak / (band / np.sqrt(2 ** (1 / sections) - 1))
+        return 1 / (1 + 1j * q * (f / peak - peak / f))
 
     def response(shift_hz=0.0):
         q = peak / (band / np.sqrt(2 ** (1 / sections) - 1))
@@ -118,6 +162,7 @@ def make_bench(seed: int, cause: str | None = None) -> Bench:
         loss[wrong] = LOSSES[wrong] + rng.choice([-1, 1]) * rng.uniform(0.5, 3.0)
     drive = np.array([source - loss["b10"] - sum(loss[pad] for pad in pads) for pads, _ in ladder])
     out_db = np.array([loss["c10"] + sum(loss[pad] for pad in out) for _, out in ladder])
+    line = Line(np.random.default_rng([seed, 405]), f, loss, tank())
     device = response()
     level = 20 * np.log10(np.abs(device))
     strongest = int(np.argmax(drive - out_db))
@@ -169,17 +214,14 @@ def make_bench(seed: int, cause: str | None = None) -> Bench:
             drop = drop + fundamental_drop_db(drive[k] + own_db - drop - out_db[k] - receiver_p1db, law, p)
         s21 = own * 10 ** (-drop / 20) * np.exp(1j * np.radians(turn * drop))
         drops.append(drop - own_db + level)
-        added = sum(loss[pad] for pad in (*pads, *out))
-        joints = 1.0 + 0j
-        for size in (0.03 * 0.04, 0.04 * abs(reflection), 0.03 * 0.04, 0.04 * 0.3):
-            joints = joints * (1 + size * np.exp(2j * np.pi * (rng.uniform() + f * rng.uniform(0, 2e-9))))
+        s11, through = line.measure(s21, pads, out)
         reading = 10 ** (rng.normal(0, READING_DB) / 20) * np.exp(1j * rng.normal(0, READING_DB / 8.686))
-        raw = s21 * 10 ** (-added / 20) * joints * reading
+        raw = through * reading
         true.append(20 * np.log10(np.abs(s21)) + sum(LOSSES[pad] - loss[pad] for pad in (*pads, *out)))
         noise = 10 ** (floor_db / 20) * (rng.normal(size=f.size) + 1j * rng.normal(size=f.size)) / np.sqrt(2)
         trace = 1 + 3e-4 * (rng.normal(size=f.size) + 1j * rng.normal(size=f.size))
         s = np.zeros((2, 2, f.size), complex)
-        s[0, 0] = reflection * 10 ** (-2 * sum(LOSSES[pad] for pad in pads) / 20)
+        s[0, 0] = s11
         s[1, 0] = raw * trace + noise
         name = f"sweep{k}.s2p"
         entries.append(
