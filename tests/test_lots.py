@@ -414,14 +414,19 @@ def gone(group):
 def test_an_interrupt_stops_the_workers_and_leaves_whole_files_only(tmp_path):
     lot = tmp_path / "lot"
     make_lot(lot, 30)
-    process = subprocess.Popen(
-        command("report", lot, "--jobs", "2"),
-        stdout=subprocess.PIPE,
-        stderr=subprocess.PIPE,
-        text=True,
-        env=environment(),
-        start_new_session=True,
-    )
+    # A shell starts what it puts in the background deaf to interrupts, and a command would inherit that.
+    before = signal.signal(signal.SIGINT, signal.default_int_handler)
+    try:
+        process = subprocess.Popen(
+            command("report", lot, "--jobs", "2"),
+            stdout=subprocess.PIPE,
+            stderr=subprocess.PIPE,
+            text=True,
+            env=environment(),
+            start_new_session=True,
+        )
+    finally:
+        signal.signal(signal.SIGINT, before)
     end = time.monotonic() + 60
     while not list(lot.glob("*/report/results.json")) and time.monotonic() < end:
         time.sleep(0.02)
