@@ -19,7 +19,7 @@ from typing import Final, Literal, TypeAlias
 
 import numpy as np
 
-from benchtool.model import FloatArray
+from benchtool.model import FloatArray, readonly
 
 __all__ = [
     "HARDEST_P",
@@ -28,6 +28,7 @@ __all__ = [
     "Law",
     "cubic_drop_db",
     "cubic_level_db",
+    "rapp_drop_and_slope",
     "rapp_drop_db",
     "rapp_level_db",
     "tanh_drop_db",
@@ -43,6 +44,10 @@ _ANGLES: Final = 64
 _CUBIC_TOP_DB: Final = 10.0 * float(np.log10(1.0 / 3.0))
 _CUBIC_TOP_DROP_DB: Final = -20.0 * float(np.log10(2.0 / 3.0))
 _HALVINGS: Final = 60
+_TABLE_REACH_DB: Final = 60.0
+_TABLE_STEPS: Final = 50
+"""Reach either way, and entries for each dB, of the table of the tanh law: a cubic between entries is right to 1e-9 dB.
+Below the reach the drop is less than 1e-6 dB, above it the device is saturated."""
 
 LawName: TypeAlias = Literal["rapp", "tanh", "cubic"]
 
@@ -51,6 +56,19 @@ def rapp_drop_db(level_db: FloatArray, p: float) -> FloatArray:
     """Return the drop of gain in dB by Rapp's law at levels in dB over Vs/g, any shape."""
     scale = p * np.log(10.0) / 10.0
     return np.asarray(np.logaddexp(0.0, scale * np.asarray(level_db)) / scale)
+
+
+def rapp_drop_and_slope(excess_db: FloatArray, p: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Return drop in dB and its derivative by level, by Rapp's law, at levels in dB over the 1 dB compression point.
+
+    `p` must broadcast against the levels.
+    """
+    scale = p * (np.log(10.0) / 10.0)
+    level = scale * excess_db + np.log(np.expm1(scale))
+    fallen = np.exp(-np.abs(level))
+    rest = 1.0 / (1.0 + fallen)
+    drop = (np.maximum(level, 0.0) + np.log1p(fallen)) / scale
+    return drop, np.where(level > 0.0, rest, 1.0 - rest)
 
 
 def rapp_level_db(drop_db: FloatArray | float, p: float) -> FloatArray:
@@ -67,6 +85,29 @@ def tanh_drop_db(level_db: FloatArray) -> FloatArray:
     # Mean of cos²θ over the same angles is exactly one half, so the ratio is one for a vanishing level.
     fundamental = 2.0 * np.mean(np.tanh(peak[..., None] * cosine) * cosine, axis=-1)
     return np.asarray(-20.0 * np.log10(fundamental / peak))
+
+
+@cache
+def _tanh_table() -> FloatArray:
+    """Return the cubic between neighbouring entries, (4, n): coefficients of powers of the way."""
+    steps = round(2 * _TABLE_REACH_DB * _TABLE_STEPS)
+    drop = tanh_drop_db(np.linspace(-_TABLE_REACH_DB, _TABLE_REACH_DB, steps + 1))
+    rise, slope = np.diff(drop), np.gradient(drop)
+    cubic = [drop[:-1], slope[:-1], 3.0 * rise - 2.0 * slope[:-1] - slope[1:], slope[:-1] + slope[1:] - 2.0 * rise]
+    table: FloatArray = readonly(np.array(cubic), np.float64)
+    return table
+
+
+def _tanh_from_table(level_db: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Return drop in dB and its derivative by the tanh law; beyond the table the drop rises as the level does."""
+    table = _tanh_table()
+    inside = np.clip(level_db, -_TABLE_REACH_DB, _TABLE_REACH_DB)
+    place = (inside + _TABLE_REACH_DB) * _TABLE_STEPS
+    index = np.minimum(place.astype(np.intp), table.shape[1] - 1)
+    way = place - index
+    a, b, c, d = table[:, index]
+    drop = a + way * (b + way * (c + way * d)) + np.maximum(level_db - _TABLE_REACH_DB, 0.0)
+    return np.asarray(drop), np.asarray((b + way * (2.0 * c + 3.0 * way * d)) * _TABLE_STEPS)
 
 
 def tanh_level_db(drop_db: FloatArray | float) -> FloatArray:
@@ -119,7 +160,20 @@ class Law:
 
     def drop_past_p1db(self, excess_db: FloatArray) -> FloatArray:
         """Return the drop of gain in dB at levels in dB over the law's 1 dB compression point."""
-        return self.drop_db(np.asarray(excess_db) + _at_one_db(self))
+        level = np.asarray(excess_db) + _at_one_db(self)
+        return _tanh_from_table(level)[0] if self.name == "tanh" else self.drop_db(level)
+
+    def drop_and_slope_past_p1db(self, excess_db: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Return that drop and its derivative by level, dB/dB."""
+        excess = np.asarray(excess_db)
+        if self.name == "rapp":
+            assert self.p is not None
+            return rapp_drop_and_slope(excess, np.asarray(self.p))
+        level = excess + _at_one_db(self)
+        if self.name == "tanh":
+            return _tanh_from_table(level)
+        share = 10.0 ** (np.minimum(level, _CUBIC_TOP_DB) / 10.0)
+        return cubic_drop_db(level), 2.0 * share / (1.0 - share)
 
     def excess_over_p1db(self, drop_db: FloatArray | float) -> FloatArray:
         """Return the level in dB over the 1 dB compression point at which gain has dropped by `drop_db`."""

@@ -10,23 +10,23 @@ the flat doubts b (reading, mismatch, pads within tolerance and shared by sweeps
 * pad-value: D = 0, one pad off by a normal offset far beyond its tolerance;
 * not-repeating: D = 0, one sweep (or every one) off by a normal offset, with or without a shift in tuning.
 
-Rivals are compared by their marginal likelihood (evidence), in which a model with more freedom pays for it: D. J. C.
-MacKay, "Bayesian interpolation", Neural Computation 4(3), 1992, 415-447. The integral over b is exact, that over g_j is
-taken at its best value, those over the law are sums on a grid that closes in on the likely part.
+Rivals are compared by their marginal likelihood (:mod:`benchtool.evidence`), in which a model with more freedom pays
+for it. The integral over b is exact, that over g_j is taken at its best value, those over the law are sums on a grid
+that closes in on the likely part; a law that cannot catch up with the best any more is not looked at more closely.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
 from typing import Final, Literal, TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import block_diag
 
 from benchtool.drive_table import DriveTable
-from benchtool.limiting import HARDEST_P, SOFTEST_P, Law
+from benchtool.evidence import NormalEquations, normal_equations, prior_precision
+from benchtool.limiting import HARDEST_P, SOFTEST_P, Law, rapp_drop_and_slope
 from benchtool.model import FloatArray
 
 __all__ = ["Cause", "Rival", "rivals"]
@@ -69,10 +69,12 @@ _RESTLESS_TUNING: Final = 1.0
 _TUNING: Final = 3.0
 """Standard deviation of a shift in tuning, in hundredths of the span of the nodes."""
 _LEAST_U_DB: Final = 0.005
-_STEPS, _PASSES, _NEWTON_STEPS = 31, 3, 6
+_GRIDS: Final = ((31, 7), (21, 7), (31, 9))
+"""Places of the 1 dB point, and values of Rapp's p, that each look takes in."""
+_NEWTON_STEPS: Final = 6
 _MATTERS: Final = 12.0
-
-Drop: TypeAlias = Callable[[FloatArray], FloatArray]
+_HOPELESS: Final = 30.0
+"""Logarithm of how much less likely than the best a law may be and still be looked at more closely."""
 
 
 @dataclass(frozen=True)
@@ -105,35 +107,14 @@ class _Weighed:
     chi2: float
 
 
-@dataclass(frozen=True, eq=False)
-class _Extra:
-    """A freedom beyond the doubts: what it adds to each node, (k, j), for each unit, and its standard deviation."""
-
-    pattern: FloatArray
-    u: float
-    pad: str = ""
-    """The pad whose tolerance this freedom replaces."""
-
-
-@dataclass(frozen=True, eq=False)
-class _Evidence:
-    """Log evidence (G,), misfit (G,), and the extras' means and standard uncertainties, (G, extras)."""
-
-    log: FloatArray
-    chi2: FloatArray
-    mean: FloatArray
-    u: FloatArray
-
-
 def rivals(table: DriveTable) -> tuple[Rival, ...]:
     """Return every explanation of the table, most likely first; probabilities sum to one."""
+    lawless = _Lawless(table)
     weighed = [
-        _without_law(table, "clean", "", []),
-        _limiting(table, "output-limited"),
-        _limiting(table, "input-limited"),
-        _limiting(table, "receiver-overload"),
-        *_pad_values(table),
-        *_not_repeating(table),
+        lawless.weigh("clean", "", []),
+        *_limiting(table),
+        *_pad_values(table, lawless),
+        *_not_repeating(table, lawless),
     ]
     total = np.logaddexp.reduce([each.log_weight for each in weighed])
     freedom = (table.sweeps - 1) * table.frequency_hz.size
@@ -143,7 +124,7 @@ def rivals(table: DriveTable) -> tuple[Rival, ...]:
     return tuple(sorted(found, key=lambda rival: -rival.probability))
 
 
-def _flat_covariance(table: DriveTable, but_for: str) -> FloatArray:
+def _flat_covariance(table: DriveTable, but_for: str = "") -> FloatArray:
     covariance = np.diag(table.reading_u_db**2 + _LEAST_U_DB**2)
     for pad in table.pads:
         if pad.name == but_for:
@@ -153,130 +134,101 @@ def _flat_covariance(table: DriveTable, but_for: str) -> FloatArray:
     return np.asarray(covariance)
 
 
-def _weigh(
-    table: DriveTable,
-    left: FloatArray,
-    slope: FloatArray,
-    drop: FloatArray,
-    extras: Sequence[_Extra] = (),
-    detunes: bool = False,
-) -> _Evidence:
-    """Return the evidence of what is `left` (G, k, j) after a drop, whose readings move by `slope` with g_j."""
-    weight = 1.0 / (table.noise_db**2 + (_LAW_ROUGHNESS * drop) ** 2)
-    moves = weight * slope
-    per_node = np.sum(moves * slope, axis=1)
-    basis, prior = _freedoms(table, drop, extras, detunes)
-
-    def project(columns: FloatArray) -> FloatArray:
-        """Return columns (G, k, j, m) weighted, with what g_j can take up taken out."""
-        own = np.einsum("gkj,gkjm->gjm", moves, columns) / per_node[..., None]
-        return np.asarray(weight[..., None] * columns - moves[..., None] * own[:, None])
-
-    seen = project(basis)
-    shape = (left.shape[0], -1, basis.shape[-1])
-    flat, columns, rest = seen.reshape(shape), basis.reshape(shape), left.reshape(left.shape[0], -1, 1)
-    curvature = np.swapaxes(columns, 1, 2) @ flat + prior
-    pull = (np.swapaxes(flat, 1, 2) @ rest)[..., 0]
-    spread = np.linalg.inv(curvature)
-    mean = np.einsum("gmn,gn->gm", spread, pull)
-    chi2 = np.sum(left * project(left[..., None])[..., 0], axis=(1, 2)) - np.sum(pull * mean, axis=1)
-    # The part of the normalisation that g_j takes is left at its value without a law: a saturated device, whose
-    # readings say nothing of g_j, must not be the more likely for it.
-    normal = 0.5 * np.sum(np.log(weight), axis=(1, 2)) - 0.5 * np.sum(np.log(np.sum(weight, axis=1)), axis=1)
-    occam = 0.5 * (np.linalg.slogdet(prior)[1] - np.linalg.slogdet(curvature)[1])
-    variance = np.diagonal(spread, axis1=1, axis2=2)
-    first = basis.shape[-1] - len(extras)
-    return _Evidence(normal + occam - 0.5 * chi2, chi2, mean[:, first:], np.sqrt(variance[:, first:]))
-
-
-def _freedoms(
-    table: DriveTable, drop: FloatArray, extras: Sequence[_Extra], detunes: bool
-) -> tuple[FloatArray, FloatArray]:
-    """Return what the priors leave free, (G, k, j, m), and its precision, (m, m).
-
-    First the flat doubts of each sweep, then the forms that mismatch may give it, then how far the law may be out in
-    each and, if it `detunes`, how far limiting tunes the device off, then the extras.
-    """
-    trials, k, nodes = drop.shape
-    each = np.eye(k)[:, None, :]
-    flat = np.broadcast_to(each, (trials, k, nodes, k))
-    parts: list[FloatArray] = [flat]
-    replaced = next((extra.pad for extra in extras if extra.pad), "")
-    known = [np.linalg.inv(_flat_covariance(table, replaced))]
+def _doubts(table: DriveTable) -> tuple[FloatArray, list[FloatArray]]:
+    """Return what flat doubts and mismatch add to the nodes of a sweep, (c, j), and their covariances (k, k)."""
+    patterns, covariances = [np.ones(table.frequency_hz.size)], [_flat_covariance(table)]
     for form in table.mismatch:
         # What equal lines have in common goes with the gain of the device, which is free.
         if np.max(np.abs(form.between)) > _LEAST_U_DB**2:
-            parts.append(np.broadcast_to(form.pattern[:, None] * each, (trials, k, nodes, k)))
-            known.append(np.linalg.inv(form.between + _LEAST_U_DB**2 * np.eye(k)))
-    widths: list[float] = []
-    if np.any(drop):
-        parts.append(drop[..., None] * each)
-        widths += [_LAW_DOUBT] * k
-    if detunes:
-        parts.append(np.max(drop, axis=2)[..., None, None] * table.slope_db[:, None] * each)
-        widths += [_DETUNING] * k
-    parts += [np.broadcast_to(extra.pattern[..., None], (trials, k, nodes, 1)) for extra in extras]
-    basis = np.concatenate(parts, axis=-1)
-    free = np.array([*widths, *(extra.u for extra in extras)])
-    return basis, block_diag(*known, np.diag(free**-2.0)) if free.size else block_diag(*known)
+            patterns.append(form.pattern)
+            covariances.append(form.between + _LEAST_U_DB**2 * np.eye(table.sweeps))
+    return np.array(patterns), covariances
 
 
-def _without_law(table: DriveTable, cause: Cause, about: str, extras: Sequence[_Extra], share: float = 1.0) -> _Weighed:
-    gain = table.gain_db[None]
-    weight = 1.0 / table.noise_db**2
-    left = gain - np.sum(weight * gain, axis=1, keepdims=True) / np.sum(weight, axis=0)
-    evidence = _weigh(table, left, np.ones_like(gain), np.zeros_like(gain), extras)
-    value, u = (float(evidence.mean[0, 0]), float(evidence.u[0, 0])) if extras else (None, None)
-    log_weight = float(evidence.log[0]) + float(np.log(_PRIOR[cause] * share))
-    return _Weighed(cause, about, log_weight, value, u, float(evidence.chi2[0]))
+@dataclass(frozen=True, eq=False)
+class _Extra:
+    """A freedom beyond the doubts: how far it reaches into each sweep, (k,), along which pattern, and its spread."""
+
+    reach: FloatArray
+    along: Literal["flat", "slope", "bend"]
+    u: float
+    pad: str = ""
+    """The pad whose tolerance this freedom replaces."""
 
 
-def _offset(
-    table: DriveTable, cause: Cause, about: str, flat: _Extra, others: tuple[_Extra, ...], share: float
-) -> _Weighed:
-    """Return the rival in which something is off by a small or, less likely, a large offset."""
-    parts = [
-        _without_law(table, cause, about, [replace(flat, u=spread), *others], share * of_them)
-        for spread, of_them in _OFFSETS_DB
-    ]
-    return _merge(cause, about, parts)
+class _Lawless:
+    """Explanations in which no gain drops: their normal equations are made once, and each takes its own freedoms."""
+
+    def __init__(self, table: DriveTable) -> None:
+        self.table = table
+        patterns, self.covariances = _doubts(table)
+        columns = np.concatenate([patterns, [table.slope_db, table.bend_db]])
+        self._place = {"flat": 0, "slope": len(patterns), "bend": len(patterns) + 1}
+        gain, weight = table.gain_db[None], 1.0 / table.noise_db[None] ** 2
+        left = gain - np.sum(weight * gain, axis=1, keepdims=True) / np.sum(weight, axis=1, keepdims=True)
+        every = np.broadcast_to(columns, (1, table.sweeps, *columns.shape))
+        self._equations = normal_equations(weight, np.ones_like(gain), left, every)
+        self._freedoms = np.eye(table.sweeps * len(columns)).reshape(table.sweeps, len(columns), -1)
+
+    def weigh(self, cause: Cause, about: str, extras: Sequence[_Extra], share: float = 1.0) -> _Weighed:
+        """Return one explanation; the first of its extras is what it estimates."""
+        doubts = len(self.covariances)
+        size = self.table.sweeps * doubts
+        # Within a sweep its doubts stand side by side, as the prior has them.
+        parts = [self._freedoms[:, :doubts].reshape(size, -1).T]
+        parts += [(extra.reach @ self._freedoms[:, self._place[extra.along]])[:, None] for extra in extras]
+        equations = self._equations.combined(np.concatenate(parts, axis=1))
+        replaced = next((extra.pad for extra in extras if extra.pad), "")
+        covariances = [_flat_covariance(self.table, replaced), *self.covariances[1:]]
+        prior = np.diag(np.concatenate([np.zeros(size), [extra.u**-2.0 for extra in extras]]))
+        prior[:size, :size] = prior_precision(covariances)
+        log, chi2 = equations.log_evidence(prior)
+        value, u = equations.freedom(size, prior) if extras else (None, None)
+        return _Weighed(cause, about, float(log[0]) + float(np.log(_PRIOR[cause] * share)), value, u, float(chi2[0]))
+
+    def offset(
+        self, cause: Cause, about: str, reach: FloatArray, share: float, others: tuple[_Extra, ...] = (), pad: str = ""
+    ) -> _Weighed:
+        """Return the rival in which something is off by a small or, less likely, a large offset."""
+        parts = [
+            self.weigh(cause, about, [_Extra(reach, "flat", spread, pad), *others], share * of_them)
+            for spread, of_them in _OFFSETS_DB
+        ]
+        return _merge(cause, about, parts)
 
 
-def _pad_values(table: DriveTable) -> Iterator[_Weighed]:
+def _pad_values(table: DriveTable, lawless: _Lawless) -> Iterator[_Weighed]:
     """Yield one rival for each pad that the sweeps could show to be off."""
     visible = [pad for pad in table.pads if np.ptp(pad.reads) > 0.0]
     for pad in visible:
-        pattern = np.repeat(pad.reads[:, None], table.frequency_hz.size, axis=1)
-        yield _offset(table, "pad-value", pad.name, _Extra(pattern, 1.0, pad.name), (), 1.0 / len(visible))
+        yield lawless.offset("pad-value", pad.name, pad.reads, 1.0 / len(visible), pad=pad.name)
 
 
-def _not_repeating(table: DriveTable) -> Iterator[_Weighed]:
+def _not_repeating(table: DriveTable, lawless: _Lawless) -> Iterator[_Weighed]:
     """Yield the ways in which a device may have changed between sweeps: one sweep off, tuned off, or all restless."""
-    k, slope = table.sweeps, table.slope_db
-    each = [np.outer(np.eye(k)[i], np.ones(slope.size)) for i in range(k)]
-    tuned = [np.outer(np.eye(k)[i], slope) for i in range(k)]
-    for i, file in enumerate(table.files):
-        flat, shift = _Extra(each[i], 1.0), _Extra(tuned[i], _TUNING)
-        yield _offset(table, "not-repeating", file, flat, (), 0.4 / k)
-        yield _offset(table, "not-repeating", file, flat, (shift,), 0.3 / k)
-    widened = [np.outer(np.eye(k)[i], table.bend_db) for i in range(k)]
-    restless = [_Extra(pattern, _RESTLESS_DB) for pattern in each]
-    restless += [_Extra(pattern, _RESTLESS_TUNING) for pattern in (*tuned, *widened)]
-    yield _without_law(table, "not-repeating", "", restless, 0.3)
+    each = np.eye(table.sweeps)
+    for alone, file in zip(each, table.files, strict=True):
+        yield lawless.offset("not-repeating", file, alone, 0.4 / table.sweeps)
+        shift = _Extra(alone, "slope", _TUNING)
+        yield lawless.offset("not-repeating", file, alone, 0.3 / table.sweeps, (shift,))
+    restless = [_Extra(alone, "flat", _RESTLESS_DB) for alone in each]
+    restless += [_Extra(alone, "slope", _RESTLESS_TUNING) for alone in each]
+    restless += [_Extra(alone, "bend", _RESTLESS_TUNING) for alone in each]
+    yield lawless.weigh("not-repeating", "", restless, 0.3)
 
 
-def _limiting(table: DriveTable, cause: Cause) -> _Weighed:
-    """Return the rival in which gain drops with the level at the output, at the input, or at port 2."""
+def _limiting(table: DriveTable) -> list[_Weighed]:
+    """Return the rivals in which gain drops with the level at the output, at the input, and at port 2."""
+    causes: tuple[Cause, ...] = ("output-limited", "input-limited", "receiver-overload")
     laws = ((Law("tanh"), 0.1), (Law("cubic"), 0.1), (None, 0.8))
-    if cause != "output-limited":
-        return _merge(cause, "", [_over_law(table, cause, law, share) for law, share in laws])
-    # A tuned output that limits may also be pulled in tune; that is one of two ways, not a freedom for all.
-    ways = ((False, 1.0 - _DETUNES_SHARE), (True, _DETUNES_SHARE))
-    return _merge(
-        cause,
-        "",
-        [_over_law(table, cause, law, share * way, detunes) for law, share in laws for detunes, way in ways],
-    )
+    every = [_LawSearch(table, cause, law, share) for cause in causes for law, share in laws]
+    live = every
+    for places, shapes in _GRIDS:
+        for search in live:
+            search.look(places, shapes)
+        top = max(search.log_best for search in live)
+        live = [search for search in live if search.log_best + search.between > top - _HOPELESS]
+    return [_merge(cause, "", [way for s in every if s.cause == cause for way in s.ways]) for cause in causes]
 
 
 def _merge(cause: Cause, about: str, parts: Sequence[_Weighed]) -> _Weighed:
@@ -307,76 +259,127 @@ def _log_level_prior(table: DriveTable, cause: Cause, p1db: FloatArray) -> Float
     return np.asarray(-0.5 * ((p1db - mean) / spread) ** 2 - np.log(spread * np.sqrt(2 * np.pi)))
 
 
-def _over_law(table: DriveTable, cause: Cause, law: Law | None, share: float, detunes: bool = False) -> _Weighed:
-    """Return the evidence over the 1 dB point and, where `law` is None, over Rapp's p, on a grid that closes in."""
-    offset = _level_offset(table, cause)
-    follows = cause != "input-limited"
-    strongest = float(np.max(offset + (table.gain_db if follows else 0.0)))
-    low, high = strongest - _REACH_BELOW_DB, strongest + _REACH_ABOVE_DB
-    soft, hard = np.log(SOFTEST_P), np.log(HARDEST_P)
-    for _ in range(_PASSES):
-        place = np.linspace(low, high, _STEPS)
-        shape = np.linspace(soft, hard, 9) if law is None else np.zeros(1)
-        p1db = np.repeat(place, shape.size)
-        left, slope, drop = _fit_gain(table, offset, p1db, np.tile(shape, place.size), law, follows)
-        evidence = _weigh(table, left, slope, drop, detunes=detunes)
-        log = evidence.log + _log_level_prior(table, cause, p1db)
-        log = np.where(np.max(drop, axis=(1, 2)) >= _LEAST_DROP_DB, log, -np.inf)
-        grid = log.reshape(place.size, shape.size)
-        if not np.any(np.isfinite(grid)):
-            return _Weighed(cause, "", -np.inf, None, None, float("inf"))
-        rows, columns = np.nonzero(grid > np.max(grid) - _MATTERS)
-        low, high = _close_in(place, rows)
-        if law is None:
-            soft, hard = _close_in(shape, columns)
-    cell = place[1] - place[0]
-    if law is None:
-        cell = cell * (shape[1] - shape[0]) / np.log(HARDEST_P / SOFTEST_P)
-    total = float(np.logaddexp.reduce(log[np.isfinite(log)]) + np.log(cell) + np.log(share * _PRIOR[cause]))
-    belief = np.exp(log - np.max(log))
-    belief /= np.sum(belief)
-    value = float(np.sum(belief * p1db))
-    u = float(np.sqrt(np.sum(belief * (p1db - value) ** 2)))
-    return _Weighed(cause, "", total, value, u, float(evidence.chi2[int(np.argmax(log))]))
+class _LawSearch:
+    """The evidence of one cause by one law, summed over the 1 dB point and, where `law` is None, over Rapp's p.
+
+    Each look takes in a grid and closes in on its likely part. `log_best` is the best log weight that it saw,
+    `between` how much better a point between the nodes may be.
+    """
+
+    def __init__(self, table: DriveTable, cause: Cause, law: Law | None, share: float) -> None:
+        self.table, self.cause, self.law = table, cause, law
+        self._offset = _level_offset(table, cause)
+        strongest = float(np.max(self._offset + (0.0 if cause == "input-limited" else table.gain_db)))
+        self._low, self._high = strongest - _REACH_BELOW_DB, strongest + _REACH_ABOVE_DB
+        self._soft, self._hard = float(np.log(SOFTEST_P)), float(np.log(HARDEST_P))
+        patterns, covariances = _doubts(table)
+        law_out = [_LAW_DOUBT**2 * np.eye(table.sweeps)]
+        detuned = [_DETUNING**2 * np.eye(table.sweeps)]
+        self._patterns = patterns
+        # A tuned output that limits may also be pulled in tune; that is one of two ways, not a freedom for all.
+        output = cause == "output-limited"
+        self._priors = [(share * (1.0 - _DETUNES_SHARE if output else 1.0), prior_precision([*covariances, *law_out]))]
+        if output:
+            self._priors.append((share * _DETUNES_SHARE, prior_precision([*covariances, *law_out, *detuned])))
+        self.ways: list[_Weighed] = []
+        self.log_best, self.between = -np.inf, 0.0
+
+    def look(self, places: int, shapes: int) -> None:
+        """Weigh a grid of so many 1 dB points and values of p, and close in."""
+        place = np.linspace(self._low, self._high, places)
+        shape = np.linspace(self._soft, self._hard, shapes if self.law is None else 1)
+        p1db, log_p = np.repeat(place, shape.size), np.tile(shape, place.size)
+        left, slope, drop = _fit_gain(self.table, self._offset, p1db, log_p, self.law, self.cause != "input-limited")
+        cell = float(place[1] - place[0])
+        if self.law is None:
+            cell *= float(shape[1] - shape[0]) / float(np.log(HARDEST_P / SOFTEST_P))
+        seen = np.max(drop, axis=(1, 2)) >= _LEAST_DROP_DB
+        prior = np.where(seen, _log_level_prior(self.table, self.cause, p1db), -np.inf)
+        self.ways, self.log_best, self.between = [], -np.inf, 0.0
+        matters = np.zeros((place.size, shape.size), np.bool_)
+        if not np.any(seen):
+            return
+        every = self._equations(left, slope, drop)
+        for share, precision in self._priors:
+            log, chi2 = every[len(self.ways)].log_evidence(precision)
+            log = log + prior + np.log(share * _PRIOR[self.cause])
+            self.ways.append(_summed(self.cause, log, p1db, chi2, cell))
+            grid = log.reshape(place.size, shape.size)
+            matters |= grid > np.max(grid) - _MATTERS
+            if np.max(log) > self.log_best:
+                self.log_best, self.between = float(np.max(log)), _between(grid)
+        rows, columns = np.nonzero(matters)
+        self._low, self._high = _close_in(place, rows)
+        self._soft, self._hard = _close_in(shape, columns) if self.law is None else (self._soft, self._hard)
+
+    def _equations(self, left: FloatArray, slope: FloatArray, drop: FloatArray) -> list[NormalEquations]:
+        """Return the equations of each way: with the doubts and how far the law may be out, and, detuned, its pull."""
+        copies, sweeps, nodes = drop.shape
+        c = len(self._patterns)
+        columns = np.empty((copies, sweeps, c + len(self._priors), nodes))
+        columns[:, :, :c] = self._patterns
+        columns[:, :, c] = drop
+        if len(self._priors) > 1:
+            columns[:, :, c + 1] = np.max(drop, axis=2)[..., None] * self.table.slope_db
+        weight = 1.0 / (self.table.noise_db**2 + (_LAW_ROUGHNESS * drop) ** 2)
+        whole = normal_equations(weight, slope, left, columns)
+        if len(self._priors) == 1:
+            return [whole]
+        plain = np.arange(sweeps * (c + 2)).reshape(sweeps, c + 2)[:, : c + 1].ravel()
+        return [whole.only(plain), whole]
+
+
+def _summed(cause: Cause, log: FloatArray, p1db: FloatArray, chi2: FloatArray, cell: float) -> _Weighed:
+    """Return the sum of a grid of log weights (G,), with mean and spread of the 1 dB point over it."""
+    best = float(np.max(log))
+    belief = np.exp(log - best)
+    total = float(np.sum(belief))
+    belief /= total
+    value = float(belief @ p1db)
+    u = float(np.sqrt(belief @ (p1db - value) ** 2))
+    return _Weighed(cause, "", best + float(np.log(total * cell)), value, u, float(chi2[int(np.argmax(log))]))
+
+
+def _between(grid: FloatArray) -> float:
+    """Return how far the peak between the nodes may stand above the largest node of a grid of logarithms.
+
+    For a parabola that is an eighth of the second difference at most; the first differences are taken whole.
+    """
+    row, column = np.unravel_index(int(np.argmax(grid)), grid.shape)
+    rise = 0.0
+    for line, at in ((grid[:, column], int(row)), (grid[row], int(column))):
+        steps = [line[at] - line[near] for near in (at - 1, at + 1) if 0 <= near < line.size]
+        rise += max(steps, default=0.0)
+    return float(rise)
 
 
 def _close_in(axis: FloatArray, used: NDArray[np.signedinteger]) -> tuple[float, float]:
     return float(axis[max(int(np.min(used)) - 1, 0)]), float(axis[min(int(np.max(used)) + 1, axis.size - 1)])
 
 
-def _drop_function(law: Law | None, log_p: FloatArray) -> Drop:
-    """Return the drop over the 1 dB point for (G, k, j); Rapp's p differs along the first axis."""
-    if law is not None:
-        return law.drop_past_p1db
-    scale = np.exp(log_p)[:, None, None] * np.log(10.0) / 10.0
-    knee = np.log(np.expm1(scale))
-
-    def drop(excess: FloatArray) -> FloatArray:
-        return np.asarray(np.logaddexp(0.0, scale * excess + knee) / scale)
-
-    return drop
-
-
 def _fit_gain(
     table: DriveTable, offset: FloatArray, p1db: FloatArray, log_p: FloatArray, law: Law | None, follows: bool
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Return what is left of the gain after the drop, its slope with g_j, and the drop, (G, k, j) each."""
-    drop_of, step = _drop_function(law, log_p), 0.01
+    p = np.exp(log_p)[:, None, None]
+
+    def drop_of(excess: FloatArray) -> tuple[FloatArray, FloatArray]:
+        return rapp_drop_and_slope(excess, p) if law is None else law.drop_and_slope_past_p1db(excess)
+
     gain, weight = table.gain_db[None], 1.0 / table.noise_db[None] ** 2
     base = offset[None] - p1db[:, None, None]
     if not follows:
         # The level is the same at every node but for a tilt of the source, and does not depend on g_j.
-        drop = drop_of(base)
-        slope = np.ones_like(drop)
+        drop, _ = drop_of(base)
         raised = gain + drop
         own = np.sum(weight * raised, axis=1, keepdims=True) / np.sum(weight, axis=1, keepdims=True)
-        return raised - own, slope, drop
+        return raised - own, np.ones_like(drop), drop
     own = np.repeat(np.max(gain, axis=1, keepdims=True), p1db.size, axis=0)
     for _ in range(_NEWTON_STEPS):
-        drop = drop_of(base + own)
-        slope = np.clip(1.0 - (drop_of(base + own + step) - drop) / step, 0.05, 1.0)
-        left = gain - own + drop
-        move = np.sum(weight * slope * left, axis=1, keepdims=True) / np.sum(weight * slope**2, axis=1, keepdims=True)
-        own = own + np.clip(move, -5.0, 5.0)
-    drop = drop_of(base + own)
-    return gain - own + drop, slope, drop
+        drop, rate = drop_of(base + own)
+        slope = np.clip(1.0 - rate, 0.05, 1.0)
+        moves = weight * slope
+        move = np.sum(moves * (gain - own + drop), axis=1, keepdims=True)
+        own = own + np.clip(move / np.sum(moves * slope, axis=1, keepdims=True), -5.0, 5.0)
+    drop, rate = drop_of(base + own)
+    return gain - own + drop, np.clip(1.0 - rate, 0.05, 1.0), drop

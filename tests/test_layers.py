@@ -54,6 +54,7 @@ LAYERS = [
     "limiting",
     "drive_doubts",
     "drive_table",
+    "evidence",
     "rivals",
     "onset_belief",
     "causes",

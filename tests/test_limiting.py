@@ -67,6 +67,17 @@ def test_drop_and_level_are_inverse(law):
     assert_allclose(law.excess_over_p1db(1.0), 0.0, rtol=0, atol=1e-9)
 
 
+@pytest.mark.parametrize("law", LAWS)
+def test_fast_drop_and_its_slope_are_those_of_the_closed_form(law):
+    excess = np.linspace(-70.0, 45.0, 1151)
+    step = 1e-3
+    exact = [law.drop_db(law.level_db(1.0) + excess + way * step) for way in (-1, 0, 1)]
+    drop, slope = law.drop_and_slope_past_p1db(excess)
+    assert_allclose(drop, exact[1], rtol=0, atol=2e-6)
+    assert_allclose(law.drop_past_p1db(excess), drop, rtol=0, atol=1e-12)
+    assert_allclose(slope, (exact[2] - exact[0]) / (2 * step), rtol=0, atol=5e-4)
+
+
 def test_shares_of_laws_sum_to_one():
     assert_allclose(sum(law.share for law in LAWS), 1.0, rtol=1e-12, atol=0)
 

@@ -1,0 +1,81 @@
+"""Evidence of linear freedoms against scipy's density of a normal distribution, and what must not matter to it."""
+
+import numpy as np
+import pytest
+from numpy.testing import assert_allclose
+from scipy.linalg import null_space
+from scipy.stats import multivariate_normal
+
+from benchtool.evidence import normal_equations, prior_precision
+
+SWEEPS, NODES, FREEDOMS = 3, 4, 2
+
+
+@pytest.fixture
+def readings():
+    rng = np.random.default_rng(5)
+    weight = 1.0 / rng.uniform(0.05, 0.3, (1, SWEEPS, NODES)) ** 2
+    left = rng.normal(0.0, 0.4, (1, SWEEPS, NODES))
+    columns = rng.normal(0.0, 1.0, (1, SWEEPS, FREEDOMS, NODES))
+    root = rng.normal(0.0, 0.5, (FREEDOMS, SWEEPS, SWEEPS))
+    covariances = [np.asarray(each @ each.T + 0.05 * np.eye(SWEEPS)) for each in root]
+    return weight, left, columns, covariances
+
+
+def design(columns):
+    """The matrix (k·j, k·c) from freedoms to readings, written out in full."""
+    matrix = np.zeros((SWEEPS, NODES, SWEEPS, FREEDOMS))
+    for k in range(SWEEPS):
+        matrix[k, :, k] = columns[0, k].T
+    return matrix.reshape(SWEEPS * NODES, -1)
+
+
+def test_evidence_is_the_density_of_what_the_gains_of_the_nodes_leave(readings):
+    # With a flat prior on the gain of each node the evidence is the density of the contrasts between sweeps, which are
+    # normal; scipy.stats.multivariate_normal is the reference.
+    weight, left, columns, covariances = readings
+    equations = normal_equations(weight, np.ones_like(left), left, columns)
+    found, _ = equations.log_evidence(prior_precision(covariances))
+    matrix, gains = design(columns), np.tile(np.eye(NODES), (SWEEPS, 1))
+    prior = np.linalg.inv(prior_precision(covariances))
+    covariance = np.diag(1.0 / weight.ravel()) + matrix @ prior @ matrix.T
+    contrasts = null_space(gains.T)
+    density = multivariate_normal(cov=contrasts.T @ covariance @ contrasts).logpdf(contrasts.T @ left.ravel())
+    free = (SWEEPS - 1) * NODES
+    expected = density + 0.5 * free * np.log(2 * np.pi) - 0.5 * NODES * np.log(SWEEPS)
+    assert_allclose(found[0], expected, rtol=1e-9, atol=0)
+
+
+def test_misfit_is_that_of_generalised_least_squares(readings):
+    weight, left, columns, covariances = readings
+    slope = np.linspace(0.2, 1.0, left.size).reshape(left.shape)
+    _, chi2 = normal_equations(weight, slope, left, columns).log_evidence(prior_precision(covariances))
+    matrix = design(columns)
+    prior = np.linalg.inv(prior_precision(covariances))
+    inverse = np.linalg.inv(np.diag(1.0 / weight.ravel()) + matrix @ prior @ matrix.T)
+    moves = (np.tile(np.eye(NODES), (SWEEPS, 1)) * slope.reshape(-1, 1)).reshape(SWEEPS * NODES, NODES)
+    best = np.linalg.solve(moves.T @ inverse @ moves, moves.T @ inverse @ left.ravel())
+    rest = left.ravel() - moves @ best
+    assert_allclose(chi2[0], rest @ inverse @ rest, rtol=1e-9, atol=0)
+
+
+def test_a_gain_common_to_all_sweeps_changes_nothing(readings):
+    weight, left, columns, covariances = readings
+    prior = prior_precision(covariances)
+    one = np.ones_like(left)
+    shifted = left + np.array([3.0, -2.0, 0.5, 7.0])
+    before = normal_equations(weight, one, left, columns).log_evidence(prior)
+    after = normal_equations(weight, one, shifted, columns).log_evidence(prior)
+    assert_allclose(after[0], before[0], rtol=1e-7, atol=0)
+
+
+def test_freedoms_combined_are_the_equations_of_the_combined_columns(readings):
+    weight, left, columns, _ = readings
+    one, mixing = np.ones_like(left), np.array([[1.0, 2.0], [-0.5, 1.0]])
+    whole = np.kron(np.eye(SWEEPS), mixing)
+    combined = normal_equations(weight, one, left, columns).combined(whole)
+    direct = normal_equations(weight, one, left, np.swapaxes(np.swapaxes(columns, 2, 3) @ mixing, 2, 3))
+    assert_allclose(combined.gram, direct.gram, rtol=1e-9, atol=1e-9)
+    assert_allclose(combined.pull, direct.pull, rtol=1e-9, atol=1e-9)
+    kept = np.array([0, 3])
+    assert_allclose(direct.only(kept).gram[0], direct.gram[0][np.ix_(kept, kept)], rtol=0, atol=0)
