@@ -191,5 +191,5 @@ def _curve(belief: Belief, drive: FloatArray, confidence: float) -> tuple[FloatA
     along = np.linspace(drive[0] - 3.0, drive[-1] + 5.0, _CURVE_POINTS)
     gain = belief.gain[:: max(1, belief.gain.size // _CURVE_DRAWS)]
     tail = (1.0 - confidence) / 2.0
-    allowed = [np.quantile(gain - drop_at(belief, float(x), _CURVE_DRAWS), [tail, 0.5, 1.0 - tail]) for x in along]
-    return along, np.array(allowed).T
+    allowed = np.quantile(gain - drop_at(belief, along, _CURVE_DRAWS), [tail, 0.5, 1.0 - tail], axis=-1)
+    return along, np.asarray(allowed)

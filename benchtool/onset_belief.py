@@ -99,28 +99,34 @@ def log_likelihood(
     covariance = variance[..., None] * np.eye(k) + table.design_covariance_db2
     if table.pads:
         reads, drives = _split_common(table.pads)
-        bears = reads[:, None, :] - slope * drives[:, None, :]
         u = np.array([allow.doubted_pads.get(pad.name, pad.u_db) for pad in table.pads])
-        covariance = covariance + np.einsum("p,pgi,pgj->gij", u**2, bears, bears)
-    inverse = np.linalg.inv(covariance)
-    weight = inverse.sum(axis=-1)
-    total = weight.sum(axis=-1)
-    raised = gain_db[..., None, :] + drop_db
-    small_signal = np.einsum("gk,...gk->...g", weight, raised) / total
-    left = raised - small_signal[..., None]
-    chi2 = np.einsum("...gi,gij,...gj->...g", left, inverse, left)
-    _, log_det = np.linalg.slogdet(covariance)
+        bears = u[:, None] * (reads - slope[:, None] * drives)
+        covariance = covariance + np.swapaxes(bears, 1, 2) @ bears
+    factor = np.asarray(np.linalg.cholesky(covariance), np.float64)
+    each = _forward(factor, np.ones(k))
+    total = np.sum(each**2, axis=-1)
+    raised = _forward(factor, gain_db[..., None, :] + drop_db)
+    small_signal = np.sum(each * raised, axis=-1) / total
+    chi2 = np.sum((raised - each * small_signal[..., None]) ** 2, axis=-1)
+    log_det = 2.0 * np.sum(np.log(np.diagonal(factor, axis1=1, axis2=2)), axis=-1)
     return -0.5 * (chi2 + log_det + np.log(total)), small_signal, 1.0 / total
+
+
+def _forward(factor: FloatArray, right: FloatArray) -> FloatArray:
+    """Return x of L x = b, (..., G, k), for lower triangular L (G, k, k) and b (..., G, k) or (k,)."""
+    solved = np.empty(np.broadcast_shapes(right.shape, factor.shape[:-1]))
+    for row in range(factor.shape[-1]):
+        rest = right[..., row] - np.sum(factor[:, row, :row] * solved[..., :row], axis=-1)
+        solved[..., row] = rest / factor[:, row, row]
+    return solved
 
 
 def _drops(table: DriveTable, p1db: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Return drop and slope of each sweep for every 1 dB point and law, (points * laws, k), laws running fastest."""
-    step = 0.01
     excess = design_drive(table) - p1db[:, None]
-    drop = np.stack([law.drop_past_p1db(excess) for law in LAWS], axis=1)
-    more = np.stack([law.drop_past_p1db(excess + step) for law in LAWS], axis=1)
+    drop, slope = zip(*(law.drop_and_slope_past_p1db(excess) for law in LAWS), strict=True)
     flat = (-1, table.sweeps)
-    return drop.reshape(flat), ((more - drop) / step).reshape(flat)
+    return np.stack(drop, axis=1).reshape(flat), np.stack(slope, axis=1).reshape(flat)
 
 
 def design_drive(table: DriveTable) -> FloatArray:
@@ -196,13 +202,14 @@ def common_errors(
     return shift, lift
 
 
-def drop_at(belief: Belief, drive_dbm: float, draws: int | None = None) -> FloatArray:
-    """Return draws of the drop of gain at a nominal drive, (draws,)."""
+def drop_at(belief: Belief, drive_dbm: float | FloatArray, draws: int | None = None) -> FloatArray:
+    """Return draws of the drop of gain at one nominal drive or at several, (..., draws)."""
     every = slice(None) if draws is None else slice(None, None, max(1, belief.p1db.size // draws))
     place, index = belief.p1db[every], belief.law[every]
-    drop = np.empty(place.size)
+    drives = np.asarray(drive_dbm)[..., None]
+    drop = np.empty((*drives.shape[:-1], place.size))
     for i, law in enumerate(LAWS):
-        mine = index == i
-        if np.any(mine):
-            drop[mine] = law.drop_past_p1db(drive_dbm - place[mine])
+        mine = np.flatnonzero(index == i)
+        if mine.size:
+            drop[..., mine] = law.drop_past_p1db(drives - place[mine])
     return drop

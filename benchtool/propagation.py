@@ -48,11 +48,14 @@ def coverage_interval(values: FloatArray, confidence: float, *, shortest: bool =
 
     Source: JCGM 101:2008, clauses 7.7.2 and 5.3.3 to 5.3.4.
     """
-    ordered = np.sort(values)
-    count = ordered.size
+    count = values.size
     held = min(max(round(confidence * count), 1), count - 1) if count > 1 else 0
-    widths = ordered[held:] - ordered[: count - held]
-    start = int(np.argmin(widths)) if shortest else (count - held) // 2
+    start = (count - held) // 2
+    if shortest:
+        ordered = np.sort(values)
+        start = int(np.argmin(ordered[held:] - ordered[: count - held]))
+    else:
+        ordered = np.partition(values, (start, min(start + held, count - 1)))
     return float(ordered[start]), float(ordered[min(start + held, count - 1)])
 
 
