@@ -81,8 +81,9 @@ def choose_reference(sweeps: Sequence[MeasuredSweep]) -> tuple[MeasuredSweep, st
 
 def _over_band(sweep: Sweep, plan: FigurePlan, nodes: FloatArray) -> ComplexArray:
     """Return S21 of a sweep at the nodes, (g,), from its own smooth curve."""
-    f, noise = sweep.frequency_hz, plan.noise.get("S21")
-    curve = fit_curve(f, sweep.s21, float(nodes[0]), float(nodes[-1]), noise)
+    curve, low, high = plan.passband.curve, float(nodes[0]), float(nodes[-1])
+    if not curve.grid_hz[0] <= low <= high <= curve.grid_hz[-1]:
+        curve = fit_curve(sweep.frequency_hz, sweep.s21, low, high, plan.noise.get("S21"))
     value, _ = curve.on_grid(sweep.s21)
     turned = np.unwrap(np.angle(value))
     level = np.interp(nodes, curve.grid_hz, to_db(value))

@@ -1,4 +1,4 @@
-"""A sheet and one sweep of it in; every source of doubt about that sweep out, and perturbed copies of the sweep.
+"""A sheet and one sweep of it in; every source of doubt about that sweep out.
 
 Each source is a distribution with a stated or an assumed width (:data:`ASSUMED`, all of them common practice, no
 source; the page shows which were assumed):
@@ -15,16 +15,14 @@ source; the page shows which were assumed):
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
 
-from benchtool.figures import FigurePlan
 from benchtool.match import BURIED_UNCERTAINTY
-from benchtool.model import ComplexArray, FloatArray, Sweep
-from benchtool.noise import NOISE_FREE
+from benchtool.model import Sweep
 from benchtool.pads import PadBank, change_of_line
 from benchtool.sheet import Analyzer, BenchSheet, SweepEntry
 from benchtool.units import from_db
@@ -32,7 +30,6 @@ from benchtool.units import from_db
 __all__ = [
     "ASSUMED",
     "Assumption",
-    "Draws",
     "Joint",
     "SweepDoubts",
     "assumptions",
@@ -235,132 +232,6 @@ def sweep_doubts(sweep: Sweep, entry: SweepEntry, sheet: BenchSheet, bank: PadBa
         tuple(2.0 * port * reflection for reflection in _own_reflections(weights[0], bank)),
         entry.reversed is not None,
     )
-
-
-class Draws:
-    """Draws of the quantities that several sweeps share, made on demand and kept, (trials,) each.
-
-    With `only` set, every source but the named one stands still: that is how a budget is made.
-    """
-
-    def __init__(self, rng: np.random.Generator, trials: int, bank: PadBank, only: str | None = None) -> None:
-        self.rng = rng
-        self.trials = trials
-        self.bank = bank
-        self.only = only
-        self._pads: dict[str, FloatArray] = {}
-
-    def active(self, source: str) -> bool:
-        """Whether a source is drawn."""
-        return self.only is None or self.only == source
-
-    def pad_db(self, name: str) -> FloatArray:
-        """Return the error of a pad's loss, dB, (trials,): the same for every sweep."""
-        if name not in self._pads:
-            width, is_limit = pad_doubt_db(name, self.bank)
-            if not self.active(f"pad {name}"):
-                self._pads[name] = np.zeros(self.trials)
-            elif is_limit:
-                self._pads[name] = self.rng.uniform(-width, width, self.trials)
-            else:
-                self._pads[name] = self.rng.normal(0.0, width, self.trials)
-        return self._pads[name]
-
-    def phasor(self) -> ComplexArray:
-        """Return vectors of unit length and unknown phase, (trials, 1)."""
-        turned: ComplexArray = np.exp(2j * np.pi * self.rng.uniform(size=(self.trials, 1)))
-        return turned
-
-    def circular(self, sigma: FloatArray) -> ComplexArray:
-        """Return circular complex noise with rms `sigma` (n,), (trials, n)."""
-        pairs = self.rng.standard_normal((self.trials, sigma.size, 2))
-        noise: ComplexArray = pairs.view(np.complex128)[..., 0]
-        noise *= sigma / np.sqrt(2.0)
-        return noise
-
-    def perturb(self, sweep: Sweep, plan: FigurePlan, doubts: SweepDoubts) -> ComplexArray:
-        """Return copies of a sweep at the device as it might have been read, (trials, 2, 2, n)."""
-        s = np.repeat(sweep.s[None], self.trials, axis=0)
-        into = self._pads_factor(doubts.input_weights)
-        out = self._pads_factor(doubts.output_weights)
-        through: ComplexArray | FloatArray = into * out
-        if self.active("reading") and doubts.reading_db > 0.0:
-            through = through * self._reading(doubts.reading_db)
-        if self.active("mismatch"):
-            through = through * self._joints(sweep, doubts)
-        s[:, 1, 0] *= through
-        if "S12" in sweep.measured:
-            s[:, 0, 1] *= through
-        second = into if doubts.turned else out
-        for i, weights, vectors in ((0, into, doubts.input_vectors), (1, second, doubts.output_vectors)):
-            if f"S{i + 1}{i + 1}" not in sweep.measured:
-                continue
-            s[:, i, i] *= weights**2
-            if self.active("reading") and doubts.reading_db > 0.0:
-                s[:, i, i] *= self._reading(doubts.reading_db)
-            if self.active("directivity"):
-                s[:, i, i] += sum(vector * self.phasor() for vector in vectors)
-            if self.active("mismatch"):
-                s[:, i, i] += self._seen_through(sweep, doubts, i)
-        for source, sigma in self._sample_noise(sweep, plan):
-            if self.active(source):
-                for name, spread in sigma.items():
-                    if np.any(spread):
-                        s[:, int(name[1]) - 1, int(name[2]) - 1] += self.circular(spread)
-        return s
-
-    def _pads_factor(self, weights: Mapping[str, int]) -> FloatArray:
-        total = np.zeros(self.trials)
-        for name, sign in weights.items():
-            total = total + sign * self.pad_db(name)
-        return from_db(total)[:, None]
-
-    def _reading(self, reading_db: float) -> ComplexArray:
-        # The same share in magnitude and in phase: 0.05 dB is 0.58 %, hence 0.33°.
-        spread = np.log(10.0) / 20.0 * reading_db
-        both = self.rng.normal(0.0, spread, (self.trials, 2)) @ np.array([1.0, 1j])
-        factor: ComplexArray = np.exp(both)[:, None]
-        return factor
-
-    def _joints(self, sweep: Sweep, doubts: SweepDoubts) -> ComplexArray:
-        factor: ComplexArray = np.ones((self.trials, 1), np.complex128)
-        shape = sweep.s21 / np.max(np.abs(sweep.s21))
-        for joint in (*doubts.input_joints, *doubts.output_joints):
-            seen: ComplexArray | float = 1.0
-            if joint.device is not None:
-                seen = sweep.s11 if joint.device == "S11" else sweep.s22
-            product = joint.magnitude * self.phasor() * seen
-            if joint.resonant > 0.0:
-                product = product + joint.resonant * self.phasor() * shape
-            for pad in joint.through:
-                product = product * from_db(-2.0 * self.pad_db(pad))[:, None]
-            factor = factor * (1.0 + product)
-        return factor
-
-    def _seen_through(self, sweep: Sweep, doubts: SweepDoubts, port: int) -> ComplexArray:
-        """Return what the ports' own match adds to a reflection: round the near joint, and through to the far port."""
-        sides = (doubts.input_ports, doubts.output_ports)
-        near, far = sides if port == 0 else sides[::-1]
-        added: ComplexArray = sum(size * self.phasor() for size in near) * sweep.s[port, port] ** 2
-        if port == 0:
-            for product in doubts.input_between:
-                added = added + product * self.phasor() * sweep.s11
-        if "S12" in sweep.measured and "S21" in sweep.measured:
-            added = added + sum(size * self.phasor() for size in far) * (sweep.s12 * sweep.s21)
-        return added
-
-    def _sample_noise(self, sweep: Sweep, plan: FigurePlan) -> Iterator[tuple[str, dict[str, FloatArray]]]:
-        yield (
-            "noise",
-            {
-                name: (plan.noise.get(name) or NOISE_FREE).sigma(np.abs(sweep.s[int(name[1]) - 1, int(name[2]) - 1]))
-                for name in sweep.measured
-            },
-        )
-        misfit = np.zeros(sweep.frequency_hz.size)
-        for fit in (*plan.passband.curve.fits, *plan.design_curve.fits):
-            misfit[fit.start : fit.stop] = np.maximum(misfit[fit.start : fit.stop], fit.misfit)
-        yield "interpolation", {"S21": misfit}
 
 
 def source_doubt_db(analyzer: Analyzer) -> float:

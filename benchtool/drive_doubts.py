@@ -18,6 +18,7 @@ from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
+from numpy.typing import NDArray
 
 from benchtool.compression import MeasuredSweep
 from benchtool.doubts import ASSUMED, Joint, SweepDoubts, pad_doubt_db
@@ -74,20 +75,23 @@ class MismatchDoubt:
         return np.asarray(c - c[:1] - c[:, :1] + c[0, 0])
 
 
-def parabola(f: FloatArray, hz: float) -> tuple[slice, FloatArray]:
-    """Return the samples nearest a frequency and the weights that give a parabola's value there."""
-    middle = int(np.argmin(np.abs(f - hz)))
-    first = max(0, min(middle - HALF_FIT, f.size - 2 * HALF_FIT - 1))
-    near = slice(first, first + 2 * HALF_FIT + 1)
-    x = f[near] - hz
-    powers = np.vander(x / max(float(np.max(np.abs(x))), 1e-300), min(3, x.size), increasing=True)
-    return near, np.linalg.pinv(powers)[0]
+def parabola(f: FloatArray, at_hz: FloatArray) -> tuple[NDArray[np.intp], FloatArray]:
+    """Return the samples nearest each frequency, (j, m), and the weights that give a parabola's value there, (j, m)."""
+    count = min(2 * HALF_FIT + 1, f.size)
+    middle = np.argmin(np.abs(f - at_hz[:, None]), axis=1)
+    first = np.clip(middle - HALF_FIT, 0, f.size - count)
+    near = first[:, None] + np.arange(count)
+    x = f[near] - at_hz[:, None]
+    x = x / np.maximum(np.max(np.abs(x), axis=1, keepdims=True), 1e-300)
+    powers = x[..., None] ** np.arange(min(3, count))
+    return near, np.asarray(np.linalg.pinv(powers)[:, 0])
 
 
 def _smoothed(f: FloatArray, trace: ComplexArray, at_hz: FloatArray) -> ComplexArray:
     """Return a complex trace at each frequency, (j,), from a parabola round it."""
-    found = [parabola(f, float(hz)) for hz in at_hz]
-    return np.array([weights @ trace[near] for near, weights in found])
+    near, weights = parabola(f, at_hz)
+    smooth: ComplexArray = np.sum(weights * trace[near], axis=1)
+    return smooth
 
 
 def pad_doubts(

@@ -239,13 +239,9 @@ def _levels(sweep: MeasuredSweep, at_hz: FloatArray) -> tuple[FloatArray, FloatA
     f, s21 = sweep.result.sweep.frequency_hz, sweep.result.sweep.s21
     smooth = 10.0 ** (_smooth_level(sweep.result.sweep) / 20.0)
     sigma = 20.0 / np.log(10.0) * _noise_model(sweep).sigma(smooth) / (np.sqrt(2.0) * smooth)
-    level = to_db(s21)
-    gain, noise = np.empty(at_hz.size), np.empty(at_hz.size)
-    for j, hz in enumerate(at_hz):
-        near, weights = parabola(f, float(hz))
-        gain[j] = weights @ np.maximum(level[near], -300.0)
-        noise[j] = np.sqrt(np.sum((weights * sigma[near]) ** 2))
-    return gain, noise
+    near, weights = parabola(f, at_hz)
+    gain = np.sum(weights * np.maximum(to_db(s21), -300.0)[near], axis=1)
+    return np.asarray(gain), np.asarray(np.sqrt(np.sum((weights * sigma[near]) ** 2, axis=1)))
 
 
 def _phase_deg(sweep: MeasuredSweep, at_hz: float) -> float:

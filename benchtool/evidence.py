@@ -12,6 +12,7 @@ matrix, bordered by the pull of the readings, gives both its determinant and the
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Final
 
@@ -97,10 +98,10 @@ def normal_equations(weight: FloatArray, slope: FloatArray, left: FloatArray, co
     return NormalEquations(gram, pull, chi2, log_normal)
 
 
-def prior_precision(covariances: list[FloatArray]) -> FloatArray:
-    """Return the prior precision (k·c, k·c) of c freedoms a sweep; the covariance (k, k) of each is between sweeps."""
-    sweeps, c = covariances[0].shape[0], len(covariances)
-    precision = np.zeros((sweeps, c, sweeps, c))
-    for index, covariance in enumerate(covariances):
-        precision[:, index, :, index] = np.linalg.inv(covariance)
-    return precision.reshape(sweeps * c, sweeps * c)
+def prior_precision(precisions: Sequence[FloatArray]) -> FloatArray:
+    """Return the prior precision (k·c, k·c) of c freedoms a sweep; the precision (k, k) of each is between sweeps."""
+    sweeps, c = precisions[0].shape[0], len(precisions)
+    whole = np.zeros((sweeps, c, sweeps, c))
+    for index, precision in enumerate(precisions):
+        whole[:, index, :, index] = precision
+    return whole.reshape(sweeps * c, sweeps * c)

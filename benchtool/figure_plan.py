@@ -7,19 +7,24 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
+from functools import cached_property
+from typing import TypeAlias
 
 import numpy as np
+from numpy.typing import NDArray
 
-from benchtool.fitting import Curve, fit_curve
+from benchtool.fitting import Curve, Trace, fit_curve
 from benchtool.model import Bound, ComplexArray, Figure, Finding, FloatArray, Kind, Sweep
 from benchtool.noise import NoiseModel
 from benchtool.response import Passband
 from benchtool.sheet import FIGURE_UNITS
 from benchtool.units import format_si, to_db
 
-__all__ = ["Extractor", "FigureBuilder", "FigurePlan"]
+__all__ = ["Extractor", "FigureBuilder", "FigurePlan", "Traces"]
 
-Extractor = Callable[["FigurePlan", ComplexArray, Mapping[str, FloatArray]], FloatArray]
+Traces: TypeAlias = Mapping[str, Trace]
+"""The traces of a sweep, or of copies of it, by the parameter: S11, S12, S21, S22."""
+Extractor: TypeAlias = Callable[["FigurePlan", Traces, Mapping[str, FloatArray]], FloatArray]
 
 
 @dataclass(frozen=True, eq=False)
@@ -36,20 +41,42 @@ class FigurePlan:
     design_curve: Curve
     noise: Mapping[str, NoiseModel | None]
     """Noise seen in each measured parameter."""
+    curves: Mapping[str, tuple[Curve, ...]]
+    """Every curve that an extractor takes its figure from, by the parameter."""
     entries: tuple[Figure, ...]
     extractors: Mapping[str, Extractor | None]
     findings: tuple[Finding, ...] = field(default=())
 
-    def extract(self, s: ComplexArray) -> dict[str, FloatArray]:
+    @cached_property
+    def used(self) -> Mapping[str, NDArray[np.intp]]:
+        """Numbers of the samples that any figure rests on, by the parameter: copies need no others."""
+        ranges = {
+            name: [np.arange(fit.start, fit.stop) for curve in curves for fit in curve.fits]
+            for name, curves in self.curves.items()
+        }
+        return {name: np.unique(np.concatenate(each)) for name, each in ranges.items()}
+
+    def extract(self, s: ComplexArray | Traces) -> dict[str, FloatArray]:
         """Return each figure that can be known, (...,), from scattering parameters (..., 2, 2, n) at the device.
 
-        NaN stands where a copy does not show the figure (an edge that moved out of the sweep).
+        In place of these, traces may be given that hold only the samples in use. NaN stands where a copy does not show
+        the figure (an edge that moved out of the sweep).
         """
-        found = self._passband_figures(s[..., 1, 0, :])
+        if isinstance(s, np.ndarray):
+            traces: Traces = {f"S{i + 1}{j + 1}": s[..., i, j, :] for i in range(2) for j in range(2)}
+        else:
+            traces = s
+        found = self._passband_figures(traces["S21"])
         for key, extractor in self.extractors.items():
             if extractor is not None and key not in found:
-                found[key] = extractor(self, s, found)
-        return {entry.key: found[entry.key] for entry in self.entries if self.extractors[entry.key] is not None}
+                found[key] = extractor(self, traces, found)
+        return {key: found[key] for key in self._known}
+
+    @cached_property
+    def _known(self) -> tuple[str, ...]:
+        """Keys of the figures that can be known, in the order they are shown."""
+        keys = [entry.key for entry in self.entries]
+        return tuple(key for key in keys if self.extractors[key] is not None)
 
     def figures(self, s: ComplexArray) -> dict[str, Figure]:
         """Return the figures of one sweep, (2, 2, n), with values and bounds, without intervals."""
@@ -67,7 +94,7 @@ class FigurePlan:
             )
         return figures
 
-    def _passband_figures(self, s21: ComplexArray) -> dict[str, FloatArray]:
+    def _passband_figures(self, s21: Trace) -> dict[str, FloatArray]:
         band = self.passband
         found = band.figures(s21)
         lower = found.lower_edge if band.lower_inside else np.full_like(found.peak_gain, band.start_hz)
@@ -101,6 +128,7 @@ class FigureBuilder:
         self.entries: list[Figure] = []
         self.extractors: dict[str, Extractor | None] = {}
         self.findings: list[Finding] = []
+        self.curves: dict[str, list[Curve]] = {}
 
     def add(
         self,
@@ -135,8 +163,13 @@ class FigureBuilder:
         )
         return True
 
-    def curve(self, parameter: tuple[int, int], low_hz: float, high_hz: float) -> Curve:
-        """Return the smooth curve of one scattering parameter, (i, j) counted from 0."""
-        i, j = parameter
-        noise = self.noise.get(f"S{i + 1}{j + 1}")
-        return fit_curve(self.sweep.frequency_hz, self.sweep.s[i, j], low_hz, high_hz, noise)
+    def curve(self, parameter: str, low_hz: float, high_hz: float) -> Curve:
+        """Return the smooth curve of one scattering parameter, for an extractor to use."""
+        trace = self.sweep.s[int(parameter[1]) - 1, int(parameter[2]) - 1]
+        curve = fit_curve(self.sweep.frequency_hz, trace, low_hz, high_hz, self.noise.get(parameter))
+        self.uses(parameter, curve)
+        return curve
+
+    def uses(self, parameter: str, *curves: Curve) -> None:
+        """Note that extractors use these curves of one scattering parameter."""
+        self.curves.setdefault(parameter, []).extend(curves)

@@ -13,10 +13,10 @@ from typing import Final
 
 import numpy as np
 
-from benchtool.figure_plan import Extractor, FigureBuilder, FigurePlan
+from benchtool.figure_plan import Extractor, FigureBuilder, FigurePlan, Traces
 from benchtool.fitting import Curve
 from benchtool.match import stability, worst_return_loss
-from benchtool.model import Bound, ComplexArray, Figure, FloatArray, Kind, Sweep
+from benchtool.model import Bound, Figure, FloatArray, Kind, Sweep
 from benchtool.noise import estimate_noise
 from benchtool.phase import delay_variation, phase_linearity
 from benchtool.response import LevelWidth, Passband, plan_level_width, plan_passband
@@ -30,8 +30,11 @@ _REJECTION_REACH: Final = 0.02
 _REJECTION_STEPS: Final = 3.0
 
 
+_PARAMETERS: Final = (("S11", "S12"), ("S21", "S22"))
+
+
 def _given(name: str) -> Extractor:
-    return lambda _plan, _s, found: found[name]
+    return lambda _plan, _traces, found: found[name]
 
 
 def plan_figures(
@@ -67,7 +70,8 @@ def plan_figures(
         design_curve = passband.curve
     else:
         width = float(grid[-1] - grid[0])
-        design_curve = build.curve((1, 0), at - 0.1 * width, at + 0.1 * width)
+        design_curve = build.curve("S21", at - 0.1 * width, at + 0.1 * width)
+    build.uses("S21", passband.curve)
     _add_transmission(build, passband, inside_sweep, design_curve, at)
     _add_match(build, passband, at, inside_sweep)
     for target in targets:
@@ -78,6 +82,7 @@ def plan_figures(
         passband,
         design_curve,
         noise,
+        {name: tuple(curves) for name, curves in build.curves.items()},
         tuple(build.entries),
         build.extractors,
         tuple(build.findings),
@@ -138,34 +143,33 @@ def _add_match(build: FigureBuilder, band: Passband, at_hz: float, inside: bool)
     else:
         low = high = at_hz
         where = {"at_hz": at_hz}
-    for figure, name, (i, j) in (("input_return_loss", "S11", (0, 0)), ("output_return_loss", "S22", (1, 1))):
+    for figure, name in (("input_return_loss", "S11"), ("output_return_loss", "S22")):
         if name not in build.sweep.measured:
             continue
         if low == high and not inside:
             build.add(figure, None, parameters=where)
         elif low < high:
-            build.add(figure, _worst(build.curve((i, j), low, high), (i, j)), parameters=where)
+            build.add(figure, _worst(build.curve(name, low, high), name), parameters=where)
         else:
-            build.add(figure, _at_point(build, (i, j), at_hz), parameters=where)
+            build.add(figure, _at_point(build, name, at_hz), parameters=where)
     if "S12" in build.sweep.measured:
-        extractor = _at_point(build, (0, 1), at_hz) if inside else None
+        extractor = _at_point(build, "S12", at_hz) if inside else None
         build.add("reverse_isolation", extractor, parameters={"at_hz": at_hz})
     if build.sweep.full and build.kind == "amplifier":
         for figure in ("stability_k", "stability_mu"):
             build.add(figure, _stability(build, figure, at_hz) if inside else None, parameters={"at_hz": at_hz})
 
 
-def _worst(curve: Curve, parameter: tuple[int, int]) -> Extractor:
-    i, j = parameter
-    return lambda _plan, s, _found: worst_return_loss(curve, s[..., i, j, :])
+def _worst(curve: Curve, parameter: str) -> Extractor:
+    return lambda _plan, traces, _found: worst_return_loss(curve, traces[parameter])
 
 
 def _stability(build: FigureBuilder, figure: str, at_hz: float) -> Extractor:
     """Return the extractor of K or µ at one frequency, from the smooth curves of all four parameters."""
-    curves = [[_curve_near(build, (i, j), at_hz) for j in range(2)] for i in range(2)]
+    curves = {name: _curve_near(build, name, at_hz) for row in _PARAMETERS for name in row}
 
-    def extract(_plan: FigurePlan, s: ComplexArray, _found: Mapping[str, FloatArray]) -> FloatArray:
-        rows = [[curves[i][j].at(s[..., i, j, :], at_hz)[0] for j in range(2)] for i in range(2)]
+    def extract(_plan: FigurePlan, traces: Traces, _found: Mapping[str, FloatArray]) -> FloatArray:
+        rows = [[curves[name].at(traces[name], at_hz)[0] for name in row] for row in _PARAMETERS]
         point = np.stack([np.stack(row, axis=-1) for row in rows], axis=-2)[..., None]
         found = stability(point)
         return np.asarray((found.k if figure == "stability_k" else found.mu)[..., 0])
@@ -173,17 +177,16 @@ def _stability(build: FigureBuilder, figure: str, at_hz: float) -> Extractor:
     return extract
 
 
-def _curve_near(build: FigureBuilder, parameter: tuple[int, int], at_hz: float) -> Curve:
+def _curve_near(build: FigureBuilder, parameter: str, at_hz: float) -> Curve:
     f = build.sweep.frequency_hz
     reach = max(0.02 * float(f[-1] - f[0]), _REJECTION_STEPS * float(np.max(np.diff(f), initial=0.0)))
     return build.curve(parameter, at_hz - reach, at_hz + reach)
 
 
-def _at_point(build: FigureBuilder, parameter: tuple[int, int], at_hz: float) -> Extractor:
+def _at_point(build: FigureBuilder, parameter: str, at_hz: float) -> Extractor:
     """Return the extractor of −20 log10 of a parameter's magnitude at one frequency."""
-    i, j = parameter
     curve = _curve_near(build, parameter, at_hz)
-    return lambda _plan, s, _found: -to_db(curve.at(s[..., i, j, :], at_hz)[0])
+    return lambda _plan, traces, _found: -to_db(curve.at(traces[parameter], at_hz)[0])
 
 
 def target_key(target: TargetSpec) -> str:
@@ -230,10 +233,10 @@ def _add_rejection(build: FigureBuilder, figure: str, at_hz: float, peak_hz: flo
         return
     steps = float(np.max(np.diff(build.sweep.frequency_hz), initial=0.0))
     reach = max(_REJECTION_REACH * abs(at_hz - peak_hz), _REJECTION_STEPS * steps)
-    curve = build.curve((1, 0), at_hz - reach, at_hz + reach)
+    curve = build.curve("S21", at_hz - reach, at_hz + reach)
 
-    def extract(_plan: FigurePlan, s: ComplexArray, found: Mapping[str, FloatArray]) -> FloatArray:
-        return np.asarray(found["peak_gain"] - to_db(curve.at(s[..., 1, 0, :], at_hz)[0]))
+    def extract(_plan: FigurePlan, traces: Traces, found: Mapping[str, FloatArray]) -> FloatArray:
+        return np.asarray(found["peak_gain"] - to_db(curve.at(traces["S21"], at_hz)[0]))
 
     build.add(figure, extract, parameters=parameters)
 
@@ -243,16 +246,16 @@ def _add_over(build: FigureBuilder, figure: str, over_hz: tuple[float, float]) -
     if build.outside(figure, *over_hz):
         build.add(figure, None, parameters=parameters)
         return
-    curve = build.curve((1, 0), *over_hz)
+    curve = build.curve("S21", *over_hz)
 
-    def ripple(_plan: FigurePlan, s: ComplexArray, _found: Mapping[str, FloatArray]) -> FloatArray:
-        level = to_db(curve.on_grid(s[..., 1, 0, :])[0])
+    def ripple(_plan: FigurePlan, traces: Traces, _found: Mapping[str, FloatArray]) -> FloatArray:
+        level = curve.level_on_grid(traces["S21"])
         return np.asarray(np.max(level, axis=-1) - np.min(level, axis=-1))
 
     extractors: dict[str, Extractor] = {
         "ripple": ripple,
-        "delay_variation": lambda _plan, s, _found: delay_variation(curve, s[..., 1, 0, :]),
-        "phase_linearity": lambda _plan, s, _found: phase_linearity(curve, s[..., 1, 0, :]),
+        "delay_variation": lambda _plan, traces, _found: delay_variation(curve, traces["S21"]),
+        "phase_linearity": lambda _plan, traces, _found: phase_linearity(curve, traces["S21"]),
     }
     build.add(figure, extractors[figure], parameters=parameters)
 
@@ -274,12 +277,13 @@ def _add_shape_factor(build: FigureBuilder, band: Passband, figure: str, between
         )
         build.add(figure, None, parameters=parameters)
         return
+    build.uses("S21", outer.lower, outer.upper, inner.lower, inner.upper)
     build.add(figure, _ratio(outer, inner), parameters=parameters)
 
 
 def _ratio(outer: LevelWidth, inner: LevelWidth) -> Extractor:
-    def extract(_plan: FigurePlan, s: ComplexArray, found: Mapping[str, FloatArray]) -> FloatArray:
-        s21, peak = s[..., 1, 0, :], found["peak_gain"]
+    def extract(_plan: FigurePlan, traces: Traces, found: Mapping[str, FloatArray]) -> FloatArray:
+        s21, peak = traces["S21"], found["peak_gain"]
         return np.asarray(outer.width(s21, peak) / inner.width(s21, peak))
 
     return extract

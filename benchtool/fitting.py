@@ -17,15 +17,16 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 from functools import cache, cached_property
 from itertools import pairwise
-from typing import Final
+from typing import Final, TypeAlias
 
 import numpy as np
 from numpy.polynomial import legendre
+from numpy.typing import NDArray
 
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import NOISE_FREE, NoiseModel, line_delay, moving_average, rotation, trend_delay
 
-__all__ = ["Curve", "Fit", "fit_curve"]
+__all__ = ["Curve", "Fit", "Part", "Trace", "fit_curve"]
 
 MAX_DEGREE: Final = 10
 _MIN_POINTS: Final = 5
@@ -47,6 +48,18 @@ def _times(data: ComplexArray, matrix: FloatArray) -> ComplexArray:
     product.real = data.real @ matrix
     product.imag = data.imag @ matrix
     return product
+
+
+@dataclass(frozen=True, eq=False)
+class Part:
+    """Some samples of a trace, or of copies of it: `values` (..., m) of the samples numbered `index` (m,), rising."""
+
+    values: ComplexArray
+    index: NDArray[np.intp]
+
+
+Trace: TypeAlias = ComplexArray | Part
+"""A trace or copies of it: all samples (..., n), or those alone that are asked for."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -74,12 +87,18 @@ class Fit:
         """Degree of the polynomial."""
         return int(self.solve.shape[0]) - 1
 
-    def coefficients(self, s: ComplexArray) -> ComplexArray:
-        """Return the Legendre coefficients, (..., degree + 1), of a trace or of copies of it, (..., n)."""
-        turned = s[..., self.start : self.stop] * self.turn
+    def coefficients(self, s: Trace) -> ComplexArray:
+        """Return the Legendre coefficients, (..., degree + 1), of a trace or of copies of it."""
+        turned = self._samples(s) * self.turn
         if self.inverse:
             turned = 1.0 / turned
         return _times(turned, self.solve.T)
+
+    def _samples(self, s: Trace) -> ComplexArray:
+        if not isinstance(s, Part):
+            return s[..., self.start : self.stop]
+        first = int(np.searchsorted(s.index, self.start))
+        return s.values[..., first : first + self.stop - self.start]
 
     def basis(self, frequency_hz: FloatArray) -> FloatArray:
         """Return the basis functions at frequencies (...,), (..., degree + 1)."""
@@ -114,7 +133,7 @@ class _Nodes:
         turn = np.conj(rotation(frequency_hz, fit.delay_s))
         return cls(fit, fit.basis(frequency_hz).T, fit.slope_basis(frequency_hz).T, turn)
 
-    def evaluate(self, s: ComplexArray) -> tuple[ComplexArray, FloatArray]:
+    def evaluate(self, s: Trace) -> tuple[ComplexArray, FloatArray]:
         """Return S (its mean delay put back) and the group delay in s, both (..., g)."""
         coefficients = self.fit.coefficients(s)
         polynomial = _times(coefficients, self.basis)
@@ -125,7 +144,7 @@ class _Nodes:
         delay = self.fit.delay_s + (angle_slope if self.fit.inverse else -angle_slope)
         return value * self.turn, delay
 
-    def level_db(self, s: ComplexArray) -> FloatArray:
+    def level_db(self, s: Trace) -> FloatArray:
         """Return 20 log10 of the magnitude of S, (..., g): what the real and the imaginary part give, no more."""
         coefficients = self.fit.coefficients(s)
         power = (coefficients.real @ self.basis) ** 2
@@ -154,16 +173,16 @@ class Curve:
         """Whether every fit describes the trace down to its noise."""
         return all(fit.excess <= _ACCEPTED_EXCESS for fit in self.fits)
 
-    def on_grid(self, s: ComplexArray) -> tuple[ComplexArray, FloatArray]:
-        """Return S and group delay in s on `grid_hz`, both (..., g), of a trace or copies of it, (..., n)."""
+    def on_grid(self, s: Trace) -> tuple[ComplexArray, FloatArray]:
+        """Return S and group delay in s on `grid_hz`, both (..., g), of a trace or copies of it."""
         return _side_by_side([nodes.evaluate(s) for nodes in self._grid_nodes])
 
-    def level_on_grid(self, s: ComplexArray) -> FloatArray:
+    def level_on_grid(self, s: Trace) -> FloatArray:
         """Return the level of S in dB on `grid_hz`, (..., g), at a fraction of the cost of :meth:`on_grid`."""
         levels = [nodes.level_db(s) for nodes in self._grid_nodes]
         return levels[0] if len(levels) == 1 else np.concatenate(levels, axis=-1)
 
-    def at(self, s: ComplexArray, frequency_hz: float) -> tuple[ComplexArray, FloatArray]:
+    def at(self, s: Trace, frequency_hz: float) -> tuple[ComplexArray, FloatArray]:
         """Return S and group delay in s at one frequency, both (...,)."""
         if frequency_hz not in self._point_nodes:
             self._point_nodes[frequency_hz] = self._nodes(np.array([frequency_hz]))
@@ -251,16 +270,17 @@ def _best_form(
     magnitude = np.abs(trace)
     floor = max((_ROUNDING * float(np.max(magnitude / sigma))) ** 2, 1e-300)
     best: _Form | None = None
-    # A resonance must keep its own delay (1/S is a straight line only then), a cable must lose it: try each.
-    for delay in dict.fromkeys((0.0, line_delay_s, trend_delay(f, trace))):
-        turned = trace * rotation(f, delay)
-        for inverse in (True, False) if inverse_allowed else (False,):
-            weight = magnitude**2 / sigma if inverse else 1.0 / sigma
+    turns = [(delay, trace * rotation(f, delay)) for delay in dict.fromkeys((0.0, line_delay_s, trend_delay(f, trace)))]
+    for inverse in (True, False) if inverse_allowed else (False,):
+        weight = magnitude**2 / sigma if inverse else 1.0 / sigma
+        # One orthogonal basis serves every degree: the residual falls by the power of each new direction.
+        axes, _ = np.linalg.qr(full * (weight / np.max(weight))[:, None])
+        # A resonance must keep its own delay (1/S is a straight line only then), a cable must lose it: try each.
+        for delay, turned in turns:
             target = weight / turned if inverse else weight * turned
-            # One orthogonal basis serves every degree: the residual falls by the power of each new direction.
-            axes, _ = np.linalg.qr(full * (weight / np.max(weight))[:, None])
-            left = target - axes @ (axes.T @ target)
-            tail = np.abs(axes.T @ target) ** 2
+            along = axes.T @ target
+            left = target - axes @ along
+            tail = np.abs(along) ** 2
             rest = float(np.sum(np.abs(left) ** 2)) + np.append(np.cumsum(tail[::-1])[-2::-1], 0.0)
             for degree in range(full.shape[1]):
                 score = _score(float(rest[degree]) / f.size, f.size, degree, floor)

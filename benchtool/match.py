@@ -11,9 +11,9 @@ from typing import Final
 
 import numpy as np
 
-from benchtool.fitting import Curve
+from benchtool.fitting import Curve, Trace
 from benchtool.model import ComplexArray, FloatArray
-from benchtool.units import from_db, to_db
+from benchtool.units import from_db
 
 __all__ = [
     "BURIED_UNCERTAINTY",
@@ -29,10 +29,9 @@ BURIED_UNCERTAINTY: Final = 0.3
 """Uncertainty of a reflection magnitude above which a return loss read through pads says nothing."""
 
 
-def worst_return_loss(curve: Curve, reflection: ComplexArray) -> FloatArray:
-    """Return the smallest return loss in dB over the curve, (...,), of a reflection or copies of it, (..., n)."""
-    value, _ = curve.on_grid(reflection)
-    return np.asarray(-to_db(np.max(np.abs(value), axis=-1)))
+def worst_return_loss(curve: Curve, reflection: Trace) -> FloatArray:
+    """Return the smallest return loss in dB over the curve, (...,), of a reflection or copies of it."""
+    return np.asarray(-np.max(curve.level_on_grid(reflection), axis=-1))
 
 
 def buried_uncertainty(correction_db: float, directivity_db: float) -> float:

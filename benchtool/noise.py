@@ -12,6 +12,7 @@ lower one the lower one saw curvature, and the higher is believed.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Final, TypeVar, cast
 
 import numpy as np
@@ -27,6 +28,11 @@ _NEIGHBOURS: Final = 31
 """Samples over which the local variance is averaged."""
 _CLEARLY_LESS: Final = 0.6
 """A rival estimate replaces the first one only when it is below this share of it, so that picking adds no bias."""
+_ROUNDS: Final = 30
+_STILL: Final = 1e-10
+"""Share of the additive variance below which a round that moved no more was the last."""
+_SINGULAR: Final = 1e-12
+"""Determinant, over the product of its diagonal, below which power varies too little to tell the two parts apart."""
 _ROUNDING: Final = 1e-9
 """Noise below this share of the largest sample is rounding of the file, not noise."""
 
@@ -86,14 +92,20 @@ def rotation(frequency_hz: FloatArray, delay_s: float) -> ComplexArray:
     return turned
 
 
-def _difference_weights(frequency_hz: FloatArray, order: int) -> FloatArray:
-    """Return (n - order, order + 1) divided-difference weights with unit sum of squares; any spacing will do."""
-    windows = np.lib.stride_tricks.sliding_window_view(frequency_hz, order + 1)
+@lru_cache(maxsize=12)
+def _difference_weights(frequencies: bytes, order: int) -> FloatArray:
+    """Return (n - order, order + 1) divided-difference weights with unit sum of squares; any spacing will do.
+
+    Kept by the frequencies, which the sweeps of a bench mostly share.
+    """
+    windows = np.lib.stride_tricks.sliding_window_view(np.frombuffer(frequencies, np.float64), order + 1)
     gaps = windows[:, :, None] - windows[:, None, :]
     gaps /= np.ptp(windows, axis=1)[:, None, None]
     gaps[:, np.arange(order + 1), np.arange(order + 1)] = 1.0
     weights = 1.0 / np.prod(gaps, axis=2)
-    return np.asarray(weights / np.linalg.norm(weights, axis=1, keepdims=True))
+    weights /= np.linalg.norm(weights, axis=1, keepdims=True)
+    weights.flags.writeable = False
+    return np.asarray(weights)
 
 
 def _local_variance(frequency_hz: FloatArray, s: ComplexArray) -> FloatArray:
@@ -101,11 +113,12 @@ def _local_variance(frequency_hz: FloatArray, s: ComplexArray) -> FloatArray:
     power = np.abs(s) ** 2
     floor = 1e-12 * float(np.max(power))
     inverse = np.conj(s) / np.maximum(power, floor)
+    frequencies = np.ascontiguousarray(frequency_hz, np.float64).tobytes()
     best: FloatArray | None = None
     for order in _ORDERS:
         if s.size < order + 3:
             break
-        weights = _difference_weights(frequency_hz, order)
+        weights = _difference_weights(frequencies, order)
         half = order // 2
         for trace, scale in ((s, np.ones_like(power)), (inverse, power)):
             windows = np.lib.stride_tricks.sliding_window_view(trace, order + 1)
@@ -138,19 +151,25 @@ def estimate_noise(frequency_hz: FloatArray, s: ComplexArray) -> NoiseModel | No
     # Alternate between the two parts, each sample weighted by the inverse square of the variance it is expected to
     # have (a variance estimate has a relative error); samples far above the line are left-over curvature.
     additive, proportional = float(np.median(variance)), 0.0
-    for _ in range(30):
+    for _ in range(_ROUNDS):
+        before = additive, proportional
         expected = additive + proportional * power + rounding
         keep = variance < 4.0 * expected
         if np.count_nonzero(keep) < 5:
             break
         weight = np.where(keep, expected**-2.0, 0.0)
-        matrix = np.array([[np.sum(weight), np.sum(weight * power)], [0.0, np.sum(weight * power**2)]])
-        matrix[1, 0] = matrix[0, 1]
-        right = np.array([np.sum(weight * variance), np.sum(weight * variance * power)])
-        if np.linalg.cond(matrix) < 1e12:
-            additive, proportional = np.linalg.solve(matrix, right)
+        weighted = weight * power
+        one, first, second = float(np.sum(weight)), float(np.sum(weighted)), float(weighted @ power)
+        level, slope = float(weight @ variance), float(weighted @ variance)
+        determinant = one * second - first**2
+        if determinant > _SINGULAR * one * second:
+            additive = (second * level - first * slope) / determinant
+            proportional = (one * slope - first * level) / determinant
         if additive < 0.0:
-            additive, proportional = 0.0, right[1] / matrix[1, 1]
+            additive, proportional = 0.0, slope / second
         elif proportional < 0.0:
-            additive, proportional = right[0] / matrix[0, 0], 0.0
+            additive, proportional = level / one, 0.0
+        moved = abs(additive - before[0]) + abs(proportional - before[1]) * float(np.max(power))
+        if moved <= _STILL * (additive + rounding):
+            break
     return NoiseModel(float(np.sqrt(additive)), float(np.sqrt(proportional)))

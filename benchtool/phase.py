@@ -11,7 +11,7 @@ from typing import Final
 
 import numpy as np
 
-from benchtool.fitting import Curve
+from benchtool.fitting import Curve, Trace
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import rotation, trend_delay
 
@@ -69,7 +69,7 @@ def group_delay_curve(frequency_hz: FloatArray, s: ComplexArray, aperture_hz: fl
     return np.asarray(delay).reshape(phase.shape)
 
 
-def phase_linearity(curve: Curve, s: ComplexArray) -> FloatArray:
+def phase_linearity(curve: Curve, s: Trace) -> FloatArray:
     """Return the largest departure of the phase from its best straight line over the curve, degrees, (...,)."""
     value, _ = curve.on_grid(s)
     grid = curve.grid_hz
@@ -84,7 +84,7 @@ def phase_linearity(curve: Curve, s: ComplexArray) -> FloatArray:
     return np.asarray(np.max(np.abs(phase - phase @ solve.T @ basis.T), axis=-1))
 
 
-def delay_variation(curve: Curve, s: ComplexArray) -> FloatArray:
+def delay_variation(curve: Curve, s: Trace) -> FloatArray:
     """Return the largest less the smallest group delay over the curve, s, (...,)."""
     _, delay = curve.on_grid(s)
     return np.asarray(np.max(delay, axis=-1) - np.min(delay, axis=-1))

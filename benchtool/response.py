@@ -21,7 +21,7 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-from benchtool.fitting import Curve, fit_curve
+from benchtool.fitting import Curve, Trace, fit_curve
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import NoiseModel, moving_average, rotation, trend_delay
 from benchtool.units import HALF_POWER_DB, to_db
@@ -44,7 +44,7 @@ class PassbandFigures:
     lower_edge: FloatArray
     upper_edge: FloatArray
     curve: Curve
-    trace: ComplexArray
+    trace: Trace
     peak_node: NDArray[np.intp]
     """Node of the curve's grid nearest the peak; it serves what is worked out only when it is asked for."""
 
@@ -108,8 +108,8 @@ class Passband:
     other_humps: tuple[float, ...]
     """Frequencies of other maxima within 3.01 dB of the peak, outside its half-power band."""
 
-    def figures(self, s21: ComplexArray) -> PassbandFigures:
-        """Return the figures of a trace, or of copies of it, (..., n)."""
+    def figures(self, s21: Trace) -> PassbandFigures:
+        """Return the figures of a trace, or of copies of it."""
         grid = self.curve.grid_hz
         level = self.curve.level_on_grid(s21)
         start, stop = self.peak_range
@@ -122,14 +122,20 @@ class Passband:
 
 
 def _gather(values: FloatArray, index: np.ndarray) -> FloatArray:
-    return np.asarray(np.take_along_axis(values, index[..., None], axis=-1)[..., 0])
+    """Return one of the values (..., g) of each copy, (...,)."""
+    flat = values.reshape(-1, values.shape[-1])
+    return np.asarray(flat[np.arange(len(flat)), np.reshape(index, -1)].reshape(values.shape[:-1]))
+
+
+def _within(index: NDArray[np.intp], low: int, high: int) -> NDArray[np.intp]:
+    return np.asarray(np.minimum(np.maximum(index, low), high), np.intp)
 
 
 def _interpolate(grid: FloatArray, values: FloatArray, at_hz: FloatArray) -> FloatArray:
     """Return `values` (..., g) at one frequency a copy, (...,), by the parabola through three nodes."""
     if grid.size < 3:
         return np.asarray(values[..., 0])
-    middle = np.clip(np.searchsorted(grid, at_hz), 1, grid.size - 2)
+    middle = _within(np.searchsorted(grid, at_hz), 1, grid.size - 2)
     x0, x1, x2 = grid[middle - 1], grid[middle], grid[middle + 1]
     y0, y1, y2 = (_gather(values, middle + k) for k in (-1, 0, 1))
     a, b, c = at_hz - x0, at_hz - x1, at_hz - x2
@@ -147,7 +153,7 @@ def _vertex(
     low, high = limits
     if grid.size < 3:
         return grid[index], _gather(level, index)
-    middle = np.clip(index, 1, grid.size - 2)
+    middle = _within(index, 1, grid.size - 2)
     x0, x1, x2 = grid[middle - 1], grid[middle], grid[middle + 1]
     y0, y1, y2 = (_gather(level, middle + k) for k in (-1, 0, 1))
     first, second = (y1 - y0) / (x1 - x0), (y2 - y1) / (x2 - x1)
@@ -170,8 +176,8 @@ def crossing(grid: FloatArray, level: FloatArray, target: FloatArray, index: np.
     below = beyond & (level < target[..., None])
     found = below.any(axis=-1)
     outer = np.argmax(below, axis=-1) if direction > 0 else grid.size - 1 - np.argmax(below[..., ::-1], axis=-1)
-    outer = np.clip(np.where(found, outer, 0 if direction < 0 else grid.size - 1), 0, grid.size - 1)
-    inner = np.clip(outer - direction, 0, grid.size - 1)
+    outer = np.where(found, outer, 0 if direction < 0 else grid.size - 1)
+    inner = _within(outer - direction, 0, grid.size - 1)
     y0, y1 = _gather(level, inner) - target, _gather(level, outer) - target
     with np.errstate(divide="ignore", invalid="ignore"):
         at = grid[inner] + (grid[outer] - grid[inner]) * y0 / (y0 - y1)
@@ -295,8 +301,8 @@ class LevelWidth:
     lower: Curve
     upper: Curve
 
-    def width(self, s21: ComplexArray, peak_gain_db: FloatArray) -> FloatArray:
-        """Return the width in Hz, (...,), of a trace or copies of it, (..., n); NaN where an edge is lost."""
+    def width(self, s21: Trace, peak_gain_db: FloatArray) -> FloatArray:
+        """Return the width in Hz, (...,), of a trace or copies of it; NaN where an edge is lost."""
         target = peak_gain_db - self.below_db
         edges = []
         for curve, direction in ((self.lower, -1), (self.upper, 1)):

@@ -69,9 +69,10 @@ _RESTLESS_TUNING: Final = 1.0
 _TUNING: Final = 3.0
 """Standard deviation of a shift in tuning, in hundredths of the span of the nodes."""
 _LEAST_U_DB: Final = 0.005
-_GRIDS: Final = ((31, 7), (21, 7), (31, 9))
+_GRIDS: Final = ((21, 5), (21, 7), (31, 9))
 """Places of the 1 dB point, and values of Rapp's p, that each look takes in."""
 _NEWTON_STEPS: Final = 6
+_STILL_DB: Final = 1e-6
 _MATTERS: Final = 12.0
 _HOPELESS: Final = 30.0
 """Logarithm of how much less likely than the best a law may be and still be looked at more closely."""
@@ -109,10 +110,11 @@ class _Weighed:
 
 def rivals(table: DriveTable) -> tuple[Rival, ...]:
     """Return every explanation of the table, most likely first; probabilities sum to one."""
-    lawless = _Lawless(table)
+    doubts = _Doubts.of(table)
+    lawless = _Lawless(table, doubts)
     weighed = [
         lawless.weigh("clean", "", []),
-        *_limiting(table),
+        *_limiting(table, doubts),
         *_pad_values(table, lawless),
         *_not_repeating(table, lawless),
     ]
@@ -124,25 +126,37 @@ def rivals(table: DriveTable) -> tuple[Rival, ...]:
     return tuple(sorted(found, key=lambda rival: -rival.probability))
 
 
-def _flat_covariance(table: DriveTable, but_for: str = "") -> FloatArray:
+def _flat_precision(table: DriveTable, but_for: str = "") -> FloatArray:
     covariance = np.diag(table.reading_u_db**2 + _LEAST_U_DB**2)
     for pad in table.pads:
         if pad.name == but_for:
             continue
         reads = pad.reads - pad.reads[0]
         covariance = covariance + pad.u_db**2 * np.outer(reads, reads)
-    return np.asarray(covariance)
+    return np.asarray(np.linalg.inv(covariance))
 
 
-def _doubts(table: DriveTable) -> tuple[FloatArray, list[FloatArray]]:
-    """Return what flat doubts and mismatch add to the nodes of a sweep, (c, j), and their covariances (k, k)."""
-    patterns, covariances = [np.ones(table.frequency_hz.size)], [_flat_covariance(table)]
-    for form in table.mismatch:
-        # What equal lines have in common goes with the gain of the device, which is free.
-        if np.max(np.abs(form.between)) > _LEAST_U_DB**2:
-            patterns.append(form.pattern)
-            covariances.append(form.between + _LEAST_U_DB**2 * np.eye(table.sweeps))
-    return np.array(patterns), covariances
+@dataclass(frozen=True, eq=False)
+class _Doubts:
+    """What flat doubts, first, and the forms of mismatch add to the nodes of a sweep, and their precisions."""
+
+    patterns: FloatArray
+    """(c, j)."""
+    precisions: tuple[FloatArray, ...]
+    """(k, k) each, between the sweeps."""
+
+    @classmethod
+    def of(cls, table: DriveTable) -> _Doubts:
+        patterns, precisions = [np.ones(table.frequency_hz.size)], [_flat_precision(table)]
+        for form in table.mismatch:
+            between = form.between
+            # What equal lines have in common goes with the gain of the device, which is free.
+            if np.max(np.abs(between)) > _LEAST_U_DB**2:
+                patterns.append(form.pattern)
+                precisions.append(
+                    np.asarray(np.linalg.inv(between + _LEAST_U_DB**2 * np.eye(table.sweeps)), np.float64)
+                )
+        return cls(np.array(patterns), tuple(precisions))
 
 
 @dataclass(frozen=True, eq=False)
@@ -159,9 +173,9 @@ class _Extra:
 class _Lawless:
     """Explanations in which no gain drops: their normal equations are made once, and each takes its own freedoms."""
 
-    def __init__(self, table: DriveTable) -> None:
-        self.table = table
-        patterns, self.covariances = _doubts(table)
+    def __init__(self, table: DriveTable, doubts: _Doubts) -> None:
+        self.table, self._doubts = table, doubts
+        patterns = doubts.patterns
         columns = np.concatenate([patterns, [table.slope_db, table.bend_db]])
         self._place = {"flat": 0, "slope": len(patterns), "bend": len(patterns) + 1}
         gain, weight = table.gain_db[None], 1.0 / table.noise_db[None] ** 2
@@ -172,16 +186,16 @@ class _Lawless:
 
     def weigh(self, cause: Cause, about: str, extras: Sequence[_Extra], share: float = 1.0) -> _Weighed:
         """Return one explanation; the first of its extras is what it estimates."""
-        doubts = len(self.covariances)
+        doubts = len(self._doubts.precisions)
         size = self.table.sweeps * doubts
         # Within a sweep its doubts stand side by side, as the prior has them.
         parts = [self._freedoms[:, :doubts].reshape(size, -1).T]
         parts += [(extra.reach @ self._freedoms[:, self._place[extra.along]])[:, None] for extra in extras]
         equations = self._equations.combined(np.concatenate(parts, axis=1))
         replaced = next((extra.pad for extra in extras if extra.pad), "")
-        covariances = [_flat_covariance(self.table, replaced), *self.covariances[1:]]
+        flat = _flat_precision(self.table, replaced) if replaced else self._doubts.precisions[0]
         prior = np.diag(np.concatenate([np.zeros(size), [extra.u**-2.0 for extra in extras]]))
-        prior[:size, :size] = prior_precision(covariances)
+        prior[:size, :size] = prior_precision([flat, *self._doubts.precisions[1:]])
         log, chi2 = equations.log_evidence(prior)
         value, u = equations.freedom(size, prior) if extras else (None, None)
         return _Weighed(cause, about, float(log[0]) + float(np.log(_PRIOR[cause] * share)), value, u, float(chi2[0]))
@@ -217,11 +231,11 @@ def _not_repeating(table: DriveTable, lawless: _Lawless) -> Iterator[_Weighed]:
     yield lawless.weigh("not-repeating", "", restless, 0.3)
 
 
-def _limiting(table: DriveTable) -> list[_Weighed]:
+def _limiting(table: DriveTable, doubts: _Doubts) -> list[_Weighed]:
     """Return the rivals in which gain drops with the level at the output, at the input, and at port 2."""
     causes: tuple[Cause, ...] = ("output-limited", "input-limited", "receiver-overload")
     laws = ((Law("tanh"), 0.1), (Law("cubic"), 0.1), (None, 0.8))
-    every = [_LawSearch(table, cause, law, share) for cause in causes for law, share in laws]
+    every = [_LawSearch(table, doubts, cause, law, share) for cause in causes for law, share in laws]
     live = every
     for places, shapes in _GRIDS:
         for search in live:
@@ -266,21 +280,20 @@ class _LawSearch:
     `between` how much better a point between the nodes may be.
     """
 
-    def __init__(self, table: DriveTable, cause: Cause, law: Law | None, share: float) -> None:
+    def __init__(self, table: DriveTable, doubts: _Doubts, cause: Cause, law: Law | None, share: float) -> None:
         self.table, self.cause, self.law = table, cause, law
         self._offset = _level_offset(table, cause)
         strongest = float(np.max(self._offset + (0.0 if cause == "input-limited" else table.gain_db)))
         self._low, self._high = strongest - _REACH_BELOW_DB, strongest + _REACH_ABOVE_DB
         self._soft, self._hard = float(np.log(SOFTEST_P)), float(np.log(HARDEST_P))
-        patterns, covariances = _doubts(table)
-        law_out = [_LAW_DOUBT**2 * np.eye(table.sweeps)]
-        detuned = [_DETUNING**2 * np.eye(table.sweeps)]
-        self._patterns = patterns
+        law_out, detuned = (np.eye(table.sweeps) / spread**2 for spread in (_LAW_DOUBT, _DETUNING))
+        self._patterns = doubts.patterns
         # A tuned output that limits may also be pulled in tune; that is one of two ways, not a freedom for all.
         output = cause == "output-limited"
-        self._priors = [(share * (1.0 - _DETUNES_SHARE if output else 1.0), prior_precision([*covariances, *law_out]))]
+        plain = [*doubts.precisions, law_out]
+        self._priors = [(share * (1.0 - _DETUNES_SHARE if output else 1.0), prior_precision(plain))]
         if output:
-            self._priors.append((share * _DETUNES_SHARE, prior_precision([*covariances, *law_out, *detuned])))
+            self._priors.append((share * _DETUNES_SHARE, prior_precision([*plain, detuned])))
         self.ways: list[_Weighed] = []
         self.log_best, self.between = -np.inf, 0.0
 
@@ -380,6 +393,9 @@ def _fit_gain(
         slope = np.clip(1.0 - rate, 0.05, 1.0)
         moves = weight * slope
         move = np.sum(moves * (gain - own + drop), axis=1, keepdims=True)
-        own = own + np.clip(move / np.sum(moves * slope, axis=1, keepdims=True), -5.0, 5.0)
+        move = np.clip(move / np.sum(moves * slope, axis=1, keepdims=True), -5.0, 5.0)
+        own = own + move
+        if np.max(np.abs(move)) < _STILL_DB:
+            break
     drop, rate = drop_of(base + own)
     return gain - own + drop, np.clip(1.0 - rate, 0.05, 1.0), drop

@@ -17,7 +17,8 @@ from typing import Final, Protocol
 import numpy as np
 
 from benchtool.compression import MeasuredSweep
-from benchtool.doubts import Draws, SweepDoubts
+from benchtool.doubts import SweepDoubts
+from benchtool.draws import Draws
 from benchtool.model import Bound, Figure, Finding, FloatArray
 from benchtool.pads import PadBank
 from benchtool.propagation import BLOCK, coverage_interval, run_blocks

@@ -18,8 +18,8 @@ def readings():
     left = rng.normal(0.0, 0.4, (1, SWEEPS, NODES))
     columns = rng.normal(0.0, 1.0, (1, SWEEPS, FREEDOMS, NODES))
     root = rng.normal(0.0, 0.5, (FREEDOMS, SWEEPS, SWEEPS))
-    covariances = [np.asarray(each @ each.T + 0.05 * np.eye(SWEEPS)) for each in root]
-    return weight, left, columns, covariances
+    precisions = [np.linalg.inv(each @ each.T + 0.05 * np.eye(SWEEPS)) for each in root]
+    return weight, left, columns, precisions
 
 
 def design(columns):
@@ -33,11 +33,11 @@ def design(columns):
 def test_evidence_is_the_density_of_what_the_gains_of_the_nodes_leave(readings):
     # With a flat prior on the gain of each node the evidence is the density of the contrasts between sweeps, which are
     # normal; scipy.stats.multivariate_normal is the reference.
-    weight, left, columns, covariances = readings
+    weight, left, columns, precisions = readings
     equations = normal_equations(weight, np.ones_like(left), left, columns)
-    found, _ = equations.log_evidence(prior_precision(covariances))
+    found, _ = equations.log_evidence(prior_precision(precisions))
     matrix, gains = design(columns), np.tile(np.eye(NODES), (SWEEPS, 1))
-    prior = np.linalg.inv(prior_precision(covariances))
+    prior = np.linalg.inv(prior_precision(precisions))
     covariance = np.diag(1.0 / weight.ravel()) + matrix @ prior @ matrix.T
     contrasts = null_space(gains.T)
     density = multivariate_normal(cov=contrasts.T @ covariance @ contrasts).logpdf(contrasts.T @ left.ravel())
@@ -47,11 +47,11 @@ def test_evidence_is_the_density_of_what_the_gains_of_the_nodes_leave(readings):
 
 
 def test_misfit_is_that_of_generalised_least_squares(readings):
-    weight, left, columns, covariances = readings
+    weight, left, columns, precisions = readings
     slope = np.linspace(0.2, 1.0, left.size).reshape(left.shape)
-    _, chi2 = normal_equations(weight, slope, left, columns).log_evidence(prior_precision(covariances))
+    _, chi2 = normal_equations(weight, slope, left, columns).log_evidence(prior_precision(precisions))
     matrix = design(columns)
-    prior = np.linalg.inv(prior_precision(covariances))
+    prior = np.linalg.inv(prior_precision(precisions))
     inverse = np.linalg.inv(np.diag(1.0 / weight.ravel()) + matrix @ prior @ matrix.T)
     moves = (np.tile(np.eye(NODES), (SWEEPS, 1)) * slope.reshape(-1, 1)).reshape(SWEEPS * NODES, NODES)
     best = np.linalg.solve(moves.T @ inverse @ moves, moves.T @ inverse @ left.ravel())
@@ -60,8 +60,8 @@ def test_misfit_is_that_of_generalised_least_squares(readings):
 
 
 def test_a_gain_common_to_all_sweeps_changes_nothing(readings):
-    weight, left, columns, covariances = readings
-    prior = prior_precision(covariances)
+    weight, left, columns, precisions = readings
+    prior = prior_precision(precisions)
     one = np.ones_like(left)
     shifted = left + np.array([3.0, -2.0, 0.5, 7.0])
     before = normal_equations(weight, one, left, columns).log_evidence(prior)

@@ -48,6 +48,7 @@ LAYERS = [
     "figures",
     "propagation",
     "doubts",
+    "draws",
     "digits",
     "compression",
     "uncertainty",
