@@ -23,6 +23,8 @@ COMPRESSED_DB: Final = 1.0
 """A sweep further down than this is called compressed (the 1 dB compression point, common practice)."""
 _REFERENCE_SNR_DB: Final = 30.0
 """Signal to noise at the peak that a sweep needs to serve as the reference: 0.27 dB on a single sample."""
+_NO_SIGNAL_DB: Final = -300.0
+"""Stands for the level of a sweep that reads zero, so that differences of levels stay numbers."""
 _BAND_NODES: Final = 41
 _SAME_DRIVE_DB: Final = 0.01
 
@@ -79,6 +81,10 @@ def choose_reference(sweeps: Sequence[MeasuredSweep]) -> tuple[MeasuredSweep, st
     return ordered[best], "every sweep is noisy, and this one least"
 
 
+def _level_db(value: complex | ComplexArray) -> FloatArray:
+    return np.asarray(np.maximum(to_db(np.asarray(value)), _NO_SIGNAL_DB))
+
+
 def _over_band(sweep: Sweep, plan: FigurePlan, nodes: FloatArray) -> ComplexArray:
     """Return S21 of a sweep at the nodes, (g,), from its own smooth curve."""
     curve, low, high = plan.passband.curve, float(nodes[0]), float(nodes[-1])
@@ -86,7 +92,7 @@ def _over_band(sweep: Sweep, plan: FigurePlan, nodes: FloatArray) -> ComplexArra
         curve = fit_curve(sweep.frequency_hz, sweep.s21, low, high, plan.noise.get("S21"))
     value, _ = curve.on_grid(sweep.s21)
     turned = np.unwrap(np.angle(value))
-    level = np.interp(nodes, curve.grid_hz, to_db(value))
+    level = np.interp(nodes, curve.grid_hz, _level_db(value))
     return np.asarray(10.0 ** (level / 20.0) * np.exp(1j * np.interp(nodes, curve.grid_hz, turned)))
 
 
@@ -119,19 +125,19 @@ def compare_drives(
     for sweep in sweeps:
         path = sweep.result.path
         here, peak = _at(sweep, at_hz), _at(sweep, peak_hz)
-        change = to_db(base) - to_db(_over_band(sweep.result.sweep, sweep.plan, nodes))
+        change = _level_db(base) - _level_db(_over_band(sweep.result.sweep, sweep.plan, nodes))
         worst = int(np.argmax(change))
-        drop = to_db(base_at) - to_db(here)
+        drop = float(_level_db(base_at) - _level_db(here))
         deepest = max(float(change[worst]), drop)
         points.append(
             CompressionPoint(
                 sweep.file,
                 path.drive_dbm,
                 path.device_output_dbm,
-                to_db(here),
+                float(_level_db(here)),
                 drop,
                 float(wrap_degrees(float(np.degrees(np.angle(here * np.conj(base_at)))))),
-                to_db(base_peak) - to_db(peak),
+                float(_level_db(base_peak) - _level_db(peak)),
                 deepest,
                 float(nodes[worst]) if deepest > drop else at_hz,
                 sweep is not reference and deepest > COMPRESSED_DB,
