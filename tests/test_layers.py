@@ -56,6 +56,7 @@ LAYERS = [
     "drive_doubts",
     "drive_table",
     "evidence",
+    "law_search",
     "rivals",
     "onset_belief",
     "causes",

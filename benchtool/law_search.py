@@ -1,0 +1,279 @@
+"""A drive table in; how likely it is that its gain changes are limiting, and where the 1 dB point then lies, out.
+
+Limiting at the output, at the input or in the receiver is a law of limiting over the level there (see
+:mod:`benchtool.rivals` for the whole model). The evidence is a sum over the 1 dB point and, for Rapp's law, over p on a
+grid that closes in on the likely part; a law that cannot catch up with the best any more is not looked at more closely.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Final, Literal, TypeAlias
+
+import numpy as np
+from numpy.typing import NDArray
+
+from benchtool.drive_table import DriveTable
+from benchtool.evidence import NormalEquations, normal_equations, prior_precision
+from benchtool.limiting import HARDEST_P, SOFTEST_P, Law, rapp_drop_and_slope
+from benchtool.model import FloatArray
+
+__all__ = ["PRIOR", "Cause", "Doubts", "Weighed", "flat_precision", "merge", "weigh_limiting"]
+
+Cause: TypeAlias = Literal[
+    "clean", "output-limited", "input-limited", "receiver-overload", "pad-value", "not-repeating"
+]
+
+PRIOR: Final[Mapping[Cause, float]] = {
+    "clean": 0.4,
+    "output-limited": 0.15,
+    "input-limited": 0.1,
+    "receiver-overload": 0.15,
+    "pad-value": 0.1,
+    "not-repeating": 0.1,
+}
+"""How likely each cause is before anything was measured."""
+_REACH_BELOW_DB: Final = 25.0
+_REACH_ABOVE_DB: Final = 6.0
+"""How far below and above the strongest level the 1 dB point may lie."""
+_LEAST_DROP_DB: Final = 0.2
+"""A drop that is worth a cause."""
+_LAW_DOUBT: Final = 0.02
+_LAW_ROUGHNESS: Final = 0.005
+"""Share of a drop by which real devices stray from every law: alike over one sweep, and from node to node."""
+_DETUNING: Final = 0.1
+"""Standard deviation of how far limiting tunes a device off, in hundredths of the span of the nodes for each dB."""
+_DETUNES_SHARE: Final = 0.3
+"""Share of belief that it does so at all."""
+_RECEIVER_AT_DB: Final = 1.0
+_RECEIVER_SPREAD_DB: Final = 3.0
+"""The 1 dB point of the receiver over the level from which it is stated to compress: mean and standard deviation."""
+_RECEIVER_UNSTATED: Final = (0.0, 7.0)
+"""The 1 dB point in dBm of a low-cost receiver of which nothing is stated: mean and standard deviation (common
+practice, no source)."""
+_LEAST_U_DB: Final = 0.005
+_GRIDS: Final = ((21, 5), (21, 7), (31, 9))
+"""Places of the 1 dB point, and values of Rapp's p, that each look takes in."""
+_NEWTON_STEPS: Final = 6
+_STILL_DB: Final = 1e-6
+_MATTERS: Final = 12.0
+_HOPELESS: Final = 30.0
+"""Logarithm of how much less likely than the best a law may be and still be looked at more closely."""
+
+
+@dataclass(frozen=True)
+class Weighed:
+    """A rival with the logarithm of prior times evidence, before all are normalised."""
+
+    cause: Cause
+    about: str
+    log_weight: float
+    value: float | None
+    u: float | None
+    chi2: float
+
+
+def flat_precision(table: DriveTable, but_for: str = "") -> FloatArray:
+    """Return the precision (k, k) of the flat doubts of the sweeps: readings, and pads but for one."""
+    covariance = np.diag(table.reading_u_db**2 + _LEAST_U_DB**2)
+    for pad in table.pads:
+        if pad.name == but_for:
+            continue
+        reads = pad.reads - pad.reads[0]
+        covariance = covariance + pad.u_db**2 * np.outer(reads, reads)
+    return np.asarray(np.linalg.inv(covariance))
+
+
+@dataclass(frozen=True, eq=False)
+class Doubts:
+    """What flat doubts, first, and the forms of mismatch add to the nodes of a sweep, and their precisions."""
+
+    patterns: FloatArray
+    """(c, j)."""
+    precisions: tuple[FloatArray, ...]
+    """(k, k) each, between the sweeps."""
+
+    @classmethod
+    def of(cls, table: DriveTable) -> Doubts:
+        """Return the doubts of a drive table."""
+        patterns, precisions = [np.ones(table.frequency_hz.size)], [flat_precision(table)]
+        for form in table.mismatch:
+            between = form.between
+            # What equal lines have in common goes with the gain of the device, which is free.
+            if np.max(np.abs(between)) > _LEAST_U_DB**2:
+                patterns.append(form.pattern)
+                precisions.append(
+                    np.asarray(np.linalg.inv(between + _LEAST_U_DB**2 * np.eye(table.sweeps)), np.float64)
+                )
+        return cls(np.array(patterns), tuple(precisions))
+
+
+def weigh_limiting(table: DriveTable, doubts: Doubts) -> list[Weighed]:
+    """Return the rivals in which gain drops with the level at the output, at the input, and at port 2."""
+    causes: tuple[Cause, ...] = ("output-limited", "input-limited", "receiver-overload")
+    laws = ((Law("tanh"), 0.1), (Law("cubic"), 0.1), (None, 0.8))
+    every = [_LawSearch(table, doubts, cause, law, share) for cause in causes for law, share in laws]
+    live = every
+    for places, shapes in _GRIDS:
+        for search in live:
+            search.look(places, shapes)
+        top = max(search.log_best for search in live)
+        live = [search for search in live if search.log_best + search.between > top - _HOPELESS]
+    return [merge(cause, "", [way for s in every if s.cause == cause for way in s.ways]) for cause in causes]
+
+
+def merge(cause: Cause, about: str, parts: Sequence[Weighed]) -> Weighed:
+    """Return variants of one rival as one: weights added, the estimate a mixture."""
+    parts = [part for part in parts if part.value is not None]
+    if not parts:
+        return Weighed(cause, about, -np.inf, None, None, float("inf"))
+    total = float(np.logaddexp.reduce([part.log_weight for part in parts]))
+    belief = np.exp([part.log_weight - total for part in parts])
+    places, spreads = np.array([part.value for part in parts]), np.array([part.u for part in parts])
+    value = float(belief @ places)
+    u = float(np.sqrt(belief @ (spreads**2 + (places - value) ** 2)))
+    return Weighed(cause, about, total, value, u, min(part.chi2 for part in parts))
+
+
+def _level_offset(table: DriveTable, cause: Cause) -> FloatArray:
+    """Return drive, less output pads where the receiver counts, (k, j): level less the gain that it follows."""
+    return table.drive_dbm - (table.output_loss_db[:, None] if cause == "receiver-overload" else 0.0)
+
+
+def _log_level_prior(table: DriveTable, cause: Cause, p1db: FloatArray) -> FloatArray:
+    """Return the logarithm of the density of the 1 dB point, per dB."""
+    if cause != "receiver-overload" or not table.levels_known:
+        return np.full(p1db.shape, -np.log(_REACH_BELOW_DB + _REACH_ABOVE_DB))
+    stated = table.port2_compression_dbm
+    mean, spread = _RECEIVER_UNSTATED if stated is None else (stated + _RECEIVER_AT_DB, _RECEIVER_SPREAD_DB)
+    spread = float(np.hypot(spread, table.source_half_width_db))
+    return np.asarray(-0.5 * ((p1db - mean) / spread) ** 2 - np.log(spread * np.sqrt(2 * np.pi)))
+
+
+class _LawSearch:
+    """The evidence of one cause by one law, summed over the 1 dB point and, where `law` is None, over Rapp's p.
+
+    Each look takes in a grid and closes in on its likely part. `log_best` is the best log weight that it saw,
+    `between` how much better a point between the nodes may be.
+    """
+
+    def __init__(self, table: DriveTable, doubts: Doubts, cause: Cause, law: Law | None, share: float) -> None:
+        self.table, self.cause, self.law = table, cause, law
+        self._offset = _level_offset(table, cause)
+        strongest = float(np.max(self._offset + (0.0 if cause == "input-limited" else table.gain_db)))
+        self._low, self._high = strongest - _REACH_BELOW_DB, strongest + _REACH_ABOVE_DB
+        self._soft, self._hard = float(np.log(SOFTEST_P)), float(np.log(HARDEST_P))
+        law_out, detuned = (np.eye(table.sweeps) / spread**2 for spread in (_LAW_DOUBT, _DETUNING))
+        self._patterns = doubts.patterns
+        # A tuned output that limits may also be pulled in tune; that is one of two ways, not a freedom for all.
+        output = cause == "output-limited"
+        plain = [*doubts.precisions, law_out]
+        self._priors = [(share * (1.0 - _DETUNES_SHARE if output else 1.0), prior_precision(plain))]
+        if output:
+            self._priors.append((share * _DETUNES_SHARE, prior_precision([*plain, detuned])))
+        self.ways: list[Weighed] = []
+        self.log_best, self.between = -np.inf, 0.0
+
+    def look(self, places: int, shapes: int) -> None:
+        """Weigh a grid of so many 1 dB points and values of p, and close in."""
+        place = np.linspace(self._low, self._high, places)
+        shape = np.linspace(self._soft, self._hard, shapes if self.law is None else 1)
+        p1db, log_p = np.repeat(place, shape.size), np.tile(shape, place.size)
+        left, slope, drop = _fit_gain(self.table, self._offset, p1db, log_p, self.law, self.cause != "input-limited")
+        cell = float(place[1] - place[0])
+        if self.law is None:
+            cell *= float(shape[1] - shape[0]) / float(np.log(HARDEST_P / SOFTEST_P))
+        seen = np.max(drop, axis=(1, 2)) >= _LEAST_DROP_DB
+        prior = np.where(seen, _log_level_prior(self.table, self.cause, p1db), -np.inf)
+        self.ways, self.log_best, self.between = [], -np.inf, 0.0
+        matters = np.zeros((place.size, shape.size), np.bool_)
+        if not np.any(seen):
+            return
+        every = self._equations(left, slope, drop)
+        for share, precision in self._priors:
+            log, chi2 = every[len(self.ways)].log_evidence(precision)
+            log = log + prior + np.log(share * PRIOR[self.cause])
+            self.ways.append(_summed(self.cause, log, p1db, chi2, cell))
+            grid = log.reshape(place.size, shape.size)
+            matters |= grid > np.max(grid) - _MATTERS
+            if np.max(log) > self.log_best:
+                self.log_best, self.between = float(np.max(log)), _between(grid)
+        rows, columns = np.nonzero(matters)
+        self._low, self._high = _close_in(place, rows)
+        self._soft, self._hard = _close_in(shape, columns) if self.law is None else (self._soft, self._hard)
+
+    def _equations(self, left: FloatArray, slope: FloatArray, drop: FloatArray) -> list[NormalEquations]:
+        """Return the equations of each way: with the doubts and how far the law may be out, and, detuned, its pull."""
+        copies, sweeps, nodes = drop.shape
+        c = len(self._patterns)
+        columns = np.empty((copies, sweeps, c + len(self._priors), nodes))
+        columns[:, :, :c] = self._patterns
+        columns[:, :, c] = drop
+        if len(self._priors) > 1:
+            columns[:, :, c + 1] = np.max(drop, axis=2)[..., None] * self.table.slope_db
+        weight = 1.0 / (self.table.noise_db**2 + (_LAW_ROUGHNESS * drop) ** 2)
+        whole = normal_equations(weight, slope, left, columns)
+        if len(self._priors) == 1:
+            return [whole]
+        plain = np.arange(sweeps * (c + 2)).reshape(sweeps, c + 2)[:, : c + 1].ravel()
+        return [whole.only(plain), whole]
+
+
+def _summed(cause: Cause, log: FloatArray, p1db: FloatArray, chi2: FloatArray, cell: float) -> Weighed:
+    """Return the sum of a grid of log weights (G,), with mean and spread of the 1 dB point over it."""
+    best = float(np.max(log))
+    belief = np.exp(log - best)
+    total = float(np.sum(belief))
+    belief /= total
+    value = float(belief @ p1db)
+    u = float(np.sqrt(belief @ (p1db - value) ** 2))
+    return Weighed(cause, "", best + float(np.log(total * cell)), value, u, float(chi2[int(np.argmax(log))]))
+
+
+def _between(grid: FloatArray) -> float:
+    """Return how far the peak between the nodes may stand above the largest node of a grid of logarithms.
+
+    For a parabola that is an eighth of the second difference at most; the first differences are taken whole.
+    """
+    row, column = np.unravel_index(int(np.argmax(grid)), grid.shape)
+    rise = 0.0
+    for line, at in ((grid[:, column], int(row)), (grid[row], int(column))):
+        steps = [line[at] - line[near] for near in (at - 1, at + 1) if 0 <= near < line.size]
+        rise += max(steps, default=0.0)
+    return float(rise)
+
+
+def _close_in(axis: FloatArray, used: NDArray[np.signedinteger]) -> tuple[float, float]:
+    return float(axis[max(int(np.min(used)) - 1, 0)]), float(axis[min(int(np.max(used)) + 1, axis.size - 1)])
+
+
+def _fit_gain(
+    table: DriveTable, offset: FloatArray, p1db: FloatArray, log_p: FloatArray, law: Law | None, follows: bool
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return what is left of the gain after the drop, its slope with g_j, and the drop, (G, k, j) each."""
+    p = np.exp(log_p)[:, None, None]
+
+    def drop_of(excess: FloatArray) -> tuple[FloatArray, FloatArray]:
+        return rapp_drop_and_slope(excess, p) if law is None else law.drop_and_slope_past_p1db(excess)
+
+    gain, weight = table.gain_db[None], 1.0 / table.noise_db[None] ** 2
+    base = offset[None] - p1db[:, None, None]
+    if not follows:
+        # The level is the same at every node but for a tilt of the source, and does not depend on g_j.
+        drop, _ = drop_of(base)
+        raised = gain + drop
+        own = np.sum(weight * raised, axis=1, keepdims=True) / np.sum(weight, axis=1, keepdims=True)
+        return raised - own, np.ones_like(drop), drop
+    own = np.repeat(np.max(gain, axis=1, keepdims=True), p1db.size, axis=0)
+    for _ in range(_NEWTON_STEPS):
+        drop, rate = drop_of(base + own)
+        slope = np.clip(1.0 - rate, 0.05, 1.0)
+        moves = weight * slope
+        move = np.sum(moves * (gain - own + drop), axis=1, keepdims=True)
+        move = np.clip(move / np.sum(moves * slope, axis=1, keepdims=True), -5.0, 5.0)
+        own = own + move
+        if np.max(np.abs(move)) < _STILL_DB:
+            break
+    drop, rate = drop_of(base + own)
+    return gain - own + drop, np.clip(1.0 - rate, 0.05, 1.0), drop
