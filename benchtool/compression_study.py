@@ -12,7 +12,8 @@ from typing import Final
 
 import numpy as np
 
-from benchtool.causes import CauseVerdict, allowances, cause_finding, find_cause
+from benchtool.cause_findings import cause_finding
+from benchtool.causes import CauseVerdict, allowances, find_cause
 from benchtool.compression import MeasuredSweep
 from benchtool.drive_results import CompressionMap, Estimate, Onset
 from benchtool.drive_table import DriveTable, drive_table

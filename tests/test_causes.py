@@ -10,7 +10,8 @@ import numpy as np
 import pytest
 from numpy.testing import assert_allclose
 
-from benchtool.causes import cause_finding, find_cause
+from benchtool.cause_findings import cause_finding
+from benchtool.causes import find_cause
 from benchtool.compression_study import onset_figures, study_compression
 from benchtool.drive_table import DriveTable, PadDoubt, drive_table
 from benchtool.limiting import Law

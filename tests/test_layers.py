@@ -57,6 +57,7 @@ LAYERS = [
     "rivals",
     "onset_belief",
     "causes",
+    "cause_findings",
     "onset",
     "compression_study",
     "pad_stock",
