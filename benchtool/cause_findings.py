@@ -172,7 +172,10 @@ def _input_or_pad(table: DriveTable, verdict: CauseVerdict) -> Finding:
         f"{_shown(seen)}, alike over the sweep: either the device limits ahead of its selectivity (probability "
         f"{p['input-limited']:.2f}){as_pad} (probability {p['pad-value']:.2f}); that a sweep did not repeat has "
         f"{p['not-repeating']:.2f}",
-        f"sweep again at the drive of {seen.low} with other pads: if gain agrees the device limits, else a pad is off",
+        f"measure pad {pad.name} as a .s2p file and enter it in the sheet: if it loses what the sheet says, the device "
+        "limits"
+        if pad
+        else f"sweep again at the drive of {seen.high} with other pads",
         seen.high,
     )
 
@@ -216,7 +219,7 @@ def _unclear(table: DriveTable, verdict: CauseVerdict) -> Finding:
         "cause-unclear",
         "caution",
         f"{_shown(_evidence(table))}; {_rivals_left(verdict)}",
-        "`benchtool next` names the sweeps that would settle it",
+        "let the bench warm up, check pads and connectors, then sweep every line of the device again",
     )
 
 

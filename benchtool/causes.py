@@ -16,6 +16,7 @@ from typing import Final, Literal, TypeAlias
 import numpy as np
 from scipy.special import gammaincc
 
+from benchtool.compression import COMPRESSED_DB
 from benchtool.drive_results import PadEstimate
 from benchtool.drive_table import DriveTable
 from benchtool.model import FloatArray
@@ -32,6 +33,7 @@ __all__ = [
     "allowances",
     "find_cause",
     "receiver_drop",
+    "set_aside",
 ]
 
 CauseCode: TypeAlias = Literal[
@@ -182,3 +184,27 @@ def receiver_drop(table: DriveTable, verdict: CauseVerdict) -> FloatArray:
     level = table.drive_dbm + table.gain_db - table.output_loss_db[:, None] - receiver.value
     # Rapp with p = 1, soft enough that a sweep kept is a sweep unspoiled.
     return np.asarray(10.0 * np.log10(1.0 + 0.2589 * 10.0 ** (np.max(level, axis=1) / 10.0)))
+
+
+def set_aside(table: DriveTable, verdict: CauseVerdict, reference: str) -> Mapping[str, str]:
+    """Return the sweeps whose gain the named cause explains without the device compressing: file, and why.
+
+    With a pad that is off these are the sweeps through it, but for any that reads lower than the pad can account for.
+    """
+    if verdict.code == "reference-not-repeating":
+        odd = [verdict.odd_sweep] if verdict.odd_sweep else [file for file in table.files if file != reference]
+        return dict.fromkeys(odd, "did not repeat")
+    if verdict.code == "receiver-overload":
+        lost = receiver_drop(table, verdict)
+        return {
+            file: "receiver overloaded" for file, drop in zip(table.files, lost, strict=True) if drop >= UNSPOILED_DB
+        }
+    if verdict.code == "pad-value-suspect" and verdict.pads:
+        suspect = verdict.pads[0]
+        reads = next(pad.reads for pad in table.pads if pad.name == suspect.name)
+        base = table.files.index(reference)
+        drop = np.max(table.gain_db[base] - table.gain_db, axis=1)
+        drop += (reads - reads[base]) * (suspect.value_db - suspect.stated_db)
+        through = (reads != 0.0) & (drop <= COMPRESSED_DB)
+        return {file: f"pad {suspect.name} suspect" for file, is_so in zip(table.files, through, strict=True) if is_so}
+    return {}

@@ -62,6 +62,7 @@ LAYERS = [
     "compression_study",
     "pad_stock",
     "planning",
+    "advice",
     "small_signal",
     "findings",
     "verdict",
