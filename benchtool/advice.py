@@ -19,6 +19,7 @@ __all__ = ["agreed", "onset_advice", "reference_finding", "sweep_words"]
 
 _MATTERS_DB: Final = 0.2
 """A reference that cannot read lower than this by compression needs no caution."""
+_LEAST_SHOWN_DB: Final = 0.01
 
 _Plan = Mapping[Purpose, NextSweep]
 
@@ -134,6 +135,8 @@ def reference_finding(onset: Onset, verdict: CauseVerdict | None, planned: Seque
 def _reads_low(low: Estimate) -> str:
     if low.high is None:
         return "nothing shows that it is not compressed: there is no second drive to compare it with"
+    if low.high < _LEAST_SHOWN_DB:
+        return f"its gain reads low by less than {_LEAST_SHOWN_DB} dB"
     if low.low is None or low.high <= SAFE_DROP_DB:
         return f"its gain reads low by no more than {low.high:.2f} dB"
     return f"its gain may read low by {low.low:.2f} to {low.high:.2f} dB"

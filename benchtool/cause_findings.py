@@ -12,7 +12,7 @@ from typing import Final
 import numpy as np
 
 from benchtool.causes import NAMED, STILL_POSSIBLE, UNSPOILED_DB, CauseCode, CauseVerdict, receiver_drop
-from benchtool.digits import level_text
+from benchtool.digits import decibels, level_text, quantity
 from benchtool.drive_results import PadEstimate
 from benchtool.drive_table import DriveTable
 from benchtool.model import Finding
@@ -145,7 +145,8 @@ def _receiver_advice(table: DriveTable, verdict: CauseVerdict, worst: int) -> st
 
 
 def _pad_text(pad: PadEstimate) -> str:
-    return f"{pad.name} loses {pad.value_db:.2f} dB ({pad.low_db:.2f} to {pad.high_db:.2f}), not {pad.stated_db:g} dB"
+    low, high = (quantity(end, "dB").removesuffix(" dB") for end in (pad.low_db, pad.high_db))
+    return f"{pad.name} loses {quantity(pad.value_db, 'dB')} ({low} to {high}), not {decibels(pad.stated_db)}"
 
 
 def _pad_value(table: DriveTable, verdict: CauseVerdict) -> Finding:
