@@ -76,6 +76,7 @@ LAYERS = [
     "page_sweeps",
     "page_gain",
     "page_panel",
+    "page_marks",
     "page_drive",
     "page_map",
     "page_panels",
