@@ -87,11 +87,11 @@ def _separate(advice: str, verdict: CauseVerdict, onset: Onset, plan: _Plan) -> 
 
 
 def _keep_below(advice: str, verdict: CauseVerdict, onset: Onset, plan: _Plan) -> str:
-    """Return what to do about a device that limits: figures from a safe drive, and what would prove one."""
-    if onset.reference.proven or "prove-reference" not in plan:
-        return advice
-    lower = sweep_words(plan["prove-reference"], outputs=False)
-    return f"{advice}; to prove {onset.reference.file} small-signal, sweep with {lower}"
+    """Return what to do about a device that limits: figures from a safe drive, and how to know it better."""
+    if not onset.reference.proven and "prove-reference" in plan:
+        lower = sweep_words(plan["prove-reference"], outputs=False)
+        return f"{advice}; to prove {onset.reference.file} small-signal, sweep with {lower}"
+    return f"{advice}; {_told(plan['bracket-onset'])}" if "bracket-onset" in plan else advice
 
 
 _ADVICE: Final[Mapping[CauseCode, Callable[[str, CauseVerdict, Onset, _Plan], str]]] = {

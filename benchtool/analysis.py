@@ -212,7 +212,7 @@ def analyse_device(
         results,
         compression,
         findings,
-        summarise(results, figures, findings),
+        summarise(results, figures, findings, drive is not None and bool(drive.next_sweeps)),
         drive,
         tuple(f"{item.what} {item.value_db:g} dB" for item in assumptions(sheet, used, bank)),
         trial.trials,

@@ -124,24 +124,30 @@ def _receiver(table: DriveTable, verdict: CauseVerdict) -> Finding:
         "caution",
         f"the analyzer's receiver compresses ({_sure(verdict)}): {_shown(seen)}, and the drop follows the level at "
         f"port 2{where}",
-        _receiver_advice(table, verdict, table.files.index(seen.high)),
+        _receiver_advice(table, verdict),
         seen.high,
     )
 
 
-def _receiver_advice(table: DriveTable, verdict: CauseVerdict, worst: int) -> str:
-    """Return which sweep with more output pad to trust instead of the worst, or what to sweep where there is none."""
+def _receiver_advice(table: DriveTable, verdict: CauseVerdict) -> str:
+    """Return which sweep with more output pad to trust instead of the worst, or what would help where there is none."""
+    lost = receiver_drop(table, verdict)
+    worst = int(np.argmax(lost))
     more_db = table.output_loss_db - table.output_loss_db[worst]
     padded = [k for k in range(table.sweeps) if more_db[k] > _MORE_PAD_DB]
-    lost = receiver_drop(table, verdict)
     sound = [k for k in padded if lost[k] < UNSPOILED_DB]
     if sound:
         drive = np.mean(table.drive_dbm, axis=1)
         best = min(sound, key=lambda k: abs(float(drive[k] - drive[worst])))
         alike = "at the same drive" if abs(drive[best] - drive[worst]) < _SAME_DRIVE_DB else "at another drive"
         return f"trust {table.files[best]}, swept with {more_db[best]:.0f} dB more output pad {alike}"
-    than = f" than {table.files[max(padded, key=lambda k: more_db[k])]} had" if padded else ""
-    return f"sweep again with 10 dB more output pad{than} and enter it in the sheet; more input pad would only hide it"
+    if padded:
+        most = table.files[max(padded, key=lambda k: more_db[k])]
+        return (
+            f"take figures from a sweep with less level at port 2: {most} had not enough output pad to relieve the "
+            "receiver, and more input pad would only hide it"
+        )
+    return "sweep again with 10 dB more output pad and enter it in the sheet; more input pad would only hide it"
 
 
 def _pad_text(pad: PadEstimate) -> str:

@@ -137,11 +137,14 @@ _BEFORE_FIGURES: Final = (
 """Findings to be settled before it is worth narrowing a figure."""
 
 
-def summarise(targets: Sequence[TargetResult], figures: Mapping[str, Figure], findings: Sequence[Finding]) -> Summary:
+def summarise(
+    targets: Sequence[TargetResult], figures: Mapping[str, Figure], findings: Sequence[Finding], planned: bool = False
+) -> Summary:
     """Return the verdict of a device, the reason in one sentence, and the next step in one sentence.
 
     `findings` are sorted worst first; the worst that is more than a note gives the next step. For a target that is
-    undecided what would decide it comes before that, unless the bench itself is in question.
+    undecided what would decide it comes before that, unless the bench itself is in question. `planned` says that
+    there are sweeps worth taking though nothing calls for them.
     """
     verdict = overall([target.verdict for target in targets])
     doubts = [finding for finding in findings if finding.severity != "note"]
@@ -166,5 +169,5 @@ def summarise(targets: Sequence[TargetResult], figures: Mapping[str, Figure], fi
     elif verdict == "none":
         step = "set targets in the sheet to have them judged"
     else:
-        step = "nothing: file this page"
+        step = "nothing: file this page" + ("; `benchtool next` has what would tell more" if planned else "")
     return Summary(verdict, reason, f"{step[0].upper()}{step[1:]}.")

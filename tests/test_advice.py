@@ -66,7 +66,7 @@ LINE = "b10, a20 at the input and c10 at the output (−38.0 dBm drive)"
             ["prove-reference"],
             "as it was; to prove low.s2p small-signal, sweep with b10, a20 at the input (−38.0 dBm drive)",
         ),
-        ("output-limited", ["bracket-onset"], "as it was"),
+        ("output-limited", ["bracket-onset"], f"as it was; sweep with {LINE}: it shows (bracket-onset)"),
         *[
             (code, [], "as it was")
             for code in ("input-limited-or-pad", "cause-unclear", "receiver-overload", "noise-limited", "input-limited")

@@ -217,6 +217,13 @@ def test_overloaded_receiver_asks_for_pad_where_none_was_tried():
     assert finding.advice.startswith("sweep again with 10 dB more output pad and enter it")
 
 
+def test_too_little_output_pad_is_not_trusted_nor_asked_for_again():
+    told = find_cause(overloaded((-38.0, -28.0, -18.0, -18.0), (10.0, 10.0, 10.0, 20.0)))
+    seen = overloaded((-38.0, -28.0, -18.0, -18.0), (10.0, 10.0, 10.0, 12.0))
+    advice = cause_finding(seen, replace(told, code="receiver-overload")).advice
+    assert advice.startswith("take figures from a sweep with less level at port 2: s3.s2p had not enough output pad")
+
+
 def measured_bench(seed, cause="clean"):
     bench = load("bench_compression")
     made = bench.make_bench(seed, cause)

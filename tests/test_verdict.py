@@ -98,3 +98,5 @@ def test_summary_names_the_figure_and_the_way_out():
     met = TargetResult("gain", "gain", "dB", 10.0, None, "met", 1.0)
     assert summarise([met], {"gain": figure}, [finding]).next_step == "Sweep again."
     assert summarise([met], {"gain": figure}, []).next_step == "Nothing: file this page."
+    with_plan = summarise([met], {"gain": figure}, [], planned=True).next_step
+    assert with_plan == "Nothing: file this page; `benchtool next` has what would tell more."
