@@ -12,6 +12,7 @@ from typing import Final
 import numpy as np
 
 from benchtool import __version__
+from benchtool.advice import agreed, onset_advice, reference_finding
 from benchtool.compression import MeasuredSweep, choose_reference, compare_drives, signal_to_noise_db
 from benchtool.compression_study import onset_figures, study_compression
 from benchtool.doubts import SweepDoubts, assumptions, pads_that_count, sweep_doubts
@@ -22,7 +23,7 @@ from benchtool.findings import buried_parameters, device_findings, in_order
 from benchtool.joining import join_reversed, settle_ports
 from benchtool.model import BenchResult, DeviceResult, Figure, Finding, SignalPath, Sweep, SweepResult
 from benchtool.pads import PadBank, de_embed, output_reflection, signal_path
-from benchtool.planning import plan_next, reference_finding
+from benchtool.planning import plan_next
 from benchtool.response import span_of
 from benchtool.sheet import BenchSheet, Device, SweepEntry
 from benchtool.small_signal import BOUND_WHEN_COMPRESSED, carry_drive_doubt
@@ -189,7 +190,13 @@ def analyse_device(
         )
     )
     results = tuple(
-        judge(figures[key], target, values.get(key), confidence, _way_out(figures[key], sheet, bank, drive_findings))
+        judge(
+            figures[key],
+            target,
+            values.get(key),
+            confidence,
+            _way_out(figures[key], sheet, bank, drive, drive_findings),
+        )
         for key, target in zip(keys, device.targets, strict=True)
     )
     used = {pad for entry in device.sweeps for pad in pads_that_count(entry, sheet)}
@@ -205,7 +212,7 @@ def analyse_device(
         results,
         compression,
         findings,
-        summarise(results, figures, findings),
+        summarise(results, figures, findings, drive is not None and bool(drive.next_sweeps)),
         drive,
         tuple(f"{item.what} {item.value_db:g} dB" for item in assumptions(sheet, used, bank)),
         trial.trials,
@@ -249,7 +256,10 @@ def _study_drive(
     planned = plan_next(sheet, bank, device.sweeps, study, signal_to_noise_db(reference.result.sweep, reference.plan))
     # That a device limits at a high drive is worth knowing, but no doubt about figures that a proven reference gives.
     harmless = study.verdict is not None and study.verdict.device_compresses and study.onset.reference.proven
-    findings = [replace(finding, severity="note") if harmless else finding for finding in study.findings]
+    findings = [
+        replace(finding, severity="note") if harmless else finding
+        for finding in agreed(study.findings, study.verdict, study.onset, planned)
+    ]
     if device.kind == "amplifier":
         findings.insert(0, reference_finding(study.onset, study.verdict, planned))
     cause = study.verdict
@@ -262,12 +272,17 @@ def _study_drive(
         study.onset,
         study.map,
         planned,
+        study.set_aside,
     )
     return drive, tuple(findings)
 
 
-def _way_out(figure: Figure, sheet: BenchSheet, bank: PadBank, drive_findings: Sequence[Finding]) -> str:
+def _way_out(
+    figure: Figure, sheet: BenchSheet, bank: PadBank, drive: DriveStudy | None, drive_findings: Sequence[Finding]
+) -> str:
     """Return what would decide a target of this figure: a second drive where that is the doubt, else its budget's."""
+    if drive is not None and figure.id in ("input_p1db", "output_p1db"):
+        return onset_advice(drive.next_sweeps)
     unproven = [finding for finding in drive_findings if finding.code == "drive-unproven"]
     if figure.bound is not None and figure.bound == BOUND_WHEN_COMPRESSED.get(figure.id) and unproven:
         return unproven[0].advice

@@ -12,6 +12,7 @@ from typing import Final
 
 import numpy as np
 
+from benchtool.digits import level_text
 from benchtool.figures import FigurePlan
 from benchtool.fitting import fit_curve
 from benchtool.model import ComplexArray, Compression, CompressionPoint, FloatArray, Sweep, SweepResult
@@ -75,8 +76,8 @@ def choose_reference(sweeps: Sequence[MeasuredSweep]) -> tuple[MeasuredSweep, st
     for rank, (sweep, ratio) in enumerate(zip(ordered, ratios, strict=True)):
         if ratio is None or ratio >= _REFERENCE_SNR_DB:
             if rank == 0:
-                return sweep, f"it has the lowest drive, {sweep.drive_dbm:.1f} dBm"
-            return sweep, f"it has the lowest drive that noise allows, {sweep.drive_dbm:.1f} dBm"
+                return sweep, f"it has the lowest drive, {level_text(sweep.drive_dbm)}"
+            return sweep, f"it has the lowest drive that noise allows, {level_text(sweep.drive_dbm)}"
     best = int(np.argmax([ratio or 0.0 for ratio in ratios]))
     return ordered[best], "every sweep is noisy, and this one least"
 

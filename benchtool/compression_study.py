@@ -6,13 +6,14 @@ the cause leaves standing.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
 
-from benchtool.causes import CauseVerdict, allowances, cause_finding, find_cause
+from benchtool.cause_findings import cause_finding
+from benchtool.causes import CauseVerdict, allowances, find_cause, set_aside
 from benchtool.compression import MeasuredSweep
 from benchtool.drive_results import CompressionMap, Estimate, Onset
 from benchtool.drive_table import DriveTable, drive_table
@@ -36,6 +37,8 @@ class CompressionStudy:
     onset: Onset
     map: CompressionMap | None
     findings: tuple[Finding, ...]
+    set_aside: Mapping[str, str]
+    """Sweeps whose gain the cause explains without the device compressing: file, and why."""
 
 
 def study_compression(
@@ -66,7 +69,8 @@ def study_compression(
     finding = None if verdict is None else cause_finding(table, verdict)
     unknown = _onset_unknown(onset, table) if kind == "amplifier" else None
     found = tuple(each for each in (finding, unknown) if each is not None)
-    return CompressionStudy(table, verdict, onset, _map(table), found)
+    aside = {} if verdict is None else set_aside(table, verdict, reference)
+    return CompressionStudy(table, verdict, onset, _map(table), found, aside)
 
 
 def _onset_unknown(onset: Onset, table: DriveTable) -> Finding | None:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Literal, TypeAlias
 
 from benchtool.aliases import Bound, FloatArray
@@ -17,11 +17,16 @@ __all__ = [
     "NextSweep",
     "Onset",
     "PadEstimate",
+    "Purpose",
     "ReferenceProof",
 ]
 
 Basis: TypeAlias = Literal["interpolated", "fitted", "extrapolated", "bound", "none"]
 """What a 1 dB point rests on."""
+Purpose: TypeAlias = Literal[
+    "repeat", "measure-pad", "lift-signal", "relieve-receiver", "separate-causes", "prove-reference", "bracket-onset"
+]
+"""What a sweep is planned for."""
 
 
 @dataclass(frozen=True)
@@ -122,6 +127,7 @@ class NextSweep:
     headroom_db: float | None
     settles: str
     cautions: tuple[str, ...]
+    purpose: Purpose
 
 
 @dataclass(frozen=True, eq=False)
@@ -139,3 +145,5 @@ class DriveStudy:
     onset: Onset
     map: CompressionMap | None
     next_sweeps: tuple[NextSweep, ...]
+    set_aside: Mapping[str, str] = field(default_factory=dict)
+    """Sweeps whose gain the cause, and not compression of the device, explains: file, and why in a word or two."""

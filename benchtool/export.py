@@ -125,6 +125,7 @@ def _drive(device: DeviceResult) -> dict[str, Any] | None:
             }
             for pad in study.pads
         ],
+        "set_aside": dict(study.set_aside),
         "basis": onset.basis,
         "drives": onset.drives,
         "safe_drive_dbm": _estimate(onset.safe_drive_dbm),
@@ -153,6 +154,7 @@ def _drive(device: DeviceResult) -> dict[str, Any] | None:
                 "device_output_dbm": _number(sweep.device_output_dbm),
                 "port2_dbm": _number(sweep.port2_dbm),
                 "headroom_db": _number(sweep.headroom_db),
+                "purpose": sweep.purpose,
                 "settles": sweep.settles,
                 "cautions": list(sweep.cautions),
             }

@@ -12,7 +12,9 @@ from typing import Final
 
 import numpy as np
 
+from benchtool.causes import NAMED, STILL_POSSIBLE
 from benchtool.compression import MeasuredSweep, signal_to_noise_db
+from benchtool.digits import decibels, level_text, stated
 from benchtool.doubts import SweepDoubts
 from benchtool.drive_results import DriveStudy
 from benchtool.match import BURIED_UNCERTAINTY, stability
@@ -21,12 +23,30 @@ from benchtool.noise import moving_average
 from benchtool.phase import ambiguous_steps
 from benchtool.units import HALF_POWER_DB, format_si
 
-__all__ = ["SEVERITIES", "buried_parameters", "device_findings", "in_order"]
+__all__ = ["CAUSES", "SEVERITIES", "buried_parameters", "device_findings", "in_order"]
 
 SEVERITIES: Final = ("fault", "caution", "note")
+CAUSES: Final = (
+    "output-limited",
+    "input-limited",
+    "receiver-overload",
+    "pad-value-suspect",
+    "input-limited-or-pad",
+    "reference-not-repeating",
+    "noise-limited",
+    "cause-unclear",
+)
+"""Codes that tell why gain changed between sweeps."""
+_EXPLAINED: Final = ("compressed-sweep", "receiver-near-limit")
+"""Codes of what is seen, which a cause explains."""
 
 _FEW_POINTS: Final = 8
 _NEAR_LIMIT_DB: Final = 3.0
+_OUT_OF_REACH_DB: Final = 6.0
+"""A level this far below where the receiver starts to compress is out of its reach."""
+_SAME_DRIVE_DB: Final = 0.5
+_CLEAR_OF_DB: Final = 10.0
+"""How much less drive than would undo the drop takes a sweep clear of compression."""
 _PASSIVE_SLACK_DB: Final = 0.1
 _OFF_DESIGN: Final = 0.25
 """Distance of the peak from the design frequency, as a share of the half-power band, that is worth a word."""
@@ -55,7 +75,7 @@ def device_findings(
     found: list[Finding] = []
     for sweep in sweeps:
         found += sweep.result.raw.findings
-        found += _receiver_level(sweep)
+        found += _receiver_level(sweep, sweeps, drive)
         found += _noise(sweep)
     found += reference.plan.findings
     found += _drive(kind, sweeps, reference, compression, drive)
@@ -68,8 +88,13 @@ def device_findings(
 
 
 def in_order(findings: Iterable[Finding]) -> tuple[Finding, ...]:
-    """Return findings worst first, otherwise in the order they came."""
-    return tuple(sorted(findings, key=lambda finding: SEVERITIES.index(finding.severity)))
+    """Return findings worst first; of one severity causes come before the rest, and what causes explain comes last."""
+
+    def rank(finding: Finding) -> tuple[int, int]:
+        within = 0 if finding.code in CAUSES else 2 if finding.code in _EXPLAINED else 1
+        return SEVERITIES.index(finding.severity), within
+
+    return tuple(sorted(findings, key=rank))
 
 
 def _together(findings: Sequence[Finding]) -> list[Finding]:
@@ -89,7 +114,9 @@ def _together(findings: Sequence[Finding]) -> list[Finding]:
     return result
 
 
-def _receiver_level(sweep: MeasuredSweep) -> Iterator[Finding]:
+def _receiver_level(
+    sweep: MeasuredSweep, sweeps: Sequence[MeasuredSweep], drive: DriveStudy | None
+) -> Iterator[Finding]:
     path = sweep.result.path
     level = path.port2_dbm
     if level is None:
@@ -99,20 +126,44 @@ def _receiver_level(sweep: MeasuredSweep) -> Iterator[Finding]:
         yield Finding(
             "receiver-near-limit",
             "fault",
-            f"{sweep.file}: {level:.1f} dBm reaches port 2, whose damage limit is {damage:g} dBm",
+            f"{sweep.file}: {level_text(level)} reaches port 2, whose damage limit is {stated(damage, 'dBm')}",
             "switch the source off and add output pads before anything else is measured",
             sweep.file,
         )
-    elif limit is not None and level > limit - _NEAR_LIMIT_DB:
+    elif limit is not None and level > limit - _NEAR_LIMIT_DB and not _level_settled(sweep, sweeps, drive, limit):
         more = int(np.ceil(level - limit + 10.0))
         yield Finding(
             "receiver-near-limit",
             "caution",
-            f"{sweep.file}: {level:.1f} dBm reaches port 2, whose receiver compresses from {limit:g} dBm; part of any "
-            "gain drop may be the analyzer's",
+            f"{sweep.file}: {level_text(level)} reaches port 2, whose receiver compresses from "
+            f"{stated(limit, 'dBm')}; part of any gain drop may be the analyzer's",
             f"sweep again with {more} dB more output pad and enter it in the sheet",
             sweep.file,
         )
+
+
+def _level_settled(
+    sweep: MeasuredSweep, sweeps: Sequence[MeasuredSweep], drive: DriveStudy | None, limit_dbm: float
+) -> bool:
+    """Return whether it is known what the receiver did at this sweep's level.
+
+    It is where a cause was named, the receiver or another that leaves it no share, and where the same drive was swept
+    with the receiver out of reach, so that what the advice asks for is in the folder already.
+    """
+    if drive is not None and drive.confidence >= NAMED:
+        if drive.cause == "receiver-overload":
+            return sweep.file in drive.set_aside
+        if drive.probabilities.get("receiver-overload", 1.0) < STILL_POSSIBLE:
+            return True
+    here = sweep.drive_dbm
+    levels = ((other.result.path.port2_dbm, other.drive_dbm) for other in sweeps)
+    return here is not None and any(
+        level is not None
+        and there is not None
+        and level < limit_dbm - _OUT_OF_REACH_DB
+        and abs(there - here) < _SAME_DRIVE_DB
+        for level, there in levels
+    )
 
 
 def _noise(sweep: MeasuredSweep) -> Iterator[Finding]:
@@ -142,16 +193,18 @@ def _drive(
             "enter analyzer.source_dbm in the sheet (the level leaving port 1, before any pad)",
         )
     proven = drive is not None and drive.onset.reference.proven
+    by_file = {sweep.file: sweep for sweep in sweeps}
+    aside = drive.set_aside if drive is not None else {}
     for point in compression.points if compression is not None else ():
-        if point.compressed:
-            level = "its drive" if point.drive_dbm is None else f"{point.drive_dbm:.1f} dBm drive"
+        if point.compressed and point.file not in aside:
+            level = "its drive" if point.drive_dbm is None else f"{level_text(point.drive_dbm)} drive"
             yield Finding(
                 "compressed-sweep",
                 "note" if proven else "caution",
                 f"{point.file}: at {format_si(point.worst_at_hz, 'Hz')} and {level} "
                 f"gain is {point.worst_db:.1f} dB down on {reference.file}; its peak, bandwidth and Q are not "
                 "the device's and were not used",
-                f"to take figures at that source level, add {point.worst_db + 10.0:.0f} dB of input pad",
+                _less_drive(by_file[point.file], reference, point.worst_db, drive),
                 point.file,
             )
     if kind == "amplifier" and drive is None:
@@ -162,6 +215,18 @@ def _drive(
             "sweep again over the same span with 10 dB more input pad; if the gain agrees, this sweep stands",
             reference.file,
         )
+
+
+def _less_drive(sweep: MeasuredSweep, reference: MeasuredSweep, drop_db: float, drive: DriveStudy | None) -> str:
+    """Return what to do for figures at the source level of a sweep that is down by `drop_db`, if the device limits."""
+    here, there = sweep.result.path, reference.result.path
+    more_db = sum(pad.loss_db for pad in there.input_pads) - sum(pad.loss_db for pad in here.input_pads)
+    if here.source_dbm == there.source_dbm and more_db > drop_db + 0.5 * _CLEAR_OF_DB:
+        advice = f"take figures from {reference.file}, swept with {decibels(round(more_db, 1))} more input pad"
+    else:
+        advice = f"to take figures at that source level, add {drop_db + _CLEAR_OF_DB:.0f} dB of input pad"
+    open_yet = drive is not None and drive.cause in ("input-limited-or-pad", "cause-unclear")
+    return f"if the device limits, {advice}" if open_yet else advice
 
 
 def _shape(reference: MeasuredSweep) -> Iterator[Finding]:
@@ -316,7 +381,7 @@ def _buried(sweep: MeasuredSweep, doubts: SweepDoubts, wanted: Collection[str]) 
             "return-loss-buried",
             "caution" if f"{side}_return_loss" in wanted else "note",
             f"{sweep.file}: {name} was read through the added {side} pads twice, so its magnitude is uncertain by "
-            f"{doubt:.2g} and the {side} return loss is withheld",
+            f"±{doubt:.2g}, where 1 is full reflection, and the {side} return loss is withheld",
             f"sweep {name} once without the added {side} pad (the device unpowered or at a drive it stands), or "
             "calibrate with the pad in line",
             sweep.file,

@@ -33,11 +33,11 @@ __all__ = ["draw_page", "render_page"]
 
 _GAP_PT: Final = 5.0
 _GAPS: Final = 9
-_LEAST_GAIN_PT: Final = 116.0
+_LEAST_GAIN_PT: Final = 112.0
 _MOST_GAIN_PT: Final = 250.0
 _MOST_PANELS_PT: Final = 170.0
 _GAIN_SHARE: Final = 0.6
-_GAIN_SHARE_BESIDE_DRIVE: Final = 0.4
+_GAIN_SHARE_BESIDE_DRIVE: Final = 0.35
 """Share of the free height that goes to gain against frequency; the smaller diagrams get the rest."""
 _LEAST_FINDINGS_PT: Final = 46.0
 _PNG_DPI: Final = 150

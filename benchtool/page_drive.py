@@ -2,14 +2,14 @@
 
 Each sweep is a mark with whiskers; behind it stands the curve that all sweeps together allow, with its band. The
 shaded drives are safe for measuring figures. The words stand above the diagram: they give the numbers and are the
-key to the marks. The small numbers along the top are those of the list of sweeps.
+key to the marks. The small numbers along the top are those of the list of sweeps. A sweep that is set aside is
+crossed, and the key says why: it stands off the curve for another reason than compression.
 """
 
 from __future__ import annotations
 
 import itertools
 from collections.abc import Sequence
-from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
@@ -18,13 +18,14 @@ from matplotlib.axes import Axes
 from benchtool.digits import level_text, quantity, stated
 from benchtool.drive_results import Estimate, Onset
 from benchtool.model import Compression, DeviceResult, FloatArray
+from benchtool.page_marks import DriveMark, apart, known, levelled
 from benchtool.page_panel import Panel
 from benchtool.page_paper import BLUE, HEADING_PT, INK, LIGHT, VERMILLION, Paper
 from benchtool.page_scales import frame, widened
 from benchtool.page_text import width_pt
-from benchtool.page_traces import Trace
+from benchtool.page_traces import down_word
 
-__all__ = ["LEAST_ABOVE_PT", "DriveMark", "draw_drive", "drive_marks"]
+__all__ = ["LEAST_ABOVE_PT", "draw_drive"]
 
 LEAST_ABOVE_PT: Final = 28.0
 """Height of the words and sweep numbers between heading and diagram."""
@@ -34,70 +35,23 @@ _SAFE: Final = "#dcebf7"
 _DOWN: Final = (0.0, (1.5, 1.2))
 _PHASE_FROM_PT: Final = 62.0
 """Least height of the plotting area that holds a strip for the phase as well."""
-_PHASE_SHARE: Final = 0.36
+_PHASE_SHARE: Final = 0.33
+_APART_PT: Final = 6.0
 _PHASE_HEAD_PT: Final = 9.5
-_LEAST_SPAN_DB: Final = 0.1
-"""Drives no further apart than this are one drive."""
 _MOST_WHISKER_DB: Final = 3.0
 """Whiskers longer than this do not set the scale."""
-_UNKNOWN: Final = Estimate(None)
 _RELATIVE: Final = ("drive against the source; its level is unknown", "against an unknown source level")
-
-
-@dataclass(frozen=True)
-class DriveMark:
-    """One sweep on the diagram; `number` is the one that the list of sweeps gives it."""
-
-    file: str
-    number: int
-    drive_dbm: float
-    gain_db: Estimate
-    phase_change_deg: Estimate
-    phase_deg_per_db: float | None
-    compressed: bool
-    spoiled: bool
-
-
-def drive_marks(device: DeviceResult, looks: Sequence[Trace]) -> tuple[DriveMark, ...]:
-    """Return a mark for each sweep whose drive is known, lowest drive first; none where all have the same drive."""
-    compression, study = device.compression, device.drive
-    numbers = {look.sweep.file: look.number for look in looks}
-    compressed = {p.file for p in compression.points if p.compressed} if compression else set()
-    marks = []
-    if study is not None and study.onset.points:
-        for p in study.onset.points:
-            gain, phase = p.gain_db, p.phase_change_deg
-            hollow = p.file in compressed
-            marks.append(
-                DriveMark(
-                    p.file, numbers.get(p.file, 0), p.drive_dbm, gain, phase, p.phase_deg_per_db, hollow, p.spoiled
-                )
-            )
-    elif compression is not None:
-        for c in compression.points:
-            if c.drive_dbm is not None:
-                gain = Estimate(c.gain_db)
-                marks.append(
-                    DriveMark(
-                        c.file, numbers.get(c.file, 0), c.drive_dbm, gain, _UNKNOWN, None, c.file in compressed, False
-                    )
-                )
-    marks = sorted((m for m in marks if m.gain_db.value is not None), key=lambda m: (m.drive_dbm, m.number))
-    if not marks or marks[-1].drive_dbm - marks[0].drive_dbm < _LEAST_SPAN_DB:
-        return ()
-    return tuple(marks)
 
 
 def draw_drive(paper: Paper, device: DeviceResult, marks: Sequence[DriveMark], panel: Panel) -> None:
     """Draw gain and phase change at the design frequency against drive."""
-    onset = device.drive.onset if device.drive is not None else None
+    onset = levelled(device.drive.onset, marks) if device.drive is not None else None
     relative = all(sweep.drive_dbm is None for sweep in device.sweeps)
     at = stated(device.compression.at_hz if device.compression else device.design_hz, "Hz")
     placed = panel.heading(paper, f"Gain, dB against drive, {'dB' if relative else 'dBm'}", at)
-    _words(paper, panel, onset, marks, relative, "" if placed else at)
+    _words(paper, panel, onset, marks, relative, down_word(device), "" if placed else at)
     area = panel.plot(above_pt=LEAST_ABOVE_PT)
-    phases = [m for m in marks if m.phase_change_deg.value is not None]
-    strip = len(phases) > 1 and area.height >= _PHASE_FROM_PT
+    strip = sum(m.phase_change_deg.value is not None for m in marks) > 1 and area.height >= _PHASE_FROM_PT
     below = _PHASE_SHARE * (area.height - _PHASE_HEAD_PT) if strip else 0.0
     tall = area.height - below - (_PHASE_HEAD_PT if strip else 0.0)
     upper = Panel(area.left, area.top, area.width, tall)
@@ -110,20 +64,17 @@ def draw_drive(paper: Paper, device: DeviceResult, marks: Sequence[DriveMark], p
         axes.axhline(reference - 1.0, color=VERMILLION, linewidth=0.8, linestyle=_DOWN, zorder=1.6)
     if onset is None:
         axes.axhline(reference, color=LIGHT, linewidth=0.6)
-        axes.plot([m.drive_dbm for m in marks], [_known(m.gain_db) for m in marks], color=INK, linewidth=0.9)
+        axes.plot([m.drive_dbm for m in marks], [known(m.gain_db) for m in marks], color=INK, linewidth=0.9)
     elif onset.basis != "none":
         _draw_curve(axes, onset, across)
-    _draw_marks(axes, marks)
+    drawn = apart(marks, _APART_PT * (across[1] - across[0]) / area.width)
+    _draw_marks(axes, drawn)
     _mark_p1db(axes, device, onset, reference, across)
     _number_drives(paper, axes, upper, marks, across)
     if strip:
         axes.tick_params(labelbottom=False, bottom=False)
         lower = Panel(area.left, area.top + area.height - below, area.width, below)
-        _draw_phase(paper, lower, phases, across, onset)
-
-
-def _known(estimate: Estimate) -> float:
-    return float("nan") if estimate.value is None else estimate.value
+        _draw_phase(paper, lower, [m for m in drawn if m.phase_change_deg.value is not None], across, onset)
 
 
 def _reference_gain(onset: Onset | None, compression: Compression | None, marks: Sequence[DriveMark]) -> float:
@@ -132,7 +83,7 @@ def _reference_gain(onset: Onset | None, compression: Compression | None, marks:
         return onset.small_signal_gain_db.value
     points = compression.points if compression else ()
     own = next((p.gain_db for p in points if compression and p.file == compression.reference), None)
-    return _known(marks[0].gain_db) if own is None else own
+    return known(marks[0].gain_db) if own is None else own
 
 
 def _across(marks: Sequence[DriveMark], onset: Onset | None) -> tuple[float, float]:
@@ -153,7 +104,7 @@ def _gain_limits(
 ) -> tuple[float, float]:
     values = [reference, reference - 1.5]
     for mark in marks:
-        gain = _known(mark.gain_db)
+        gain = known(mark.gain_db)
         ends = [v for v in (mark.gain_db.low, mark.gain_db.high) if v is not None]
         values += [gain, *(min(max(v, gain - _MOST_WHISKER_DB), gain + _MOST_WHISKER_DB) for v in ends)]
     if onset is not None and onset.basis != "none" and onset.curve_drive_dbm.size:
@@ -164,13 +115,14 @@ def _gain_limits(
 
 
 def _words(
-    paper: Paper, panel: Panel, onset: Onset | None, marks: Sequence[DriveMark], relative: bool, at: str
+    paper: Paper, panel: Panel, onset: Onset | None, marks: Sequence[DriveMark], relative: bool, down: str, at: str
 ) -> None:
     """Write what the diagram says in numbers, and the key to its marks."""
-    hollow, spoiled = any(m.compressed and not m.spoiled for m in marks), any(m.spoiled for m in marks)
+    hollow = any(m.compressed and not m.crossed for m in marks)
     if onset is None:
-        panel.note(paper, [part for part in (at, "hollow: compressed" if hollow else "", "dotted: 1 dB down") if part])
+        panel.note(paper, [part for part in (at, f"hollow: {down}" if hollow else "", "dotted: 1 dB down") if part])
         return
+    crossed = " or ".join(dict.fromkeys(m.aside or "left out" for m in marks if m.crossed))
     y = panel.top + HEADING_PT + 5.0
     point = onset.input_p1db_dbm
     marked = point.value is not None and not relative
@@ -181,7 +133,8 @@ def _words(
     texts = _RELATIVE if relative else _p1db_texts(point)
     text = next((t for t in texts if left + width_pt(t, 6.5) <= panel.left + panel.width), texts[-1])
     paper.text(left, y, text, 6.5)
-    _key(paper, panel, y + _ROW_PT, onset, hollow, spoiled, at)
+    beside = left + width_pt(text, 6.5) + 7.0
+    _key(paper, panel, (beside, y), onset, (crossed, down if hollow else "", at))
 
 
 def _p1db_texts(point: Estimate) -> Sequence[str]:
@@ -197,28 +150,38 @@ def _p1db_texts(point: Estimate) -> Sequence[str]:
     return [f"input {short} ({low} to {high})", f"{short} ({low} to {high})", short]
 
 
-def _key(paper: Paper, panel: Panel, y: float, onset: Onset, hollow: bool, spoiled: bool, at: str) -> None:
-    """Write the safe drive and the key to the marks, as many as there is room for, the gravest first."""
+def _key(paper: Paper, panel: Panel, beside: tuple[float, float], onset: Onset, words_of: tuple[str, str, str]) -> None:
+    """Write the safe drive and the key to the marks, as many as there is room for, the gravest first.
+
+    `beside` is where room is left in the row above; `words_of` are what the crosses and the hollow marks stand for, and
+    where the diagram holds. An empty one is not needed.
+    """
+    y = beside[1] + _ROW_PT
     x, right = panel.left, panel.left + panel.width
     safe = onset.safe_drive_dbm.low
     if safe is None:
         words = "safe drive not known"
     else:
-        words = f"safe to {level_text(safe)}"
+        words = f"proven safe to {level_text(safe)}"
         paper.box(x, y - 5.2, 7.0, 5.6, fill=_SAFE, edge=BLUE, line=0.4)
     x += 0.0 if safe is None else 9.0
     paper.text(x, y, words, 6.5)
     x += width_pt(words, 6.5) + 7.0
-    wanted = ((spoiled, "x", "left out", INK), (hollow, "o", "compressed", INK), (bool(at), "", at, LIGHT))
-    for is_there, shape, word, color in wanted:
-        size = next((s for s in (6.5, 6.0) if x + 7.0 + width_pt(word, s) <= right), None)
-        if not is_there or size is None:
+    rows = [(x, y), beside]
+    for shape, word in zip(("x", "o", ""), words_of, strict=True):
+        taken = 7.0 if shape else 0.0
+        places = (
+            (n, s) for s in (6.5, 6.0) for n, (left, _) in enumerate(rows) if left + taken + width_pt(word, s) <= right
+        )
+        place = next(places, None)
+        if not word or place is None:
             continue
+        number, size = place
+        x, y = rows[number]
         if shape:
-            paper.marker(x + 2.4, y - 2.3, shape, 3.8, color, "white")
-            x += 7.0
-        paper.text(x, y, word, size, color=LIGHT)
-        x += width_pt(word, size) + 7.0
+            paper.marker(x + 2.4, y - 2.3, shape, 3.8, INK, "white")
+        paper.text(x + taken, y, word, size, color=LIGHT)
+        rows[number] = (x + taken + width_pt(word, size) + 7.0, y)
 
 
 def _shade_safe(axes: Axes, onset: Onset | None) -> None:
@@ -256,12 +219,12 @@ def _draw_marks(axes: Axes, marks: Sequence[DriveMark]) -> None:
     """Draw a mark for each sweep: full, hollow if compressed, crossed if left out of the curve."""
     _whiskers(axes, np.array([m.drive_dbm for m in marks]), [m.gain_db for m in marks])
     for shape, fill, chosen in (
-        ("o", INK, [m for m in marks if not m.spoiled and not m.compressed]),
-        ("o", "white", [m for m in marks if not m.spoiled and m.compressed]),
-        ("x", INK, [m for m in marks if m.spoiled]),
+        ("o", INK, [m for m in marks if not m.crossed and not m.compressed]),
+        ("o", "white", [m for m in marks if not m.crossed and m.compressed]),
+        ("x", INK, [m for m in marks if m.crossed]),
     ):
         if chosen:
-            drives, gains = [m.drive_dbm for m in chosen], [_known(m.gain_db) for m in chosen]
+            drives, gains = [m.drive_dbm for m in chosen], [known(m.gain_db) for m in chosen]
             axes.plot(drives, gains, shape, color=INK, markerfacecolor=fill, markersize=4.5, zorder=3)
 
 
@@ -326,7 +289,7 @@ def _up_to(degrees: float) -> str:
 def _draw_phase(
     paper: Paper, area: Panel, marks: Sequence[DriveMark], across: tuple[float, float], onset: Onset | None
 ) -> None:
-    """Draw the change of phase against the lowest drive, in a strip of its own below the gain."""
+    """Draw the change of phase against the lowest drive that is kept, in a strip of its own below the gain."""
     words = "phase change, °"
     # A slope is taken from the sweep below: neither of the two may be spoiled.
     slopes = [
@@ -341,14 +304,14 @@ def _draw_phase(
     axes = area.axes(paper)
     changes = [m.phase_change_deg for m in marks]
     ends = [v for e in changes for v in (e.low, e.value, e.high) if v is not None]
-    frame(axes, across, widened([0.0, *ends], 0.1, 2.0), 5, 0.0)
+    frame(axes, across, widened([0.0, *ends], 0.16, 2.0), 5, 0.0)
     _shade_safe(axes, onset)
     axes.axhline(0.0, color=LIGHT, linewidth=0.6, zorder=1)
     kept = [m for m in marks if not m.spoiled]
     axes.plot(
-        [m.drive_dbm for m in kept], [_known(m.phase_change_deg) for m in kept], color=INK, linewidth=0.7, zorder=2
+        [m.drive_dbm for m in kept], [known(m.phase_change_deg) for m in kept], color=INK, linewidth=0.7, zorder=2
     )
     _whiskers(axes, np.array([m.drive_dbm for m in marks]), changes)
     for shape, chosen in (("s", kept), ("x", [m for m in marks if m.spoiled])):
         drives = [m.drive_dbm for m in chosen]
-        axes.plot(drives, [_known(m.phase_change_deg) for m in chosen], shape, color=INK, markersize=3.2, zorder=3)
+        axes.plot(drives, [known(m.phase_change_deg) for m in chosen], shape, color=INK, markersize=3.2, zorder=3)

@@ -19,7 +19,8 @@ from benchtool.digits import level_text, stated
 from benchtool.model import DeviceResult, Figure, TargetResult
 from benchtool.page_paper import GREEN, HEADING_PT, INK, LIGHT, WIDTH_PT, ZONE, Paper
 from benchtool.page_scales import View, decibels_of, frame, widened
-from benchtool.page_traces import Trace
+from benchtool.page_text import width_pt
+from benchtool.page_traces import Trace, down_word
 from benchtool.units import HALF_POWER_DB
 
 __all__ = ["draw_gain"]
@@ -186,8 +187,8 @@ def _end_labels(
         paper.text(right + 24.0, place + 2.3, drive or "drive ?", 6.0, color=LIGHT)
 
 
-def _key(paper: Paper, top: float) -> None:
-    """Draw the key of the marks into the heading line."""
+def _key(paper: Paper, top: float, down: str) -> None:
+    """Draw the key of the marks into the heading line; `down` names the dashed sweeps, empty where there are none."""
     y, x = top + 6.6, WIDTH_PT
     paper.text(x, top + 9.0, "wanted by a target", 6.5, color=LIGHT, align="right")
     paper.box(x - 75.0, y - 3.0, 9.0, 6.0, fill=ZONE, edge=GREEN, line=0.4)
@@ -197,8 +198,10 @@ def _key(paper: Paper, top: float) -> None:
     paper.stroke([x - 145.0, x - 145.0], [y - 3, y + 3], INK, 0.7)
     paper.text(x - 169.0, top + 9.0, "peak", 6.5, color=LIGHT, align="right")
     paper.marker(x - 192.0, y, "v", 4, INK)
-    paper.text(x - 202.0, top + 9.0, "compressed", 6.5, color=LIGHT, align="right")
-    paper.stroke([x - 260.0, x - 245.0], [y, y], LIGHT, 0.9, (0.0, (4.0, 1.6)))
+    if down:
+        paper.text(x - 202.0, top + 9.0, down, 6.5, color=LIGHT, align="right")
+        left = x - 207.0 - width_pt(down, 6.5)
+        paper.stroke([left - 15.0, left], [y, y], LIGHT, 0.9, (0.0, (4.0, 1.6)))
 
 
 def draw_gain(
@@ -210,7 +213,7 @@ def draw_gain(
         frequency = device.reference.sweep.frequency_hz
         span = f"of {stated(float(frequency[0]), 'Hz')} to {stated(float(frequency[-1]), 'Hz')} swept"
         paper.text(155.0, top + 9.0, span, 6.5, color=LIGHT)
-    _key(paper, top)
+    _key(paper, top, down_word(device) if any(trace.compressed for trace in looks) else "")
     upper, tall = top + HEADING_PT + 2.0, height - HEADING_PT - 2.0 - _BELOW_PT
     wide = WIDTH_PT - _LEFT_PT - _RIGHT_PT
     axes = paper.axes(_LEFT_PT, upper, wide, tall)
@@ -218,7 +221,7 @@ def draw_gain(
     frame(axes, (view.low_hz / view.factor, view.high_hz / view.factor), limits, 10, tall)
     for zone in _zones(device, view, limits):
         _shade(axes, view, zone)
-    for trace in reversed(looks):
+    for trace in looks:
         sweep = trace.sweep.sweep
         shown = view.inside(sweep.frequency_hz)
         axes.plot(
@@ -227,7 +230,7 @@ def draw_gain(
             color=trace.color,
             linewidth=trace.width,
             linestyle=trace.dash,
-            zorder=3 if trace.reference else 2,
+            zorder=trace.height,
         )
     _mark_figures(axes, device, view)
     _end_labels(paper, axes, looks, view, (_LEFT_PT + wide, upper, tall))

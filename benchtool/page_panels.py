@@ -17,8 +17,9 @@ from matplotlib.axes import Axes
 
 from benchtool.digits import quantity
 from benchtool.model import DeviceResult, FloatArray
-from benchtool.page_drive import LEAST_ABOVE_PT, draw_drive, drive_marks
+from benchtool.page_drive import LEAST_ABOVE_PT, draw_drive
 from benchtool.page_map import draw_map, map_shown
+from benchtool.page_marks import drive_marks
 from benchtool.page_panel import NOTE_PT, Panel
 from benchtool.page_paper import BLUE, GREEN, INK, WIDTH_PT, ZONE, Dash, Paper
 from benchtool.page_scales import View, decibels_of, frame, near_band, widened
@@ -29,7 +30,7 @@ __all__ = ["draw_panels", "least_height"]
 
 _APERTURE_SHARE: Final = 0.15
 _GUTTER_PT: Final = 12.0
-_LEAST_PT: Final = 84.0
+_LEAST_PT: Final = 90.0
 _PORTS: Final[tuple[tuple[str, str, int, int, str, Dash], ...]] = (
     ("S11", "input_return_loss", 0, 0, INK, "-"),
     ("S22", "output_return_loss", 1, 1, BLUE, (0, (5, 1.5, 1.2, 1.5))),

@@ -11,7 +11,7 @@ from benchtool.digits import decibels, level_text, quantity
 from benchtool.model import DeviceResult, PadInLine, SweepResult
 from benchtool.page_paper import LIGHT, WIDTH_PT, Block, Paper
 from benchtool.page_text import MIN_SIZE_PT, Lines, fit, literal, width_pt
-from benchtool.page_traces import Trace
+from benchtool.page_traces import Trace, down_word
 
 __all__ = ["sweep_list"]
 
@@ -38,12 +38,16 @@ def _taken_out(sweep: SweepResult) -> str:
     return f"{decibels(sweep.input_correction_db).removesuffix(' dB')} | {decibels(sweep.output_correction_db)}"
 
 
-def _remark(trace: Trace, reference: SweepResult) -> str:
+def _remark(trace: Trace, reference: SweepResult, word: str) -> str:
     if trace.reference:
-        return "reference"
+        return f"reference, but {trace.aside}" if trace.aside else "reference"
     path, parts = trace.sweep.path, []
-    if trace.compressed and trace.point is not None:
-        parts.append(f"{quantity(trace.point.compression_db, 'dB', digits=1)} compressed")
+    change = "" if trace.point is None else quantity(abs(trace.point.compression_db), "dB", digits=1)
+    if trace.aside:
+        lower = trace.point is not None and trace.point.compression_db > 0.0
+        parts.append(f"set aside: {trace.aside}" + (f", {change} {'lower' if lower else 'higher'}" if change else ""))
+    elif trace.compressed:
+        parts.append(f"{change} {'compressed' if word == 'compressed' else 'lower'}")
     parts += _difference("input", path.input_pads, reference.path.input_pads)
     parts += _difference("output", path.output_pads, reference.path.output_pads)
     if path.source_dbm != reference.path.source_dbm and path.source_dbm is not None:
@@ -66,7 +70,7 @@ class _Row:
 
 
 def _row(device: DeviceResult, trace: Trace, name_pt: float) -> _Row:
-    text = _remark(trace, device.reference)
+    text = _remark(trace, device.reference, down_word(device))
     remark = fit(text, (6.5, 6.0), WIDTH_PT - _NAME_PT - name_pt - _LEVELS_PT)
     below = len(remark.lines) > 2
     if below:

@@ -13,14 +13,12 @@ from typing import Final
 
 import numpy as np
 
-from benchtool.causes import CauseVerdict
 from benchtool.compression_study import CompressionStudy
-from benchtool.digits import level_text
+from benchtool.digits import level_text, quantity
 from benchtool.doubts import pad_doubt_db
-from benchtool.drive_results import Estimate, NextSweep, Onset
+from benchtool.drive_results import NextSweep, Purpose
 from benchtool.drive_table import DriveTable
 from benchtool.limiting import Law
-from benchtool.model import Finding, Severity
 from benchtool.onset import SAFE_DROP_DB
 from benchtool.pad_stock import IN_EFFECT_DB, STEP_UP_DB, Line, in_effect_taken, port2_limit_dbm, possible_lines
 from benchtool.pads import PadBank, change_of_line
@@ -28,7 +26,7 @@ from benchtool.propagation import rectangular_u
 from benchtool.rivals import Rival
 from benchtool.sheet import BenchSheet, SweepEntry
 
-__all__ = ["NextSweep", "plan_next", "reference_finding"]
+__all__ = ["NextSweep", "plan_next"]
 
 _MOST: Final = 3
 _NEW_DRIVE_DB: Final = 1.5
@@ -36,8 +34,6 @@ _NEW_DRIVE_DB: Final = 1.5
 _STILL_POSSIBLE: Final = 0.02
 _SURE: Final = 0.95
 """Probability of a cause from which no sweep is spent on telling it from its rivals."""
-_MATTERS_DB: Final = 0.2
-"""A reference that cannot read lower than this by compression needs no caution."""
 _WORTH: Final = 0.02
 _WIDE_DB: Final = 2.0
 _PROOF_STEP_DB: Final = 10.0
@@ -100,7 +96,7 @@ def plan_next(
     return tuple(planned[:_MOST])
 
 
-def _as_proposal(bench: _Bench, line: Line, settles: str, *more_cautions: str) -> NextSweep:
+def _as_proposal(bench: _Bench, line: Line, purpose: Purpose, settles: str, *more_cautions: str) -> NextSweep:
     known = bench.table.levels_known
     limit = port2_limit_dbm(bench.sheet)
     cautions = list(more_cautions)
@@ -121,6 +117,7 @@ def _as_proposal(bench: _Bench, line: Line, settles: str, *more_cautions: str) -
         None if limit is None or not known else limit - line.port2 - line.doubt_db,
         settles,
         tuple(cautions),
+        purpose,
     )
 
 
@@ -150,6 +147,7 @@ def _repeat(bench: _Bench) -> NextSweep | None:
     return _as_proposal(
         bench,
         same[0],
+        "repeat",
         f"{reference} again, twice in a row: whether the device has settled, or still drifts or oscillates",
     )
 
@@ -170,6 +168,7 @@ def _measure_pad(bench: _Bench) -> NextSweep | None:
     return _as_proposal(
         bench,
         line,
+        "measure-pad",
         f"what {pad} truly loses: measure pad {pad} as a .s2p file, in the device's place, and enter it in the sheet",
     )
 
@@ -193,7 +192,10 @@ def _lift_signal(bench: _Bench) -> NextSweep | None:
     if best is None:
         return None
     return _as_proposal(
-        bench, best, f"what {table.files[noisy]} hides in its noise, at a drive that is still safe for figures"
+        bench,
+        best,
+        "lift-signal",
+        f"what {table.files[noisy]} hides in its noise, at a drive that is still safe for figures",
     )
 
 
@@ -223,6 +225,7 @@ def _relieve_receiver(bench: _Bench) -> NextSweep | None:
     return _as_proposal(
         bench,
         best,
+        "relieve-receiver",
         f"whether {strongest.name} was compressed by the device or by the receiver: with less level at port 2 and the "
         "same drive, gain comes back only if it was the receiver",
     )
@@ -243,16 +246,18 @@ def _separate(bench: _Bench) -> NextSweep | None:
     if best is None or _worth(bench, best, likely) < _WORTH * sum(rival.probability for rival in likely):
         return None
     foremost = {rival.cause: rival for rival in reversed(likely)}
-    shown = "; ".join(f"{_named(rival)}: {_foretold(bench, best, rival):.2f} dB" for rival in foremost.values())
-    return _as_proposal(bench, best, f"which cause it is, by the gain it reads: {shown}")
+    shown = "; ".join(
+        f"{quantity(_foretold(bench, best, rival), 'dB')} if {_named(rival)}" for rival in foremost.values()
+    )
+    return _as_proposal(bench, best, "separate-causes", f"which cause it is, by the gain it reads: {shown}")
 
 
 def _named(rival: Rival) -> str:
     return {
         "clean": "nothing is wrong",
-        "output-limited": "device limits at its output",
-        "input-limited": "device limits at its input",
-        "receiver-overload": "receiver compresses",
+        "output-limited": "the device limits at its output",
+        "input-limited": "the device limits at its input",
+        "receiver-overload": "the receiver compresses",
         "pad-value": f"pad {rival.about} is off",
         "not-repeating": f"{rival.about or 'the set-up'} did not repeat",
     }[rival.cause]
@@ -339,6 +344,7 @@ def _prove_reference(bench: _Bench) -> NextSweep | None:
     return _as_proposal(
         bench,
         best,
+        "prove-reference",
         f"whether {onset.reference.file} is small-signal: if the gain agrees within {SAFE_DROP_DB} dB, it is",
         *cautions,
     )
@@ -368,33 +374,4 @@ def _bracket(bench: _Bench) -> NextSweep | None:
         if float(np.min(np.abs(line.drive - drives))) > _NEW_DRIVE_DB and abs(line.drive - aim) < STEP_UP_DB
     ]
     best = _best(lines, lambda line: abs(line.drive - aim))
-    return None if best is None else _as_proposal(bench, best, what)
-
-
-def reference_finding(onset: Onset, verdict: CauseVerdict | None, planned: Sequence[NextSweep]) -> Finding:
-    """Return whether the reference is small-signal, by how much it may read low, and what to sweep to know."""
-    proof, low = onset.reference, onset.reference.reads_low_db
-    if proof.proven:
-        return Finding(
-            "drive-proven", "note", f"{proof.file} is small-signal: {_reads_low(low)}", "nothing to do", proof.file
-        )
-    how = "sweep again with 10 dB more input pad; if the gain agrees, it stands"
-    lower = [sweep for sweep in planned if "small-signal" in sweep.settles]
-    if lower:
-        drive = f" ({level_text(lower[0].drive_dbm)} drive)" if lower[0].drive_dbm is not None else ""
-        pads = ", ".join(lower[0].input_pads) or "no pad"
-        how = f"sweep again with {pads} at the input{drive}; if the gain agrees, it stands"
-    if verdict is not None and verdict.code == "noise-limited":
-        how = f"noise outweighs the compression looked for: average first; then {how}"
-    if verdict is not None and verdict.code == "reference-not-repeating":
-        how = f"sweep {proof.file} again, its line unchanged, until two sweeps agree; then {how}"
-    severity: Severity = "note" if low.high is not None and low.high < _MATTERS_DB else "caution"
-    return Finding("drive-unproven", severity, f"{proof.file}: {_reads_low(low)}", how, proof.file)
-
-
-def _reads_low(low: Estimate) -> str:
-    if low.high is None:
-        return "nothing shows that it is not compressed: there is no second drive to compare it with"
-    if low.low is None or low.high <= SAFE_DROP_DB:
-        return f"its gain reads low by no more than {low.high:.2f} dB"
-    return f"its gain may read low by {low.low:.2f} to {low.high:.2f} dB"
+    return None if best is None else _as_proposal(bench, best, "bracket-onset", what)

@@ -10,7 +10,7 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
-from benchtool.digits import figure_label, interval_text, level_text, limits_text, value_text
+from benchtool.digits import figure_label, interval_text, level_text, limits_text, quantity, value_text
 from benchtool.model import BenchResult, DeviceResult, Sweep
 from benchtool.units import format_si, to_db
 
@@ -115,7 +115,9 @@ def print_sweep(sweep: Sweep) -> None:
             level = to_db(sweep.s[i, j])
             top = int(level.argmax())
             where = format_si(float(f[top]), "Hz", 6)
-            console.print(f"  {name}: {level.min():.2f} to {level.max():.2f} dB, largest at {where}", soft_wrap=True)
+            low, high = (quantity(float(end), "dB") for end in (level.min(), level.max()))
+            span = f"{low.removesuffix(' dB')} to {high}"
+            console.print(f"  {name}: {span}, largest at {where}", soft_wrap=True)
     if sweep.noise is not None:
         console.print(f"  noise parameters at {sweep.noise.frequency_hz.size} frequencies", soft_wrap=True)
     for finding in sweep.findings:

@@ -128,10 +128,23 @@ def _against(target: TargetResult, figure: Figure) -> str:
     return f"{name} is {value_text(figure)}{interval}, wanted {limits_text(target)}"
 
 
-def summarise(targets: Sequence[TargetResult], figures: Mapping[str, Figure], findings: Sequence[Finding]) -> Summary:
+_BEFORE_FIGURES: Final = (
+    "reference-not-repeating",
+    "pad-value-suspect",
+    "input-limited-or-pad",
+    "cause-unclear",
+)
+"""Findings to be settled before it is worth narrowing a figure."""
+
+
+def summarise(
+    targets: Sequence[TargetResult], figures: Mapping[str, Figure], findings: Sequence[Finding], planned: bool = False
+) -> Summary:
     """Return the verdict of a device, the reason in one sentence, and the next step in one sentence.
 
-    `findings` are sorted worst first; the worst that is more than a note gives the next step.
+    `findings` are sorted worst first; the worst that is more than a note gives the next step. For a target that is
+    undecided what would decide it comes before that, unless the bench itself is in question. `planned` says that
+    there are sweeps worth taking though nothing calls for them.
     """
     verdict = overall([target.verdict for target in targets])
     doubts = [finding for finding in findings if finding.severity != "note"]
@@ -146,7 +159,8 @@ def summarise(targets: Sequence[TargetResult], figures: Mapping[str, Figure], fi
         more = f"; and {len(decisive) - 2} more" if len(decisive) > 2 else ""
         reason = f"{shown[0].upper()}{shown[1:]}{more}."
     advised = [target.advice for target in decisive if target.advice]
-    if verdict == "undecided" and advised:
+    unsettled = bool(doubts) and doubts[0].code in _BEFORE_FIGURES
+    if verdict == "undecided" and advised and not unsettled:
         step = advised[0]
     elif doubts:
         step = doubts[0].advice
@@ -155,5 +169,5 @@ def summarise(targets: Sequence[TargetResult], figures: Mapping[str, Figure], fi
     elif verdict == "none":
         step = "set targets in the sheet to have them judged"
     else:
-        step = "nothing: file this page"
+        step = "nothing: file this page" + ("; `benchtool next` has what would tell more" if planned else "")
     return Summary(verdict, reason, f"{step[0].upper()}{step[1:]}.")

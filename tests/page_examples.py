@@ -434,6 +434,33 @@ def drives_with_study(
     return replace(device, drive=study, findings=findings)
 
 
+def drives_with_one_that_did_not_repeat() -> DeviceResult:
+    device = drives_with_study(spoiled=("stage2_high.s2p",))
+    assert device.drive is not None
+    aside = {"stage2_high.s2p": "did not repeat"}
+    return replace(device, drive=replace(device.drive, cause="reference-not-repeating", set_aside=aside))
+
+
+def drives_through_a_suspect_pad() -> DeviceResult:
+    """Return drives of which the lowest was read through a pad that takes 1.5 dB more than the sheet says."""
+    device = two_drives_with_bound()
+    assert device.drive is not None
+    low, *rest = device.drive.onset.points
+    assert low.gain_db.value is not None
+    low = replace(low, gain_db=within(low.gain_db.value - 1.5, 0.4))
+    # The fit starts from the lowest drive and leaves what the pad loses open.
+    curve = device.drive.onset.curve_gain_db - 1.5
+    onset = replace(device.drive.onset, points=(low, *rest), curve_gain_db=curve)
+    aside = {low.file: "pad a20 suspect"}
+    return replace(device, drive=replace(device.drive, cause="pad-value-suspect", onset=onset, set_aside=aside))
+
+
+def drives_with_unclear_cause() -> DeviceResult:
+    device = drives_with_study()
+    assert device.drive is not None
+    return replace(device, drive=replace(device.drive, cause="cause-unclear"))
+
+
 def two_drives_with_bound(bound: Bound = "at least") -> DeviceResult:
     device = three_drives(intervals=True)
     gains = [40.12, 40.02] if bound == "at least" else [33.0, 28.0]
@@ -482,6 +509,9 @@ CASES: dict[str, Callable[[], DeviceResult]] = {
     "drives_with_study": drives_with_study,
     "drives_with_study_and_match": lambda: drives_with_study(full=True),
     "drives_with_study_tall": lambda: drives_with_study(findings=()),
+    "drives_with_one_that_did_not_repeat": drives_with_one_that_did_not_repeat,
+    "drives_through_a_suspect_pad": drives_through_a_suspect_pad,
+    "drives_with_unclear_cause": drives_with_unclear_cause,
     "drives_with_one_spoiled": lambda: drives_with_study(spoiled=("stage2_high.s2p",)),
     "two_drives_with_bound": two_drives_with_bound,
     "two_drives_with_upper_bound": lambda: two_drives_with_bound("at most"),

@@ -249,6 +249,22 @@ def test_level_at_port_2_is_watched(tmp_path, limit, damage, severity):
     assert finding.severity == severity
 
 
+def test_a_level_near_the_limit_is_quiet_where_the_same_drive_was_swept_with_more_output_pad(tmp_path):
+    analyzer = "[analyzer]\nsource_dbm = -10.0\nport2_compression_dbm = 12.0\nport2_damage_dbm = 30.0\n"
+    pads = "[pads.d]\nloss_db = 10.0\n[pads.e]\nloss_db = 1.0\n"
+    device = '[[device]]\nname = "d"\nkind = "amplifier"\n[[device.sweep]]\nfile = "x.s2p"\n'
+
+    def near(pad, db):
+        sweeps = {"x.s2p": single_tuned(FREQUENCY), "y.s2p": single_tuned(FREQUENCY, 10.0 * 10 ** (-db / 20))}
+        entry = f'[[device.sweep]]\nfile = "y.s2p"\noutput_pads = ["{pad}"]\n'
+        named = {name: (FREQUENCY, s21) for name, s21 in sweeps.items()}
+        found = analyse(bench(tmp_path / pad, named, analyzer + device + entry, pads)).devices[0].findings
+        return {finding.sweep for finding in found if finding.code == "receiver-near-limit"}
+
+    assert near("d", 10.0) == set()  # y: 0 dBm at port 2, out of the receiver's reach
+    assert near("e", 1.0) == {"x.s2p"}  # y: 9 dBm, as near the limit as x
+
+
 def test_inputs_are_never_changed(tmp_path):
     copy = tmp_path / "bench"
     shutil.copytree(SAMPLE, copy)

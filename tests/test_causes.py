@@ -10,7 +10,8 @@ import numpy as np
 import pytest
 from numpy.testing import assert_allclose
 
-from benchtool.causes import cause_finding, find_cause
+from benchtool.cause_findings import cause_finding
+from benchtool.causes import find_cause, set_aside
 from benchtool.compression_study import onset_figures, study_compression
 from benchtool.drive_table import DriveTable, PadDoubt, drive_table
 from benchtool.limiting import Law
@@ -214,6 +215,13 @@ def test_overloaded_receiver_asks_for_pad_where_none_was_tried():
     told = replace(find_cause(overloaded((-38.0, -28.0, -18.0, -18.0), (10.0, 10.0, 10.0, 20.0))), code=None)
     finding = cause_finding(seen, replace(told, code="receiver-overload"))
     assert finding.advice.startswith("sweep again with 10 dB more output pad and enter it")
+
+
+def test_too_little_output_pad_is_not_trusted_nor_asked_for_again():
+    told = find_cause(overloaded((-38.0, -28.0, -18.0, -18.0), (10.0, 10.0, 10.0, 20.0)))
+    seen = overloaded((-38.0, -28.0, -18.0, -18.0), (10.0, 10.0, 10.0, 12.0))
+    advice = cause_finding(seen, replace(told, code="receiver-overload")).advice
+    assert advice.startswith("take figures from a sweep with less level at port 2: s3.s2p had not enough output pad")
 
 
 def measured_bench(seed, cause="clean"):
@@ -481,3 +489,19 @@ def test_change_beyond_tolerance_is_not_called_clean_though_it_is_still_possible
     loud = find_cause(table(two, offsets=[0.0, -0.75], pads=pads))
     assert quiet.code == "clean"
     assert loud.code != "clean" and 0.001 < loud.probabilities["clean"] < 0.5
+
+
+def test_sweeps_are_set_aside_by_what_the_cause_explains():
+    def aside(seen, reference):
+        return dict(set_aside(seen, find_cause(seen), reference))
+
+    restless = table((-38.0, -38.0, -18.0), offsets=[0.0, 1.2, 0.1])
+    assert aside(restless, "s0.s2p") == {"s1.s2p": "did not repeat"}
+    off = table(DRIVES, offsets=[-2.0, -2.0, 0.0, 0.0], pads=LADDER)
+    assert aside(off, "s2.s2p") == {"s0.s2p": "pad a20 suspect", "s1.s2p": "pad a20 suspect"}
+    verdict = find_cause(off)
+    # 1.5 dB more than the pad accounts for, and the sweep is compressed as well.
+    more = replace(off, gain_db=off.gain_db - np.array([[0.0], [1.5], [0.0], [0.0]]))
+    assert dict(set_aside(more, verdict, "s2.s2p")) == {"s0.s2p": "pad a20 suspect"}
+    limits = table(DRIVES, limited(DRIVES, 5.0, Law("rapp", 2.4), "output"), pads=LADDER, limit=20.0)
+    assert aside(limits, "s0.s2p") == {}

@@ -26,10 +26,13 @@ from matplotlib.transforms import Bbox
 from numpy.testing import assert_allclose
 
 from benchtool.digits import limits_text
+from benchtool.drive_results import Estimate
 from benchtool.model import DeviceResult, FloatArray, Verdict
 from benchtool.page import draw_page, render_page
+from benchtool.page_marks import DriveMark, apart
 from benchtool.page_paper import STYLE
 from benchtool.page_text import MIN_SIZE_PT, literal
+from benchtool.page_traces import traces
 
 
 def _load(name: str) -> ModuleType:
@@ -280,7 +283,7 @@ def test_gain_curve_is_the_sweep() -> None:
     device = _device("three_drives")
     axes = _page(device).get_axes()[0]
     sweep = device.reference.sweep
-    drawn = _curve(axes, 1.5)
+    drawn = _curve(axes, 2.0)
     assert_allclose(_x(drawn), sweep.frequency_hz / 1e6, rtol=1e-12, atol=0)
     assert_allclose(_y(drawn), 20 * np.log10(np.abs(sweep.s21)), rtol=0, atol=1e-9)
     assert len([line for line in axes.get_lines() if len(_x(line)) > 50]) == 3
@@ -359,7 +362,7 @@ def test_drive_panel_shows_gain_curve_and_onset_of_the_study() -> None:
     assert_allclose(_x(limit), [-55.4, -55.4], rtol=0, atol=1e-9)
     words = _words(_page_of("drives_with_study"))
     assert "input P1dB −46.9 dBm (−47.6 to −46.1)" in words
-    assert "safe to −55.4 dBm" in words and "compressed" in words and "left out" not in words
+    assert "proven safe to −55.4 dBm" in words and "compressed" in words and "left out" not in words
 
 
 def test_sweep_numbers_stand_over_their_drives() -> None:
@@ -395,7 +398,7 @@ def test_bound_of_the_1_db_point_is_an_arrow_away_from_it() -> None:
         assert (away > 1.0) if shape == ">" else (away < -1.0)
         side = "at least" if shape == ">" else "at most"
         assert f"input P1dB {side} −{-bound} dBm" in _words(_page_of(case))
-    assert "safe to −61.5 dBm" in _words(_page_of("two_drives_with_bound"))
+    assert "proven safe to −61.5 dBm" in _words(_page_of("two_drives_with_bound"))
     assert "safe drive not known" in _words(_page_of("two_drives_with_upper_bound"))
 
 
@@ -409,6 +412,54 @@ def test_spoiled_sweep_is_crossed_and_not_mapped() -> None:
     # Steepest between the two sweeps that are not spoiled: 0.24° over 10 dB.
     assert "phase change, °; up to 0.02°/dB" in words
     assert "Compression, dB" in _words(_page_of("drives_with_study"))
+
+
+def test_a_sweep_set_aside_is_crossed_and_the_key_says_why() -> None:
+    canvas = _page_of("drives_with_one_that_did_not_repeat")
+    crossed = next(li for li in canvas.get_axes()[1].get_lines() if li.get_marker() == "x")
+    assert_allclose(_xy(crossed), [[-38.0], [32.02]], rtol=0, atol=1e-9)
+    words = _words(canvas)
+    assert "did not repeat" in words and "left out" not in words and "compressed" not in words
+    assert any(w.startswith("set aside: did not repeat, 8.1 dB lower") for w in words)
+    look = next(t for t in traces(_device("drives_with_one_that_did_not_repeat")) if t.sweep.file == "stage2_high.s2p")
+    assert look.aside == "did not repeat" and not look.compressed and look.dash != (0.0, (4.0, 1.6))
+
+
+def test_the_curve_goes_through_the_sweeps_that_are_kept() -> None:
+    device = _device("drives_through_a_suspect_pad")
+    canvas = _page_of("drives_through_a_suspect_pad")
+    axes = canvas.get_axes()[1]
+    curve = _curve(axes, 0.9)
+    kept = next(li for li in axes.get_lines() if li.get_marker() == "o")
+    off = np.interp(_x(kept), _x(curve), _y(curve)) - _y(kept)
+    assert_allclose(float(np.mean(off)), 0.0, rtol=0, atol=1e-9)
+    crossed = next(li for li in axes.get_lines() if li.get_marker() == "x")
+    # 40.12 - 1.5 dB through the pad, where the sweep that is kept reads 40.02 dB.
+    assert_allclose(np.interp(_x(crossed), _x(curve), _y(curve)) - _y(crossed), [1.4], rtol=0, atol=0.01)
+    assert device.drive is not None and "pad a20 suspect" in _words(canvas)
+
+
+def test_where_nobody_can_tell_a_sweep_is_not_called_compressed() -> None:
+    words = _words(_page_of("drives_with_unclear_cause"))
+    assert words.count("over 1 dB down") == 2 and "compressed" not in words
+    assert any(w.startswith("8.1 dB lower") for w in words)
+
+
+def test_a_mark_set_aside_stands_beside_the_one_of_its_drive() -> None:
+    here = DriveMark("a", 1, -38.0, Estimate(20.0), Estimate(0.0), None, False, False)
+    there = replace(here, file="b", spoiled=True, aside="did not repeat")
+    assert [m.drive_dbm for m in apart([here, there], 0.3)] == [-38.0, -37.7]
+    assert [m.drive_dbm for m in apart([here, replace(there, drive_dbm=-36.0)], 0.3)] == [-38.0, -36.0]
+    assert [m.drive_dbm for m in apart([here, replace(here, file="b")], 0.3)] == [-38.0, -38.0]
+
+
+def test_a_sweep_that_agrees_with_the_reference_is_seen_over_it() -> None:
+    device = _device("three_drives")
+    lines = [line for line in _page(device).get_axes()[0].get_lines() if len(_x(line)) > 50]
+    reference = next(line for line in lines if line.get_linewidth() == 2.0)
+    for line in lines:
+        if line is not reference:
+            assert line.get_linewidth() < 1.0 and line.get_zorder() > reference.get_zorder()
 
 
 def test_one_drive_has_no_drive_panel() -> None:

@@ -9,6 +9,7 @@ from __future__ import annotations
 import importlib
 import importlib.util
 import json
+import re
 import subprocess
 import sys
 import tomllib
@@ -282,10 +283,99 @@ def test_the_cause_is_named(result: BenchResult, name: str, code: str) -> None:
     assert device.drive.confidence > (0.5 if code == "input-limited-or-pad" else 0.9)
 
 
+def codes(result: BenchResult, name: str) -> list[str]:
+    return [finding.code for finding in device_of(result, name).findings]
+
+
+@pytest.mark.parametrize(
+    ("name", "code"), [(n, c) for n, c in TOLD.items() if n not in ("buffer amplifier", "second IF stage")]
+)
+def test_the_cause_comes_first_and_gives_the_next_step(result: BenchResult, name: str, code: str) -> None:
+    device = device_of(result, name)
+    first = device.findings[0]
+    assert (first.code, first.severity) == (code, "caution")
+    assert device.summary.next_step.lower() == f"{first.advice}.".lower()
+
+
+@pytest.mark.parametrize("name", TOLD)
+def test_the_next_step_is_the_first_sweep_that_is_planned(result: BenchResult, name: str) -> None:
+    device = device_of(result, name)
+    assert device.drive is not None
+    step, planned = device.summary.next_step, device.drive.next_sweeps
+    if not planned:
+        assert "sweep with" not in step.lower() and "more" not in step.replace("10 dB more output pad at", "")
+        return
+    first = planned[0]
+    if first.purpose == "repeat":
+        assert first.settles.split(" again")[0] in step and "twice in a row" in step
+    elif first.purpose == "measure-pad":
+        assert device.drive.pads[0].name in step and step.startswith("Measure pad")
+    else:
+        assert f"{', '.join(first.input_pads)} at the input" in step
+        assert first.drive_dbm is not None and f"(−{-first.drive_dbm:.1f} dBm drive)" in step
+
+
+@pytest.mark.parametrize(
+    ("name", "aside"),
+    [
+        ("converter stage", {"converter_first.s2p": "did not repeat"}),
+        ("oscillator buffer", dict.fromkeys(("oscillator_lowest.s2p", "oscillator_low.s2p"), "pad f20 suspect")),
+    ],
+)
+def test_what_the_cause_explains_is_not_called_compressed(
+    result: BenchResult, name: str, aside: dict[str, str]
+) -> None:
+    device = device_of(result, name)
+    assert device.drive is not None and device.compression is not None
+    assert dict(device.drive.set_aside) == aside
+    down = {point.file for point in device.compression.points if point.compressed}
+    assert down and down <= set(aside)
+    assert "compressed-sweep" not in codes(result, name)
+
+
+def test_a_compressed_sweep_points_to_the_sweep_that_has_the_pad_already(result: BenchResult) -> None:
+    found = {f.sweep: f.advice for f in device_of(result, "preamplifier").findings if f.code == "compressed-sweep"}
+    assert found == {
+        "pre_high.s2p": "take figures from pre_low.s2p, swept with 17 dB more input pad",
+        "pre_full.s2p": "take figures from pre_low.s2p, swept with 20 dB more input pad",
+    }
+    (open_yet,) = (f for f in device_of(result, "mixer amplifier").findings if f.code == "compressed-sweep")
+    assert open_yet.advice.startswith("if the device limits, take figures from mixer_low.s2p")
+
+
+def test_input_or_pad_advises_what_is_planned(result: BenchResult) -> None:
+    # With a20 behind the device it limits as before, and a pad of another loss shows on the other side.
+    device = device_of(result, "mixer amplifier")
+    step = device.summary.next_step
+    assert step.startswith("Sweep with b10 at the input and c10, a20 at the output (−18.0 dBm drive): it shows which")
+    # At the drive of mixer_high.s2p a limiting device reads the same, a pad that is off gives the other gain.
+    assert device.compression is not None
+    gain = {point.file: point.gain_db for point in device.compression.points}
+    limits = re.search(r"([\d.]+) dB if the device limits at its input", step)
+    off = re.search(r"([\d.]+) dB if pad a20 is off", step)
+    assert limits is not None and off is not None
+    assert_allclose(float(limits[1]), gain["mixer_high.s2p"], rtol=0, atol=0.05)
+    assert_allclose(float(off[1]), gain["mixer_low.s2p"], rtol=0, atol=0.05)
+
+
+def test_no_message_has_a_hyphen_for_a_minus(result: BenchResult) -> None:
+    for device in result.devices:
+        planned = device.drive.next_sweeps if device.drive is not None else ()
+        said = [f"{f.message} {f.advice}" for f in device.findings] + [sweep.settles for sweep in planned]
+        assert not [text for text in [*said, device.summary.next_step] if re.search(r"(^|[\s(±])-\d", text)]
+    assert "at 21.4 MHz and −18.0 dBm drive" in next(
+        f.message
+        for f in device_of(result, "preamplifier").findings
+        if f.sweep == "pre_full.s2p" and "drive" in f.message and f.code == "compressed-sweep"
+    )
+
+
 def test_the_receiver_is_the_likeliest_cause_whatever_is_concluded(result: BenchResult) -> None:
     drive = device_of(result, "third IF stage").drive
     assert drive is not None and drive.probabilities["receiver-overload"] > 0.9
-    assert {finding.code for finding in device_of(result, "third IF stage").findings} >= {"receiver-near-limit"}
+    # third_padded.s2p is what more output pad would show, and the cause says the rest.
+    assert dict(drive.set_aside) == {"third_high.s2p": "receiver overloaded"}
+    assert not {"receiver-near-limit", "compressed-sweep"} & set(codes(result, "third IF stage"))
 
 
 def test_the_pad_interval_holds_what_the_pad_truly_loses(result: BenchResult) -> None:

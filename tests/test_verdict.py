@@ -92,6 +92,11 @@ def test_summary_names_the_figure_and_the_way_out():
     summary = summarise([target], {"gain": figure}, [finding])
     assert summary.reason == "Gain is 14.19 dB (13.79 to 14.59), wanted ≥ 14 dB."
     assert summary.next_step == "Measure pad a20 as a .s2p file."
+    # Narrowing a figure is no use while the bench does not repeat.
+    restless = Finding("reference-not-repeating", "caution", "m", "sweep it twice")
+    assert summarise([target], {"gain": figure}, [restless]).next_step == "Sweep it twice."
     met = TargetResult("gain", "gain", "dB", 10.0, None, "met", 1.0)
     assert summarise([met], {"gain": figure}, [finding]).next_step == "Sweep again."
     assert summarise([met], {"gain": figure}, []).next_step == "Nothing: file this page."
+    with_plan = summarise([met], {"gain": figure}, [], planned=True).next_step
+    assert with_plan == "Nothing: file this page; `benchtool next` has what would tell more."
