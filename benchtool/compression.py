@@ -26,6 +26,8 @@ _REFERENCE_SNR_DB: Final = 30.0
 """Signal to noise at the peak that a sweep needs to serve as the reference: 0.27 dB on a single sample."""
 _NO_SIGNAL_DB: Final = -300.0
 """Stands for the level of a sweep that reads zero, so that differences of levels stay numbers."""
+_CLEARLY_WORSE_DB: Final = 0.05
+"""The worst place of the band is named only where it is worse than the design frequency by more than this."""
 _BAND_NODES: Final = 41
 _SAME_DRIVE_DB: Final = 0.01
 
@@ -129,7 +131,8 @@ def compare_drives(
         change = _level_db(base) - _level_db(_over_band(sweep.result.sweep, sweep.plan, nodes))
         worst = int(np.argmax(change))
         drop = float(_level_db(base_at) - _level_db(here))
-        deepest = max(float(change[worst]), drop)
+        elsewhere = float(change[worst]) > drop + _CLEARLY_WORSE_DB
+        deepest = float(change[worst]) if elsewhere else drop
         points.append(
             CompressionPoint(
                 sweep.file,
@@ -140,7 +143,7 @@ def compare_drives(
                 float(wrap_degrees(float(np.degrees(np.angle(here * np.conj(base_at)))))),
                 float(_level_db(base_peak) - _level_db(peak)),
                 deepest,
-                float(nodes[worst]) if deepest > drop else at_hz,
+                float(nodes[worst]) if elsewhere else at_hz,
                 sweep is not reference and deepest > COMPRESSED_DB,
             )
         )

@@ -1,36 +1,35 @@
 """One sweep, its plan of figures and its sources of doubt in; copies of it as it might have been read, out.
 
-Only the samples that some figure rests on are copied. Distributions are those of :mod:`benchtool.doubts`.
+Distributions are those of :mod:`benchtool.doubts`; how copies come to the figures is told in :mod:`benchtool.copies`.
 """
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from typing import Final
 
 import numpy as np
-from numpy.typing import NDArray
 
+from benchtool.copies import TraceCopies, TraceModel
 from benchtool.doubts import Joint, SweepDoubts, pad_doubt_db
 from benchtool.figures import FigurePlan
-from benchtool.fitting import Part
 from benchtool.model import ComplexArray, FloatArray, Sweep
 from benchtool.noise import NOISE_FREE
 from benchtool.pads import PadBank
 from benchtool.units import from_db
 
-__all__ = ["Draws"]
+__all__ = ["SweepCopier"]
 
 _REFLECTIONS: Final = {"S11": 0, "S22": 1}
 
 
-class Draws:
+class _Draws:
     """Draws of the quantities that bear on all of a sweep, made on demand and kept, (trials,) each.
 
     With `only` set, every source but the named one stands still: that is how a budget is made.
     """
 
-    def __init__(self, rng: np.random.Generator, trials: int, bank: PadBank, only: str | None = None) -> None:
+    def __init__(self, rng: np.random.Generator, trials: int, bank: PadBank, only: str | None) -> None:
         self.rng = rng
         self.trials = trials
         self.bank = bank
@@ -42,7 +41,7 @@ class Draws:
         return self.only is None or self.only == source
 
     def pad_db(self, name: str) -> FloatArray:
-        """Return the error of a pad's loss, dB, (trials,): the same for every sweep."""
+        """Return the error of a pad's loss, dB: the same for every sweep."""
         if name not in self._pads:
             width, is_limit = pad_doubt_db(name, self.bank)
             if not self.active(f"pad {name}"):
@@ -53,119 +52,104 @@ class Draws:
                 self._pads[name] = self.rng.normal(0.0, width, self.trials)
         return self._pads[name]
 
-    def phasor(self) -> ComplexArray:
-        """Return vectors of unit length and unknown phase, (trials, 1)."""
-        turned: ComplexArray = np.exp(2j * np.pi * self.rng.uniform(size=(self.trials, 1)))
-        return turned
-
-    def circular(self, sigma: FloatArray) -> ComplexArray:
-        """Return circular complex noise with rms `sigma` (m,), (trials, m)."""
-        # Seven digits are plenty for noise, and are drawn in half the time.
-        pairs = self.rng.standard_normal((self.trials, sigma.size, 2), np.float32)
-        noise: ComplexArray = pairs.view(np.complex64)[..., 0] * (sigma / np.sqrt(2.0))
-        return noise
-
-    def perturb(self, sweep: Sweep, plan: FigurePlan, doubts: SweepDoubts) -> dict[str, Part]:
-        """Return copies of a sweep at the device as it might have been read, (trials, m) of each parameter in use."""
-        into = self._pads_factor(doubts.input_weights)
-        out = self._pads_factor(doubts.output_weights)
-        through: ComplexArray | FloatArray = into * out
-        if self.active("reading") and doubts.reading_db > 0.0:
-            through = through * self._reading(doubts.reading_db)
-        joints = list(self._joints(doubts)) if self.active("mismatch") else []
-        copies: dict[str, ComplexArray] = {}
-        for name, used in plan.used.items():
-            trace = _trace(sweep, name)[used]
-            if name not in _REFLECTIONS:
-                copies[name] = trace * through
-                for joint in joints:
-                    copies[name] *= joint.factor(sweep, used)
-                continue
-            port = _REFLECTIONS[name]
-            turned = port == 1 and not doubts.turned
-            factor: ComplexArray | FloatArray = (out if turned else into) ** 2
-            if self.active("reading") and doubts.reading_db > 0.0:
-                factor = factor * self._reading(doubts.reading_db)
-            copies[name] = (trace * factor).astype(np.complex128, copy=False)
-            if self.active("directivity"):
-                vectors = doubts.output_vectors if port else doubts.input_vectors
-                copies[name] += sum(vector * self.phasor() for vector in vectors)
-            if self.active("mismatch"):
-                copies[name] += self._seen_through(sweep, doubts, port, used)
-        for source, sigma in self._sample_noise(sweep, plan):
-            if self.active(source):
-                for name, spread in sigma.items():
-                    if np.any(spread):
-                        copies[name] = copies[name] + self.circular(spread)
-        return {
-            name: Part(np.broadcast_to(values, (self.trials, values.shape[-1])), plan.used[name])
-            for name, values in copies.items()
-        }
-
-    def _pads_factor(self, weights: Mapping[str, int]) -> FloatArray:
+    def pads_factor(self, weights: Mapping[str, int]) -> FloatArray:
+        """Return what the errors of pads make of a wave that went through them."""
         total = np.zeros(self.trials)
         for name, sign in weights.items():
             total = total + sign * self.pad_db(name)
-        return from_db(total)[:, None]
+        return from_db(total)
 
-    def _reading(self, reading_db: float) -> ComplexArray:
+    def phasor(self, source: str) -> ComplexArray:
+        """Return vectors of unit length and unknown phase; of no length where their source stands still."""
+        if not self.active(source):
+            return np.zeros(self.trials, np.complex128)
+        turned: ComplexArray = np.exp(2j * np.pi * self.rng.uniform(size=self.trials))
+        return turned
+
+    def reading(self, reading_db: float) -> ComplexArray:
+        """Return the factor of a reading's error."""
+        if not self.active("reading") or reading_db <= 0.0:
+            return np.ones(self.trials, np.complex128)
         # The same share in magnitude and in phase: 0.05 dB is 0.58 %, hence 0.33°.
         spread = np.log(10.0) / 20.0 * reading_db
         both = self.rng.normal(0.0, spread, (self.trials, 2)) @ np.array([1.0, 1j])
-        factor: ComplexArray = np.exp(both)[:, None]
+        factor: ComplexArray = np.exp(both)
         return factor
 
-    def _joints(self, doubts: SweepDoubts) -> Iterator[_DrawnJoint]:
-        for joint in (*doubts.input_joints, *doubts.output_joints):
-            passed: FloatArray = np.ones((self.trials, 1))
-            for pad in joint.through:
-                passed = passed * from_db(-2.0 * self.pad_db(pad))[:, None]
-            product = joint.magnitude * self.phasor() * passed
-            resonant = joint.resonant * self.phasor() * passed if joint.resonant > 0.0 else None
-            yield _DrawnJoint(joint, product, resonant)
 
-    def _seen_through(self, sweep: Sweep, doubts: SweepDoubts, port: int, used: NDArray[np.intp]) -> ComplexArray:
-        """Return what the ports' own match adds to a reflection: round the near joint, and through to the far port."""
-        sides = (doubts.input_ports, doubts.output_ports)
-        near, far = sides if port == 0 else sides[::-1]
-        own = sweep.s[port, port, used]
-        added: ComplexArray = sum(size * self.phasor() for size in near) * own**2
-        if port == 0:
-            for product in doubts.input_between:
-                added = added + product * self.phasor() * own
-        if "S12" in sweep.measured and "S21" in sweep.measured:
-            added = added + sum(size * self.phasor() for size in far) * (sweep.s12[used] * sweep.s21[used])
-        return added
+class SweepCopier:
+    """Makes copies of one sweep at the device; what does not change from copy to copy is worked out once."""
 
-    def _sample_noise(self, sweep: Sweep, plan: FigurePlan) -> Iterator[tuple[str, dict[str, FloatArray]]]:
-        yield (
-            "noise",
-            {
-                name: (plan.noise.get(name) or NOISE_FREE).sigma(np.abs(_trace(sweep, name)[used]))
-                for name, used in plan.used.items()
-            },
-        )
+    def __init__(self, sweep: Sweep, plan: FigurePlan, doubts: SweepDoubts, bank: PadBank) -> None:
+        self._doubts, self._bank = doubts, bank
+        self._joints = (*doubts.input_joints, *doubts.output_joints)
+        traces = {f"S{i + 1}{j + 1}": sweep.s[i, j] for i in range(2) for j in range(2)}
+        through = traces["S21"]
+        shape = through / max(float(np.max(np.abs(through))), 1e-300)
+        joints = [_functions(joint, traces, shape) for joint in self._joints]
+        loop = [traces["S12"] * through] if "S12" in sweep.measured else []
         misfit = np.zeros(sweep.frequency_hz.size)
         for fit in (*plan.passband.curve.fits, *plan.design_curve.fits):
             misfit[fit.start : fit.stop] = np.maximum(misfit[fit.start : fit.stop], fit.misfit)
-        yield "interpolation", {"S21": misfit[plan.used["S21"]]}
+        self._models: dict[str, TraceModel] = {}
+        for name, curves in plan.curves.items():
+            own, fits = traces[name], [fit for curve in curves for fit in curve.fits]
+            noises = {"noise": (plan.noise.get(name) or NOISE_FREE).sigma(np.abs(own))}
+            if name not in _REFLECTIONS:
+                if name == "S21":
+                    noises["interpolation"] = misfit
+                self._models[name] = TraceModel(own, fits, joints, (), noises)
+                continue
+            # Error vectors; the near joint, passed twice; between port and pad, once; the far port, through the device.
+            self._models[name] = TraceModel(own, fits, (), [np.ones_like(own), own**2, own, *loop], noises)
+
+    def copies(self, rng: np.random.Generator, trials: int, only: str | None = None) -> dict[str, TraceCopies]:
+        """Return copies of every trace that figures are taken from, with all sources of doubt or one alone."""
+        draws = _Draws(rng, trials, self._bank, only)
+        doubts = self._doubts
+        into, out = draws.pads_factor(doubts.input_weights), draws.pads_factor(doubts.output_weights)
+        through = into * out * draws.reading(doubts.reading_db)
+        sizes: list[ComplexArray] = []
+        for joint in self._joints:
+            alone, seen = _drawn(joint, draws)
+            through = through * alone
+            sizes += seen
+        found = {}
+        for name, model in self._models.items():
+            noises = [source for source in model.noises if draws.active(source)]
+            if name not in _REFLECTIONS:
+                found[name] = TraceCopies(model, rng, through, sizes, (), noises)
+                continue
+            first = name == "S11"
+            scale = (into if first or doubts.turned else out) ** 2 * draws.reading(doubts.reading_db)
+            added = self._added(draws, first, len(model.terms))
+            found[name] = TraceCopies(model, rng, scale, (), added, noises)
+        return found
+
+    def _added(self, draws: _Draws, first: bool, count: int) -> list[ComplexArray]:
+        """Return the size of each term of a reflection: what directivity, pads and the ports' own match add to it."""
+        doubts = self._doubts
+        vectors = doubts.input_vectors if first else doubts.output_vectors
+        near, far = (doubts.input_ports, doubts.output_ports)[:: 1 if first else -1]
+        between = doubts.input_between if first else ()
+        sources = (("directivity", vectors), ("mismatch", near), ("mismatch", between), ("mismatch", far))
+        nothing = np.zeros(draws.trials, np.complex128)
+        return [sum((size * draws.phasor(source) for size in sizes), nothing) for source, sizes in sources[:count]]
 
 
-class _DrawnJoint:
-    """One joint of reflections with its phases drawn."""
-
-    def __init__(self, joint: Joint, product: ComplexArray, resonant: ComplexArray | None) -> None:
-        self._joint, self._product, self._resonant = joint, product, resonant
-
-    def factor(self, sweep: Sweep, used: NDArray[np.intp]) -> ComplexArray:
-        """Return what the joint makes of a wave that goes through it, at the samples in use."""
-        device = self._joint.device
-        added = self._product if device is None else self._product * _trace(sweep, device)[used]
-        if self._resonant is not None:
-            added = added + self._resonant * (sweep.s21[used] / np.max(np.abs(sweep.s21)))
-        return 1.0 + added
+def _functions(joint: Joint, traces: Mapping[str, ComplexArray], shape: ComplexArray) -> list[ComplexArray]:
+    """Return what of a joint follows frequency: a reflection of the device, or the resonance."""
+    found = [] if joint.device is None else [traces[joint.device]]
+    return [*found, shape] if joint.resonant > 0.0 else found
 
 
-def _trace(sweep: Sweep, name: str) -> ComplexArray:
-    trace: ComplexArray = sweep.s[int(name[1]) - 1, int(name[2]) - 1]
-    return trace
+def _drawn(joint: Joint, draws: _Draws) -> tuple[ComplexArray, list[ComplexArray]]:
+    """Return the factor of a joint that is the same at all frequencies, and the sizes of its functions beside it."""
+    passed = np.ones(draws.trials)
+    for pad in joint.through:
+        passed = passed * from_db(-2.0 * draws.pad_db(pad))
+    product = joint.magnitude * draws.phasor("mismatch") * passed
+    resonant = [joint.resonant * draws.phasor("mismatch") * passed] if joint.resonant > 0.0 else []
+    if joint.device is not None:
+        return np.ones(draws.trials, np.complex128), [product, *resonant]
+    return 1.0 + product, [size / (1.0 + product) for size in resonant]

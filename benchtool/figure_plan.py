@@ -11,7 +11,6 @@ from functools import cached_property
 from typing import TypeAlias
 
 import numpy as np
-from numpy.typing import NDArray
 
 from benchtool.fitting import Curve, Trace, fit_curve
 from benchtool.model import Bound, ComplexArray, Figure, Finding, FloatArray, Kind, Sweep
@@ -47,20 +46,11 @@ class FigurePlan:
     extractors: Mapping[str, Extractor | None]
     findings: tuple[Finding, ...] = field(default=())
 
-    @cached_property
-    def used(self) -> Mapping[str, NDArray[np.intp]]:
-        """Numbers of the samples that any figure rests on, by the parameter: copies need no others."""
-        ranges = {
-            name: [np.arange(fit.start, fit.stop) for curve in curves for fit in curve.fits]
-            for name, curves in self.curves.items()
-        }
-        return {name: np.unique(np.concatenate(each)) for name, each in ranges.items()}
-
     def extract(self, s: ComplexArray | Traces) -> dict[str, FloatArray]:
         """Return each figure that can be known, (...,), from scattering parameters (..., 2, 2, n) at the device.
 
-        In place of these, traces may be given that hold only the samples in use. NaN stands where a copy does not show
-        the figure (an edge that moved out of the sweep).
+        In place of these, copies of the traces in use may be given in a form of their own. NaN stands where a copy does
+        not show the figure (an edge that moved out of the sweep).
         """
         if isinstance(s, np.ndarray):
             traces: Traces = {f"S{i + 1}{j + 1}": s[..., i, j, :] for i in range(2) for j in range(2)}

@@ -17,16 +17,15 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 from functools import cache, cached_property
 from itertools import pairwise
-from typing import Final, TypeAlias
+from typing import Final, Protocol, TypeAlias
 
 import numpy as np
 from numpy.polynomial import legendre
-from numpy.typing import NDArray
 
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import NOISE_FREE, NoiseModel, line_delay, moving_average, rotation, trend_delay
 
-__all__ = ["Curve", "Fit", "Part", "Trace", "fit_curve"]
+__all__ = ["Copies", "Curve", "Fit", "Trace", "fit_curve"]
 
 MAX_DEGREE: Final = 10
 _MIN_POINTS: Final = 5
@@ -50,16 +49,16 @@ def _times(data: ComplexArray, matrix: FloatArray) -> ComplexArray:
     return product
 
 
-@dataclass(frozen=True, eq=False)
-class Part:
-    """Some samples of a trace, or of copies of it: `values` (..., m) of the samples numbered `index` (m,), rising."""
+class Copies(Protocol):
+    """Copies of a trace that give the coefficients of a fit without being written out sample by sample."""
 
-    values: ComplexArray
-    index: NDArray[np.intp]
+    def coefficients(self, fit: Fit) -> ComplexArray:
+        """Return the Legendre coefficients of a fit to the copies, (copies, degree + 1)."""
+        ...
 
 
-Trace: TypeAlias = ComplexArray | Part
-"""A trace or copies of it: all samples (..., n), or those alone that are asked for."""
+Trace: TypeAlias = ComplexArray | Copies
+"""A trace, (n,), or copies of it, (..., n) or in a form of their own."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -89,16 +88,18 @@ class Fit:
 
     def coefficients(self, s: Trace) -> ComplexArray:
         """Return the Legendre coefficients, (..., degree + 1), of a trace or of copies of it."""
-        turned = self._samples(s) * self.turn
-        if self.inverse:
-            turned = 1.0 / turned
-        return _times(turned, self.solve.T)
+        if isinstance(s, np.ndarray):
+            return self.coefficients_of_samples(s[..., self.start : self.stop])
+        return s.coefficients(self)
 
-    def _samples(self, s: Trace) -> ComplexArray:
-        if not isinstance(s, Part):
-            return s[..., self.start : self.stop]
-        first = int(np.searchsorted(s.index, self.start))
-        return s.values[..., first : first + self.stop - self.start]
+    def coefficients_of_samples(self, samples: ComplexArray) -> ComplexArray:
+        """Return the Legendre coefficients, (..., degree + 1), of the samples the fit rests on, (..., stop - start)."""
+        turned = samples * self.turn
+        return self.project(1.0 / turned if self.inverse else turned)
+
+    def project(self, values: ComplexArray) -> ComplexArray:
+        """Return the coefficients, (..., degree + 1), of values in the form that is fitted, (..., stop - start)."""
+        return _times(values, self.solve.T)
 
     def basis(self, frequency_hz: FloatArray) -> FloatArray:
         """Return the basis functions at frequencies (...,), (..., degree + 1)."""

@@ -18,7 +18,7 @@ import numpy as np
 
 from benchtool.compression import MeasuredSweep
 from benchtool.doubts import SweepDoubts
-from benchtool.draws import Draws
+from benchtool.draws import SweepCopier
 from benchtool.model import Bound, Figure, Finding, FloatArray
 from benchtool.pads import PadBank
 from benchtool.propagation import BLOCK, coverage_interval, run_blocks
@@ -80,12 +80,11 @@ def figure_trials(
     seed : of the draws
     """
     sweep, plan = measured.result.sweep, measured.plan
-    rng = np.random.default_rng(seed)
+    rng, copier = np.random.default_rng(seed), SweepCopier(sweep, plan, doubts, bank)
     known = [key for key, figure in figures.items() if figure.value is not None]
 
     def block(count: int, only: str | None = None) -> dict[str, FloatArray]:
-        copies = Draws(rng, count, bank, only).perturb(sweep, plan, doubts)
-        found = plan.extract(copies)
+        found = plan.extract(copier.copies(rng, count, only))
         return {key: found[key] for key in known if key in found}
 
     size = _block_size(sweep.frequency_hz.size)

@@ -48,6 +48,7 @@ LAYERS = [
     "figures",
     "propagation",
     "doubts",
+    "copies",
     "draws",
     "digits",
     "compression",
