@@ -53,7 +53,7 @@ _RECEIVER_UNSTATED: Final = (0.0, 7.0)
 """The 1 dB point in dBm of a low-cost receiver of which nothing is stated: mean and standard deviation (common
 practice, no source)."""
 _LEAST_U_DB: Final = 0.005
-_GRIDS: Final = ((21, 5), (21, 7), (31, 9))
+_GRIDS: Final = ((21, 5), (21, 7), (21, 9))
 """Places of the 1 dB point, and values of Rapp's p, that each look takes in."""
 _NEWTON_STEPS: Final = 6
 _STILL_DB: Final = 1e-6

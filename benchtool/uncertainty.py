@@ -27,6 +27,8 @@ from benchtool.units import from_db, to_db
 __all__ = ["FigureTrials", "figure_trials"]
 
 _BUDGET_TRIALS: Final = 250
+_BIAS_TRIALS: Final = 1000
+"""Trials with noise alone: their median is the bias that is taken out, and must not wander."""
 _MAY_BE_LOST: Final = 0.01
 _BLOCK_BYTES: Final = 48e6
 """Memory that one block of perturbed copies may take."""
@@ -109,8 +111,9 @@ def figure_trials(
 
 def _alone(block: _Block, source: str, size: int) -> dict[str, FloatArray]:
     """Return trials of every figure with one source of doubt alone."""
-    steps = -(-_BUDGET_TRIALS // size)
-    parts = [block(-(-_BUDGET_TRIALS // steps), source) for _ in range(steps)]
+    count = _BIAS_TRIALS if source == "noise" else _BUDGET_TRIALS
+    steps = -(-count // size)
+    parts = [block(-(-count // steps), source) for _ in range(steps)]
     return {key: np.concatenate([part[key] for part in parts]) for key in parts[0]}
 
 
