@@ -13,7 +13,7 @@ import numpy as np
 
 from benchtool import __version__
 from benchtool.advice import agreed, onset_advice, reference_finding
-from benchtool.compression import MeasuredSweep, choose_reference, compare_drives, signal_to_noise_db
+from benchtool.compression import MeasuredSweep, choose_reference, compare_drives
 from benchtool.compression_study import onset_figures, study_compression
 from benchtool.doubts import SweepDoubts, assumptions, pads_that_count, sweep_doubts
 from benchtool.drive_results import DriveStudy
@@ -29,7 +29,7 @@ from benchtool.sheet import BenchSheet, Device, SweepEntry
 from benchtool.small_signal import BOUND_WHEN_COMPRESSED, carry_drive_doubt
 from benchtool.touchstone import read_sweep
 from benchtool.uncertainty import figure_trials
-from benchtool.units import format_si
+from benchtool.units import format_si, to_db
 from benchtool.verdict import judge, remedy, summarise
 
 __all__ = ["analyse", "analyse_device", "correct_sweep", "made_at", "read_all"]
@@ -253,7 +253,7 @@ def _study_drive(
     study = study_compression(measured, device.sweeps, sheet, bank, at_hz, reference.file, device.kind)
     if study is None:
         return None, ()
-    planned = plan_next(sheet, bank, device.sweeps, study, signal_to_noise_db(reference.result.sweep, reference.plan))
+    planned = plan_next(sheet, bank, device.sweeps, study, reference.signal_to_noise_db)
     # That a device limits at a high drive is worth knowing, but no doubt about figures that a proven reference gives.
     harmless = study.verdict is not None and study.verdict.device_compresses and study.onset.reference.proven
     findings = [
@@ -306,7 +306,8 @@ def _measure(
     if device.design_hz is None:
         result = correct_sweep(sheet, entry, sweep, bank, plan.design_hz, turned)
     path = _path(sheet, entry, bank, plan, result.sweep)
-    return MeasuredSweep(replace(result, path=path, noise_db=signal_to_noise_db(result.sweep, plan)), plan)
+    measured = MeasuredSweep(replace(result, path=path), plan)
+    return replace(measured, result=replace(measured.result, noise_db=measured.signal_to_noise_db))
 
 
 def _check_window(sheet: BenchSheet, device: Device, number: int, sweep: Sweep) -> None:
@@ -325,9 +326,7 @@ def _check_window(sheet: BenchSheet, device: Device, number: int, sweep: Sweep) 
 def _path(sheet: BenchSheet, entry: SweepEntry, bank: PadBank, plan: FigurePlan, sweep: Sweep) -> SignalPath:
     f = sweep.frequency_hz
     inside = f[0] <= plan.design_hz <= f[-1]
-    gain = float(plan.extract(sweep.s)["gain" if plan.kind != "filter" else "insertion_loss"]) if inside else None
-    if gain is not None and plan.kind == "filter":
-        gain = -gain
+    gain = float(to_db(plan.design_curve.at(sweep.s21, plan.design_hz)[0])) if inside else None
     return signal_path(entry, sheet, bank, plan.design_hz, gain)
 
 

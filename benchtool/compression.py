@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Final
 
 import numpy as np
@@ -16,9 +17,10 @@ from benchtool.digits import level_text
 from benchtool.figures import FigurePlan
 from benchtool.fitting import fit_curve
 from benchtool.model import ComplexArray, Compression, CompressionPoint, FloatArray, Sweep, SweepResult
+from benchtool.response import PassbandFigures
 from benchtool.units import to_db, wrap_degrees
 
-__all__ = ["COMPRESSED_DB", "MeasuredSweep", "choose_reference", "compare_drives", "signal_to_noise_db"]
+__all__ = ["COMPRESSED_DB", "MeasuredSweep", "choose_reference", "compare_drives"]
 
 COMPRESSED_DB: Final = 1.0
 """A sweep further down than this is called compressed (the 1 dB compression point, common practice)."""
@@ -49,15 +51,20 @@ class MeasuredSweep:
         """Drive at the design frequency."""
         return self.result.drive_dbm
 
+    @cached_property
+    def passband(self) -> PassbandFigures:
+        """Peak, edges and what follows from them, as this sweep shows them."""
+        return self.plan.passband.figures(self.result.sweep.s21)
 
-def signal_to_noise_db(sweep: Sweep, plan: FigurePlan) -> float | None:
-    """Return the signal to noise ratio of S21 at its peak in dB; None where the noise cannot be told or is none."""
-    noise = plan.noise.get("S21")
-    if noise is None:
-        return None
-    peak = 10.0 ** (float(plan.passband.figures(sweep.s21).peak_gain) / 20.0)
-    sigma = float(noise.sigma(np.array(peak)))
-    return None if sigma == 0.0 else to_db(peak / sigma)
+    @cached_property
+    def signal_to_noise_db(self) -> float | None:
+        """Signal to noise ratio of S21 at its peak in dB; None where the noise cannot be told or is none."""
+        noise = self.plan.noise.get("S21")
+        if noise is None:
+            return None
+        peak = 10.0 ** (float(self.passband.peak_gain) / 20.0)
+        sigma = float(noise.sigma(np.array(peak)))
+        return None if sigma == 0.0 else to_db(peak / sigma)
 
 
 def choose_reference(sweeps: Sequence[MeasuredSweep]) -> tuple[MeasuredSweep, str]:
@@ -74,7 +81,7 @@ def choose_reference(sweeps: Sequence[MeasuredSweep]) -> tuple[MeasuredSweep, st
         quiet = max(sweeps, key=lambda sweep: sum(pad.loss_db for pad in sweep.result.path.input_pads))
         return quiet, "it has the most input pad; the source level is not known, so drives are not known either"
     ordered = sorted(sweeps, key=lambda sweep: sweep.drive_dbm or 0.0)
-    ratios = [signal_to_noise_db(sweep.result.sweep, sweep.plan) for sweep in ordered]
+    ratios = [sweep.signal_to_noise_db for sweep in ordered]
     for rank, (sweep, ratio) in enumerate(zip(ordered, ratios, strict=True)):
         if ratio is None or ratio >= _REFERENCE_SNR_DB:
             if rank == 0:
@@ -101,7 +108,7 @@ def _over_band(sweep: Sweep, plan: FigurePlan, nodes: FloatArray) -> ComplexArra
 
 def _band(sweeps: Sequence[MeasuredSweep], reference: MeasuredSweep, at_hz: float) -> FloatArray:
     """Return the nodes over which sweeps are compared: the reference's half-power band that all sweeps cover."""
-    figures = reference.plan.passband.figures(reference.result.sweep.s21)
+    figures = reference.passband
     low = max(float(sweep.result.sweep.frequency_hz[0]) for sweep in sweeps)
     high = min(float(sweep.result.sweep.frequency_hz[-1]) for sweep in sweeps)
     lower, upper = float(figures.lower_edge), float(figures.upper_edge)
@@ -121,7 +128,7 @@ def compare_drives(
     if len(sweeps) < 2:
         return None
     nodes = _band(sweeps, reference, at_hz)
-    peak_hz = float(reference.plan.passband.figures(reference.result.sweep.s21).peak_frequency)
+    peak_hz = float(reference.passband.peak_frequency)
     base = _over_band(reference.result.sweep, reference.plan, nodes)
     base_at, base_peak = _at(reference, at_hz), _at(reference, peak_hz)
     points = []

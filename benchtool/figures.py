@@ -19,7 +19,7 @@ from benchtool.match import stability, worst_return_loss
 from benchtool.model import Bound, Figure, FloatArray, Kind, Sweep
 from benchtool.noise import estimate_noise
 from benchtool.phase import delay_variation, phase_linearity
-from benchtool.response import LevelWidth, Passband, plan_level_width, plan_passband
+from benchtool.response import LevelWidth, Passband, PassbandFigures, plan_level_width, plan_passband
 from benchtool.sheet import TargetSpec
 from benchtool.units import HALF_POWER_DB, to_db, wrap_degrees
 
@@ -72,8 +72,8 @@ def plan_figures(
         width = float(grid[-1] - grid[0])
         design_curve = build.curve("S21", at - 0.1 * width, at + 0.1 * width)
     build.uses("S21", passband.curve)
-    _add_transmission(build, passband, inside_sweep, design_curve, at)
-    _add_match(build, passband, at, inside_sweep)
+    _add_transmission(build, passband, peak, inside_sweep, design_curve, at)
+    _add_match(build, passband, peak, at, inside_sweep)
     for target in targets:
         _add_target(build, passband, target, peak_hz)
     return FigurePlan(
@@ -89,7 +89,9 @@ def plan_figures(
     )
 
 
-def _add_transmission(build: FigureBuilder, band: Passband, inside: bool, design_curve: Curve, at_hz: float) -> None:
+def _add_transmission(
+    build: FigureBuilder, band: Passband, figures: PassbandFigures, inside: bool, design_curve: Curve, at_hz: float
+) -> None:
     at = {"at_hz": at_hz}
     headline = "insertion_loss" if build.kind == "filter" else "gain"
     build.add(headline, _given(headline) if inside else None, parameters=at)
@@ -107,12 +109,12 @@ def _add_transmission(build: FigureBuilder, band: Passband, inside: bool, design
     centre_bound: Bound | None = None if both else ("at least" if band.lower_inside else "at most")
     build.add("centre_frequency", None if neither else _given("centre_frequency"), centre_bound)
     build.add("loaded_q", _given("loaded_q"), None if both else "at most")
-    aperture = {**at, "aperture_hz": _aperture(build, band), "fitted_over_hz": design_curve.span_hz}
+    aperture = {**at, "aperture_hz": _aperture(build, figures), "fitted_over_hz": design_curve.span_hz}
     build.add("group_delay", _given("group_delay") if inside else None, parameters=aperture)
     build.add("phase", _given("phase") if inside else None, parameters=at)
 
 
-def _aperture(build: FigureBuilder, band: Passband) -> float:
+def _aperture(build: FigureBuilder, figures: PassbandFigures) -> float:
     """Return the aperture at which a delay curve of this sweep is best drawn, Hz.
 
     An aperture of x bandwidths reads a single-tuned delay low by x²/3 and has a noise that falls as 1/x; both
@@ -120,7 +122,6 @@ def _aperture(build: FigureBuilder, band: Passband) -> float:
     """
     f = build.sweep.frequency_hz
     spacing = float(np.max(np.diff(f), initial=0.0))
-    figures = band.figures(build.sweep.s21)
     width = float(figures.bandwidth) if np.isfinite(figures.bandwidth) else float(f[-1] - f[0])
     noise = build.noise.get("S21")
     level = 10.0 ** (float(figures.peak_gain) / 20.0)
@@ -135,8 +136,7 @@ def _peak_node(build: FigureBuilder, band: Passband) -> int:
     return int(np.argmax(np.abs(value[start:stop]))) + start
 
 
-def _add_match(build: FigureBuilder, band: Passband, at_hz: float, inside: bool) -> None:
-    edges = band.figures(build.sweep.s21)
+def _add_match(build: FigureBuilder, band: Passband, edges: PassbandFigures, at_hz: float, inside: bool) -> None:
     if band.lower_inside and band.upper_inside and np.isfinite(edges.bandwidth):
         low, high = float(edges.lower_edge), float(edges.upper_edge)
         where: dict[str, float | tuple[float, float]] = {"band_hz": (low, high)}

@@ -13,7 +13,7 @@ from typing import Final
 import numpy as np
 
 from benchtool.causes import NAMED, STILL_POSSIBLE
-from benchtool.compression import MeasuredSweep, signal_to_noise_db
+from benchtool.compression import MeasuredSweep
 from benchtool.digits import decibels, level_text, stated
 from benchtool.doubts import SweepDoubts
 from benchtool.drive_results import DriveStudy
@@ -167,7 +167,7 @@ def _level_settled(
 
 
 def _noise(sweep: MeasuredSweep) -> Iterator[Finding]:
-    ratio = signal_to_noise_db(sweep.result.sweep, sweep.plan)
+    ratio = sweep.signal_to_noise_db
     if ratio is not None and ratio < _NOISY_SNR_DB:
         yield Finding(
             "noise-limited",
@@ -285,7 +285,7 @@ def _shape(reference: MeasuredSweep) -> Iterator[Finding]:
 
 
 def _against_design(kind: Kind, design_hz: float | None, reference: MeasuredSweep) -> Iterator[Finding]:
-    band = reference.plan.passband.figures(reference.result.sweep.s21)
+    band = reference.passband
     peak, width = float(band.peak_frequency), float(band.bandwidth)
     file = reference.file
     if (
@@ -318,7 +318,7 @@ def _cross_checks(kind: Kind, reference: MeasuredSweep) -> Iterator[Finding]:
     band = reference.plan.passband
     if not (band.lower_inside and band.upper_inside and band.peak_inside):
         return
-    figures = band.figures(reference.result.sweep.s21)
+    figures = reference.passband
     by_width, by_delay, by_phase = float(figures.loaded_q), float(figures.delay_q), float(figures.phase_q)
     rivals = [q for q in (by_delay, by_phase) if np.isfinite(q)]
     if not np.isfinite(by_width) or all(abs(q / by_width - 1.0) <= _Q_DISAGREES for q in rivals):

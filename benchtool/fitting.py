@@ -237,10 +237,10 @@ def _widen(frequency_hz: FloatArray, low_hz: float, high_hz: float, points: int)
     return start, stop
 
 
-def _score(residual: float, samples: int, degree: int, floor: float) -> float:
-    """Return the corrected Akaike criterion of a complex fit; both parts of a sample count."""
-    observed, free = 2 * samples, 2 * (degree + 1) + 1
-    return float(observed * np.log(residual + floor) + 2 * free + 2 * free * (free + 1) / (observed - free - 1))
+def _scores(residual: FloatArray, samples: int, floor: float) -> FloatArray:
+    """Return the corrected Akaike criterion of complex fits of degree 0, 1, …; both parts of a sample count."""
+    observed, free = 2 * samples, 2 * (np.arange(residual.size) + 1) + 1
+    return np.asarray(observed * np.log(residual + floor) + 2 * free + 2 * free * (free + 1) / (observed - free - 1))
 
 
 def _solver(basis: FloatArray, weight: FloatArray) -> FloatArray:
@@ -283,10 +283,10 @@ def _best_form(
             left = target - axes @ along
             tail = np.abs(along) ** 2
             rest = float(np.sum(np.abs(left) ** 2)) + np.append(np.cumsum(tail[::-1])[-2::-1], 0.0)
-            for degree in range(full.shape[1]):
-                score = _score(float(rest[degree]) / f.size, f.size, degree, floor)
-                if best is None or score < best.score:
-                    best = _Form(score, inverse, delay, degree)
+            scores = _scores(rest / f.size, f.size, floor)
+            degree = int(np.argmin(scores))
+            if best is None or scores[degree] < best.score:
+                best = _Form(float(scores[degree]), inverse, delay, degree)
     assert best is not None
     return best
 

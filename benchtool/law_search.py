@@ -112,15 +112,19 @@ class Doubts:
 def weigh_limiting(table: DriveTable, doubts: Doubts) -> list[Weighed]:
     """Return the rivals in which gain drops with the level at the output, at the input, and at port 2."""
     causes: tuple[Cause, ...] = ("output-limited", "input-limited", "receiver-overload")
+    # With the same output pads throughout, the levels at port 2 and at the output differ by one number only.
+    alike = bool(np.ptp(table.output_loss_db) == 0.0)
+    sought: list[tuple[Cause, ...]] = [causes[::2], causes[1:2]] if alike else [(cause,) for cause in causes]
     laws = ((Law("tanh"), 0.1), (Law("cubic"), 0.1), (None, 0.8))
-    every = [_LawSearch(table, doubts, cause, law, share) for cause in causes for law, share in laws]
+    every = [_LawSearch(table, doubts, some, law, share) for some in sought for law, share in laws]
     live = every
     for places, shapes in _GRIDS:
         for search in live:
             search.look(places, shapes)
         top = max(search.log_best for search in live)
         live = [search for search in live if search.log_best + search.between > top - _HOPELESS]
-    return [merge(cause, "", [way for s in every if s.cause == cause for way in s.ways]) for cause in causes]
+    found = [weighed for search in every for weighed in search.found]
+    return [merge(cause, "", [weighed for weighed in found if weighed.cause == cause]) for cause in causes]
 
 
 def merge(cause: Cause, about: str, parts: Sequence[Weighed]) -> Weighed:
@@ -136,11 +140,6 @@ def merge(cause: Cause, about: str, parts: Sequence[Weighed]) -> Weighed:
     return Weighed(cause, about, total, value, u, min(part.chi2 for part in parts))
 
 
-def _level_offset(table: DriveTable, cause: Cause) -> FloatArray:
-    """Return drive, less output pads where the receiver counts, (k, j): level less the gain that it follows."""
-    return table.drive_dbm - (table.output_loss_db[:, None] if cause == "receiver-overload" else 0.0)
-
-
 def _log_level_prior(table: DriveTable, cause: Cause, p1db: FloatArray) -> FloatArray:
     """Return the logarithm of the density of the 1 dB point, per dB."""
     if cause != "receiver-overload" or not table.levels_known:
@@ -151,28 +150,49 @@ def _log_level_prior(table: DriveTable, cause: Cause, p1db: FloatArray) -> Float
     return np.asarray(-0.5 * ((p1db - mean) / spread) ** 2 - np.log(spread * np.sqrt(2 * np.pi)))
 
 
-class _LawSearch:
-    """The evidence of one cause by one law, summed over the 1 dB point and, where `law` is None, over Rapp's p.
+@dataclass(frozen=True)
+class _Way:
+    """One way for a cause to act, with its share of belief; the level at its place is `shift_db` over the search's."""
 
-    Each look takes in a grid and closes in on its likely part. `log_best` is the best log weight that it saw,
-    `between` how much better a point between the nodes may be.
+    cause: Cause
+    share: float
+    detunes: bool
+    shift_db: float
+
+
+class _LawSearch:
+    """The evidence of causes by one law, summed over the 1 dB point and, where `law` is None, over Rapp's p.
+
+    The causes are those that follow the same level but for one number. Each look takes in a grid and closes in on its
+    likely part. `log_best` is the best log weight that it saw, `between` how much better a point between the nodes may
+    be.
     """
 
-    def __init__(self, table: DriveTable, doubts: Doubts, cause: Cause, law: Law | None, share: float) -> None:
-        self.table, self.cause, self.law = table, cause, law
-        self._offset = _level_offset(table, cause)
-        strongest = float(np.max(self._offset + (0.0 if cause == "input-limited" else table.gain_db)))
+    def __init__(
+        self, table: DriveTable, doubts: Doubts, causes: Sequence[Cause], law: Law | None, share: float
+    ) -> None:
+        self.table, self.law = table, law
+        self._follows_gain = "input-limited" not in causes
+        loss = table.output_loss_db if causes == ("receiver-overload",) else np.zeros(table.sweeps)
+        # Level less the gain that it follows, (k, j).
+        self._offset = table.drive_dbm - loss[:, None]
+        self._ways: list[_Way] = []
+        for cause in causes:
+            shift = float(loss[0] - table.output_loss_db[0]) if cause == "receiver-overload" else 0.0
+            # A tuned output that limits may also be pulled in tune; that is one of two ways, not a freedom for all.
+            detuned = _DETUNES_SHARE if cause == "output-limited" else 0.0
+            self._ways += [_Way(cause, share * (1.0 - detuned), False, shift)]
+            self._ways += [_Way(cause, share * detuned, True, shift)] if detuned else []
+        strongest = float(np.max(self._offset + (table.gain_db if self._follows_gain else 0.0)))
         self._low, self._high = strongest - _REACH_BELOW_DB, strongest + _REACH_ABOVE_DB
         self._soft, self._hard = float(np.log(SOFTEST_P)), float(np.log(HARDEST_P))
-        law_out, detuned = (np.eye(table.sweeps) / spread**2 for spread in (_LAW_DOUBT, _DETUNING))
         self._patterns = doubts.patterns
-        # A tuned output that limits may also be pulled in tune; that is one of two ways, not a freedom for all.
-        output = cause == "output-limited"
+        law_out, detuning = (np.eye(table.sweeps) / spread**2 for spread in (_LAW_DOUBT, _DETUNING))
         plain = [*doubts.precisions, law_out]
-        self._priors = [(share * (1.0 - _DETUNES_SHARE if output else 1.0), prior_precision(plain))]
-        if output:
-            self._priors.append((share * _DETUNES_SHARE, prior_precision([*plain, detuned])))
-        self.ways: list[Weighed] = []
+        self._priors = {False: prior_precision(plain)}
+        if any(way.detunes for way in self._ways):
+            self._priors[True] = prior_precision([*plain, detuning])
+        self.found: list[Weighed] = []
         self.log_best, self.between = -np.inf, 0.0
 
     def look(self, places: int, shapes: int) -> None:
@@ -180,21 +200,25 @@ class _LawSearch:
         place = np.linspace(self._low, self._high, places)
         shape = np.linspace(self._soft, self._hard, shapes if self.law is None else 1)
         p1db, log_p = np.repeat(place, shape.size), np.tile(shape, place.size)
-        left, slope, drop = _fit_gain(self.table, self._offset, p1db, log_p, self.law, self.cause != "input-limited")
+        left, slope, drop = _fit_gain(self.table, self._offset, p1db, log_p, self.law, self._follows_gain)
         cell = float(place[1] - place[0])
         if self.law is None:
             cell *= float(shape[1] - shape[0]) / float(np.log(HARDEST_P / SOFTEST_P))
         seen = np.max(drop, axis=(1, 2)) >= _LEAST_DROP_DB
-        prior = np.where(seen, _log_level_prior(self.table, self.cause, p1db), -np.inf)
-        self.ways, self.log_best, self.between = [], -np.inf, 0.0
-        matters = np.zeros((place.size, shape.size), np.bool_)
+        self.found, self.log_best, self.between = [], -np.inf, 0.0
         if not np.any(seen):
             return
-        every = self._equations(left, slope, drop)
-        for share, precision in self._priors:
-            log, chi2 = every[len(self.ways)].log_evidence(precision)
-            log = log + prior + np.log(share * PRIOR[self.cause])
-            self.ways.append(_summed(self.cause, log, p1db, chi2, cell))
+        matters = np.zeros((place.size, shape.size), np.bool_)
+        evidence = {
+            detunes: equations.log_evidence(self._priors[detunes])
+            for detunes, equations in self._equations(left, slope, drop).items()
+        }
+        for way in self._ways:
+            log, chi2 = evidence[way.detunes]
+            level = p1db + way.shift_db
+            prior = _log_level_prior(self.table, way.cause, level) + np.log(way.share * PRIOR[way.cause])
+            log = np.where(seen, log + prior, -np.inf)
+            self.found.append(_summed(way.cause, log, level, chi2, cell))
             grid = log.reshape(place.size, shape.size)
             matters |= grid > np.max(grid) - _MATTERS
             if np.max(log) > self.log_best:
@@ -203,21 +227,21 @@ class _LawSearch:
         self._low, self._high = _close_in(place, rows)
         self._soft, self._hard = _close_in(shape, columns) if self.law is None else (self._soft, self._hard)
 
-    def _equations(self, left: FloatArray, slope: FloatArray, drop: FloatArray) -> list[NormalEquations]:
-        """Return the equations of each way: with the doubts and how far the law may be out, and, detuned, its pull."""
+    def _equations(self, left: FloatArray, slope: FloatArray, drop: FloatArray) -> dict[bool, NormalEquations]:
+        """Return the equations with the doubts and how far the law may be out and, where asked for, with detuning."""
         copies, sweeps, nodes = drop.shape
         c = len(self._patterns)
         columns = np.empty((copies, sweeps, c + len(self._priors), nodes))
         columns[:, :, :c] = self._patterns
         columns[:, :, c] = drop
-        if len(self._priors) > 1:
+        if True in self._priors:
             columns[:, :, c + 1] = np.max(drop, axis=2)[..., None] * self.table.slope_db
         weight = 1.0 / (self.table.noise_db**2 + (_LAW_ROUGHNESS * drop) ** 2)
         whole = normal_equations(weight, slope, left, columns)
-        if len(self._priors) == 1:
-            return [whole]
+        if True not in self._priors:
+            return {False: whole}
         plain = np.arange(sweeps * (c + 2)).reshape(sweeps, c + 2)[:, : c + 1].ravel()
-        return [whole.only(plain), whole]
+        return {False: whole.only(plain), True: whole}
 
 
 def _summed(cause: Cause, log: FloatArray, p1db: FloatArray, chi2: FloatArray, cell: float) -> Weighed:
