@@ -242,7 +242,13 @@ def _separate(bench: _Bench) -> NextSweep | None:
     if verdict.code == "pad-value-suspect":
         likely = likely[:1] + [rival for rival in verdict.rivals if rival.cause == "clean"]
     lines = [line for line in bench.candidates if line.drive <= float(np.max(bench.table.drive_dbm)) + 0.5]
-    best = _best([line for line in lines if not _taken(bench, line)], lambda line: -_worth(bench, line, likely))
+    swept = np.mean(bench.table.drive_dbm, axis=1)
+
+    def cost(line: Line) -> float:
+        # What two sweeps tell differs by less than can be known; then the one at a drive that was swept is surer.
+        return 0.001 * min(10.0, float(np.min(np.abs(swept - line.drive)))) - round(_worth(bench, line, likely), 2)
+
+    best = _best([line for line in lines if not _taken(bench, line)], cost)
     if best is None or _worth(bench, best, likely) < _WORTH * sum(rival.probability for rival in likely):
         return None
     foremost = {rival.cause: rival for rival in reversed(likely)}
