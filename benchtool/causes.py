@@ -14,7 +14,6 @@ from types import MappingProxyType
 from typing import Final, Literal, TypeAlias
 
 import numpy as np
-from scipy.special import gammaincc
 
 from benchtool.compression import COMPRESSED_DB
 from benchtool.drive_results import PadEstimate
@@ -112,11 +111,21 @@ def find_cause(table: DriveTable, confidence: float = 0.95) -> CauseVerdict | No
     )
 
 
+def _misfits(best: Rival) -> bool:
+    """Whether the readings lie further from a model than chance allows, by the tail of chi squared."""
+    if best.chi2 <= best.freedom + 3.0 * np.sqrt(2.0 * best.freedom):
+        return False  # three standard deviations: far more likely than that
+    # Seldom needed, and longer to load than a bench to measure.
+    from scipy.special import gammaincc
+
+    return float(gammaincc(best.freedom / 2.0, best.chi2 / 2.0)) < _MISFIT
+
+
 def _decide(table: DriveTable, share: Mapping[Cause, float], best: Rival) -> tuple[CauseCode, float]:
     noisy = float(np.max(table.buried)) >= _BURIED_SHARE
     top = max(share, key=lambda cause: share[cause])
     flat = share["input-limited"] + share["pad-value"] + share["not-repeating"]
-    if float(gammaincc(best.freedom / 2.0, best.chi2 / 2.0)) < _MISFIT:
+    if _misfits(best):
         # Whatever else is at work, sweeps of one line that disagree did not repeat.
         return ("cause-unclear", 0.0) if table.repeats() else ("reference-not-repeating", share["not-repeating"])
     if share["clean"] >= _CLEAN:

@@ -103,7 +103,7 @@ class TraceCopies:
     scale : m, (copies,)
     sizes : u for each function of the model, in its order, (copies,) each
     added : v for each term of the model, (copies,) each
-    active : sources of noise to be drawn
+    moves : for each source of noise that is drawn, one for the copies in which it is and zero for the others
     """
 
     def __init__(
@@ -113,17 +113,17 @@ class TraceCopies:
         scale: ComplexArray,
         sizes: Sequence[ComplexArray],
         added: Sequence[ComplexArray],
-        active: Iterable[str],
+        moves: Mapping[str, FloatArray],
     ) -> None:
         self._model, self._scale, self._sizes, self._added = model, scale, sizes, added
         self._noise: dict[str, ComplexArray] = {}
-        for source in active:
+        for source, moving in moves.items():
             if source in model.noises:
                 every = model.used.size
                 count = every if model.by_samples else min(every, sum(fit.degree + 1 for fit in model.fits))
                 # Seven digits are plenty for noise, and are drawn in half the time.
                 pairs = rng.standard_normal((scale.size, count, 2), np.float32)
-                self._noise[source] = pairs.view(np.complex64)[..., 0] * np.sqrt(0.5)
+                self._noise[source] = pairs.view(np.complex64)[..., 0] * (np.sqrt(0.5) * moving[:, None])
 
     def coefficients(self, fit: Fit) -> ComplexArray:
         """Return the Legendre coefficients of a fit to the copies, (copies, degree + 1)."""

@@ -5,8 +5,8 @@ Distributions are those of :mod:`benchtool.doubts`; how copies come to the figur
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from typing import Final
+from collections.abc import Mapping, Sequence
+from typing import Final, TypeAlias
 
 import numpy as np
 
@@ -18,27 +18,36 @@ from benchtool.noise import NOISE_FREE
 from benchtool.pads import PadBank
 from benchtool.units import from_db
 
-__all__ = ["SweepCopier"]
+__all__ = ["Segment", "SweepCopier"]
+
+Segment: TypeAlias = tuple[str | None, int]
+"""A number of copies in which one source of doubt moves alone, as a budget needs them, or with None all together."""
 
 _REFLECTIONS: Final = {"S11": 0, "S22": 1}
 
 
 class _Draws:
-    """Draws of the quantities that bear on all of a sweep, made on demand and kept, (trials,) each.
+    """Draws of the quantities that bear on all of a sweep, made on demand and kept, (trials,) each."""
 
-    With `only` set, every source but the named one stands still: that is how a budget is made.
-    """
-
-    def __init__(self, rng: np.random.Generator, trials: int, bank: PadBank, only: str | None) -> None:
+    def __init__(self, rng: np.random.Generator, segments: Sequence[Segment], bank: PadBank) -> None:
         self.rng = rng
-        self.trials = trials
         self.bank = bank
-        self.only = only
+        self._sources = [only for only, _ in segments]
+        self._counts = [count for _, count in segments]
+        self.trials = sum(self._counts)
         self._pads: dict[str, FloatArray] = {}
+        self._moves: dict[str, FloatArray] = {}
+
+    def moves(self, source: str) -> FloatArray:
+        """Return one for each trial in which a source is drawn, zero for those in which it stands still."""
+        if source not in self._moves:
+            moving = [float(only in (None, source)) for only in self._sources]
+            self._moves[source] = np.repeat(moving, self._counts)
+        return self._moves[source]
 
     def active(self, source: str) -> bool:
-        """Whether a source is drawn."""
-        return self.only is None or self.only == source
+        """Whether a source is drawn in any trial."""
+        return any(only in (None, source) for only in self._sources)
 
     def pad_db(self, name: str) -> FloatArray:
         """Return the error of a pad's loss, dB: the same for every sweep."""
@@ -47,9 +56,9 @@ class _Draws:
             if not self.active(f"pad {name}"):
                 self._pads[name] = np.zeros(self.trials)
             elif is_limit:
-                self._pads[name] = self.rng.uniform(-width, width, self.trials)
+                self._pads[name] = self.rng.uniform(-width, width, self.trials) * self.moves(f"pad {name}")
             else:
-                self._pads[name] = self.rng.normal(0.0, width, self.trials)
+                self._pads[name] = self.rng.normal(0.0, width, self.trials) * self.moves(f"pad {name}")
         return self._pads[name]
 
     def pads_factor(self, weights: Mapping[str, int]) -> FloatArray:
@@ -63,7 +72,9 @@ class _Draws:
         """Return vectors of unit length and unknown phase; of no length where their source stands still."""
         if not self.active(source):
             return np.zeros(self.trials, np.complex128)
-        turned: ComplexArray = np.exp(2j * np.pi * self.rng.uniform(size=self.trials))
+        angle, length = 2.0 * np.pi * self.rng.uniform(size=self.trials), self.moves(source)
+        turned = np.empty(self.trials, np.complex128)
+        turned.real, turned.imag = length * np.cos(angle), length * np.sin(angle)  # dearer as a complex exp
         return turned
 
     def reading(self, reading_db: float) -> ComplexArray:
@@ -73,7 +84,7 @@ class _Draws:
         # The same share in magnitude and in phase: 0.05 dB is 0.58 %, hence 0.33°.
         spread = np.log(10.0) / 20.0 * reading_db
         both = self.rng.normal(0.0, spread, (self.trials, 2)) @ np.array([1.0, 1j])
-        factor: ComplexArray = np.exp(both)
+        factor: ComplexArray = np.exp(both * self.moves("reading"))
         return factor
 
 
@@ -103,9 +114,9 @@ class SweepCopier:
             # Error vectors; the near joint, passed twice; between port and pad, once; the far port, through the device.
             self._models[name] = TraceModel(own, fits, (), [np.ones_like(own), own**2, own, *loop], noises)
 
-    def copies(self, rng: np.random.Generator, trials: int, only: str | None = None) -> dict[str, TraceCopies]:
-        """Return copies of every trace that figures are taken from, with all sources of doubt or one alone."""
-        draws = _Draws(rng, trials, self._bank, only)
+    def copies(self, rng: np.random.Generator, segments: Sequence[Segment]) -> dict[str, TraceCopies]:
+        """Return copies of every trace that figures are taken from, segment after segment."""
+        draws = _Draws(rng, segments, self._bank)
         doubts = self._doubts
         into, out = draws.pads_factor(doubts.input_weights), draws.pads_factor(doubts.output_weights)
         through = into * out * draws.reading(doubts.reading_db)
@@ -116,7 +127,7 @@ class SweepCopier:
             sizes += seen
         found = {}
         for name, model in self._models.items():
-            noises = [source for source in model.noises if draws.active(source)]
+            noises = {source: draws.moves(source) for source in model.noises if draws.active(source)}
             if name not in _REFLECTIONS:
                 found[name] = TraceCopies(model, rng, through, sizes, (), noises)
                 continue

@@ -31,7 +31,7 @@ BURIED_UNCERTAINTY: Final = 0.3
 
 def worst_return_loss(curve: Curve, reflection: Trace) -> FloatArray:
     """Return the smallest return loss in dB over the curve, (...,), of a reflection or copies of it."""
-    return np.asarray(-np.max(curve.level_on_grid(reflection), axis=-1))
+    return -curve.highest_level(reflection)
 
 
 def buried_uncertainty(correction_db: float, directivity_db: float) -> float:

@@ -171,11 +171,13 @@ def crossing(grid: FloatArray, level: FloatArray, target: FloatArray, index: np.
     Between nodes the crossing is that of the parabola through the nearest three. NaN where the level stays above to
     the end of the grid.
     """
-    nodes = np.arange(grid.size)
+    # Only the side that some copy looks at is gone through.
+    first, last = (int(np.min(index)), grid.size) if direction > 0 else (0, int(np.max(index)) + 1)
+    nodes = np.arange(first, last)
     beyond = nodes > index[..., None] if direction > 0 else nodes < index[..., None]
-    below = beyond & (level < target[..., None])
+    below = beyond & (level[..., first:last] < target[..., None])
     found = below.any(axis=-1)
-    outer = np.argmax(below, axis=-1) if direction > 0 else grid.size - 1 - np.argmax(below[..., ::-1], axis=-1)
+    outer = first + np.argmax(below, axis=-1) if direction > 0 else last - 1 - np.argmax(below[..., ::-1], axis=-1)
     outer = np.where(found, outer, 0 if direction < 0 else grid.size - 1)
     inner = _within(outer - direction, 0, grid.size - 1)
     y0, y1 = _gather(level, inner) - target, _gather(level, outer) - target

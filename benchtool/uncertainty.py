@@ -10,15 +10,15 @@ side where the figure went. Where more than a hundredth are lost the figure beco
 
 from __future__ import annotations
 
-from collections.abc import Collection, Mapping
+from collections.abc import Callable, Collection, Mapping, Sequence
 from dataclasses import dataclass, replace
-from typing import Final, Protocol
+from typing import Final
 
 import numpy as np
 
 from benchtool.compression import MeasuredSweep
 from benchtool.doubts import SweepDoubts
-from benchtool.draws import SweepCopier
+from benchtool.draws import Segment, SweepCopier
 from benchtool.model import Bound, Figure, Finding, FloatArray
 from benchtool.pads import PadBank
 from benchtool.propagation import BLOCK, coverage_interval, run_blocks
@@ -37,12 +37,6 @@ _PLAUSIBLE_BIAS: Final = 0.6
 _SMALLEST_REFLECTION: Final = 1e-4
 _LOST_SIDE: Final[Mapping[str, float]] = {"lower_edge": -1.0, "upper_edge": 1.0, "bandwidth": 1.0, "loaded_q": -1.0}
 """Where a figure goes when a half-power edge leaves the sweep: up (+1) or down (-1)."""
-
-
-class _Block(Protocol):
-    """Makes trials of every figure, with all sources of doubt or only one."""
-
-    def __call__(self, count: int, only: str | None = None) -> dict[str, FloatArray]: ...
 
 
 @dataclass(frozen=True, eq=False)
@@ -85,13 +79,19 @@ def figure_trials(
     rng, copier = np.random.default_rng(seed), SweepCopier(sweep, plan, doubts, bank)
     known = [key for key, figure in figures.items() if figure.value is not None]
 
-    def block(count: int, only: str | None = None) -> dict[str, FloatArray]:
-        found = plan.extract(copier.copies(rng, count, only))
+    def block(segments: Sequence[Segment]) -> dict[str, FloatArray]:
+        found = plan.extract(copier.copies(rng, segments))
         return {key: found[key] for key in known if key in found}
 
     size = _block_size(sweep.frequency_hz.size)
-    raw = run_blocks(block, confidence, trials=trials, deciding=[key for key in deciding if key in known], size=size)
-    alone = {source: _alone(block, source, size) for source in doubts.sources}
+    raw = run_blocks(
+        lambda count: block([(None, count)]),
+        confidence,
+        trials=trials,
+        deciding=[key for key in deciding if key in known],
+        size=size,
+    )
+    alone = _alone(block, doubts.sources, size)
     finished: dict[str, Figure] = {}
     values: dict[str, FloatArray] = {}
     findings: list[Finding] = []
@@ -109,12 +109,26 @@ def figure_trials(
     return FigureTrials(finished, values, count, tuple(findings))
 
 
-def _alone(block: _Block, source: str, size: int) -> dict[str, FloatArray]:
-    """Return trials of every figure with one source of doubt alone."""
-    count = _BIAS_TRIALS if source == "noise" else _BUDGET_TRIALS
-    steps = -(-count // size)
-    parts = [block(-(-count // steps), source) for _ in range(steps)]
-    return {key: np.concatenate([part[key] for part in parts]) for key in parts[0]}
+def _alone(
+    block: Callable[[Sequence[Segment]], dict[str, FloatArray]], sources: Sequence[str], size: int
+) -> dict[str, dict[str, FloatArray]]:
+    """Return trials of every figure with each source of doubt alone, at most `size` of them drawn together."""
+    counts = {source: _BIAS_TRIALS if source == "noise" else _BUDGET_TRIALS for source in sources}
+    pieces = [(source, min(size, left)) for source, count in counts.items() for left in range(count, 0, -size)]
+    parts: dict[str, list[dict[str, FloatArray]]] = {source: [] for source in sources}
+    while pieces:
+        room, together = size, []
+        while pieces and pieces[0][1] <= room:
+            together.append(pieces.pop(0))
+            room -= together[-1][1]
+        found = block(together)
+        ends = np.cumsum([count for _, count in together])[:-1]
+        split = {key: np.split(values, ends) for key, values in found.items()}
+        for place, (source, _) in enumerate(together):
+            parts[source].append({key: each[place] for key, each in split.items()})
+    return {
+        source: {key: np.concatenate([part[key] for part in mine]) for key in mine[0]} for source, mine in parts.items()
+    }
 
 
 def _departure(figure: Figure, trial: FloatArray) -> FloatArray:

@@ -24,8 +24,8 @@ def sizes(rng, count, size):
     return [size * np.exp(2j * np.pi * rng.uniform(size=COPIES)) for _ in range(count)]
 
 
-def copies(model, scale, drawn=(), added=(), active=(), seed=1):
-    return TraceCopies(model, np.random.default_rng(seed), scale, drawn, added, active)
+def copies(model, scale, drawn=(), added=()):
+    return TraceCopies(model, np.random.default_rng(1), scale, drawn, added, {})
 
 
 @pytest.fixture
@@ -104,7 +104,7 @@ def test_noise_spreads_a_level_as_noise_in_the_samples_does():
     sigma = NoiseModel(0.3, 0.01).sigma(np.abs(RESONANCE))
     model = TraceModel(RESONANCE, curve.fits, (), (), {"noise": sigma})
     count, rng = 4000, np.random.default_rng(2)
-    drawn = TraceCopies(model, rng, np.ones(count, complex), (), (), ["noise"])
+    drawn = TraceCopies(model, rng, np.ones(count, complex), (), (), {"noise": np.ones(count)})
     hiss = (rng.normal(size=(count, F.size)) + 1j * rng.normal(size=(count, F.size))) * sigma / np.sqrt(2.0)
     by_coefficients, by_samples = curve.level_on_grid(drawn), curve.level_on_grid(RESONANCE + hiss)
     middle = curve.grid_hz.size // 2
