@@ -17,7 +17,7 @@ from benchtool.compression import MeasuredSweep
 from benchtool.doubts import source_doubt_db, sweep_doubts
 from benchtool.drive_doubts import HALF_FIT, MismatchDoubt, PadDoubt, mismatch_doubts, pad_doubts, parabola
 from benchtool.model import FloatArray, Sweep, readonly
-from benchtool.noise import NOISE_FREE, NoiseModel
+from benchtool.noise import NOISE_FREE, NoiseModel, moving_average
 from benchtool.pads import PadBank
 from benchtool.sheet import BenchSheet, SweepEntry
 from benchtool.units import to_db
@@ -210,8 +210,7 @@ def _noise_model(sweep: MeasuredSweep) -> NoiseModel:
 
 def _smooth_level(sweep: Sweep) -> FloatArray:
     """Return the level of S21 in dB, (n,), as a running mean of power over five samples."""
-    power = np.pad(np.abs(sweep.s21) ** 2, 2, mode="edge")
-    return np.asarray(10.0 * np.log10(np.maximum(np.convolve(power, np.full(5, 0.2), "valid"), 1e-300)))
+    return np.asarray(10.0 * np.log10(np.maximum(moving_average(np.abs(sweep.s21) ** 2, 5), 1e-300)))
 
 
 def _nodes(sweeps: Sequence[MeasuredSweep], low: float, high: float) -> FloatArray:

@@ -19,7 +19,16 @@ import numpy as np
 
 from benchtool.model import ComplexArray, FloatArray
 
-__all__ = ["NOISE_FREE", "NoiseModel", "estimate_noise", "line_delay", "moving_average", "rotation", "trend_delay"]
+__all__ = [
+    "NOISE_FREE",
+    "NoiseModel",
+    "estimate_noise",
+    "extended",
+    "line_delay",
+    "moving_average",
+    "rotation",
+    "trend_delay",
+]
 
 Values = TypeVar("Values", FloatArray, ComplexArray)
 
@@ -62,8 +71,13 @@ def moving_average(values: Values, width: int) -> Values:
     to measure.
     """
     half = width // 2
-    padded = np.pad(values, half, mode="edge")
-    return cast(Values, np.convolve(padded, np.full(2 * half + 1, 1.0 / (2 * half + 1)), mode="valid"))
+    weights = np.full(2 * half + 1, 1.0 / (2 * half + 1))
+    return cast(Values, np.convolve(extended(values, half), weights, mode="valid"))
+
+
+def extended(values: Values, by: int) -> Values:
+    """Return values, (n,), that go on as they are for `by` more at either end, (n + 2 by,)."""
+    return cast(Values, np.concatenate([np.repeat(values[:1], by), values, np.repeat(values[-1:], by)]))
 
 
 def trend_delay(frequency_hz: FloatArray, s: ComplexArray) -> float:
@@ -123,7 +137,7 @@ def _local_variance(frequency_hz: FloatArray, s: ComplexArray) -> FloatArray:
         for trace, scale in ((s, np.ones_like(power)), (inverse, power)):
             windows = np.lib.stride_tricks.sliding_window_view(trace, order + 1)
             residual: FloatArray = np.abs(np.einsum("ij,ij->i", windows, weights)) ** 2
-            padded: FloatArray = np.pad(residual, half, mode="edge") * scale**2
+            padded: FloatArray = extended(residual, half) * scale**2
             variance = moving_average(padded, min(_NEIGHBOURS, s.size))
             best = variance if best is None else np.where(variance < _CLEARLY_LESS * best, variance, best)
     assert best is not None

@@ -8,6 +8,7 @@ the 1 dB point is a bound.
 from __future__ import annotations
 
 from collections.abc import Collection
+from functools import cache
 from statistics import NormalDist
 from typing import Final
 
@@ -137,12 +138,18 @@ def _safe(table: DriveTable, belief: Belief, basis: Basis, shift: FloatArray, co
     """Return the drive at which gain has dropped by 0.1 dB, and as `low` the highest that is safe."""
     if not table.levels_known or basis == "none":
         return Estimate(None)
-    excess = np.array([float(law.excess_over_p1db(SAFE_DROP_DB)) for law in LAWS])
+    excess = _safe_excess()
     if basis == "bound":
         least = belief.bound_dbm + float(np.min(excess)) - NormalDist().inv_cdf(confidence) * float(np.std(shift))
         return Estimate(least, least, None, "at least")
     drives = belief.p1db + excess[belief.law] + shift
     return Estimate(float(np.median(drives)), float(np.quantile(drives, 1.0 - confidence)), None)
+
+
+@cache
+def _safe_excess() -> FloatArray:
+    """Return the level over the 1 dB point at which each law has dropped by what is still safe, dB."""
+    return np.array([float(law.excess_over_p1db(SAFE_DROP_DB)) for law in LAWS])
 
 
 def _proof(belief: Belief, reference: str, at_dbm: float, drive: FloatArray, confidence: float) -> ReferenceProof:
