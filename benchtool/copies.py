@@ -16,7 +16,7 @@ from itertools import combinations_with_replacement
 
 import numpy as np
 
-from benchtool.fitting import Fit
+from benchtool.curves import Fit
 from benchtool.model import ComplexArray, FloatArray
 
 __all__ = ["TraceCopies", "TraceModel"]

@@ -12,7 +12,8 @@ from typing import TypeAlias
 
 import numpy as np
 
-from benchtool.fitting import Curve, Trace, fit_curve
+from benchtool.curves import Curve, Trace
+from benchtool.fitting import fit_curve
 from benchtool.model import Bound, ComplexArray, Figure, Finding, FloatArray, Kind, Sweep
 from benchtool.noise import NoiseModel
 from benchtool.response import Passband

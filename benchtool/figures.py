@@ -13,8 +13,8 @@ from typing import Final
 
 import numpy as np
 
+from benchtool.curves import Curve
 from benchtool.figure_plan import Extractor, FigureBuilder, FigurePlan, Traces
-from benchtool.fitting import Curve
 from benchtool.match import stability, worst_return_loss
 from benchtool.model import Bound, Figure, FloatArray, Kind, Sweep
 from benchtool.noise import estimate_noise

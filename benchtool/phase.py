@@ -11,7 +11,7 @@ from typing import Final
 
 import numpy as np
 
-from benchtool.fitting import Curve, Trace
+from benchtool.curves import Curve, Trace
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import rotation, trend_delay
 

@@ -21,7 +21,8 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-from benchtool.fitting import Curve, Trace, fit_curve
+from benchtool.curves import Curve, Trace
+from benchtool.fitting import fit_curve
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import NoiseModel, moving_average, rotation, trend_delay
 from benchtool.units import HALF_POWER_DB, to_db

@@ -39,6 +39,7 @@ LAYERS = [
     "sheet_quick",
     "sheet",
     "noise",
+    "curves",
     "fitting",
     "pads",
     "response",

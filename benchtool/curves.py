@@ -1,0 +1,227 @@
+"""Polynomial fits of one trace in; its smooth curve, between the samples, of the trace or any number of copies, out.
+
+A fit speaks for a stretch of the trace, as S or as 1/S with a delay taken out, by Legendre polynomials in frequency. It
+is a linear operator: on copies of the trace it is a matrix product. Which fits a trace gets is decided in
+:mod:`benchtool.fitting`.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cache, cached_property
+from typing import Final, Protocol, TypeAlias
+
+import numpy as np
+from numpy.polynomial import legendre
+
+from benchtool.model import ComplexArray, FloatArray
+from benchtool.noise import rotation
+
+__all__ = ["ACCEPTED_EXCESS", "Copies", "Curve", "Fit", "Trace"]
+
+ACCEPTED_EXCESS: Final = 1.6
+"""Residual variance over noise variance up to which a fit is taken to describe the trace."""
+_ROWS_AT_A_TIME: Final = 128
+"""Copies worked on together: arrays larger than a processor's cache cost several times as much to fill."""
+
+
+def _times(data: ComplexArray, matrix: FloatArray) -> ComplexArray:
+    """Return complex data (..., m) times a real matrix (m, k): two real products cost half of one complex product."""
+    product = np.empty((*data.shape[:-1], matrix.shape[1]), np.complex128)
+    product.real = data.real @ matrix
+    product.imag = data.imag @ matrix
+    return product
+
+
+class Copies(Protocol):
+    """Copies of a trace that give the coefficients of a fit without being written out sample by sample."""
+
+    def coefficients(self, fit: Fit) -> ComplexArray:
+        """Return the Legendre coefficients of a fit to the copies, (copies, degree + 1)."""
+        ...
+
+
+Trace: TypeAlias = ComplexArray | Copies
+"""A trace, (n,), or copies of it, (..., n) or in a form of their own."""
+
+
+@dataclass(frozen=True, eq=False)
+class Fit:
+    """One polynomial over ``samples[start:stop]``, valid between `low_hz` and `high_hz`."""
+
+    start: int
+    stop: int
+    low_hz: float
+    high_hz: float
+    centre_hz: float
+    scale_hz: float
+    inverse: bool
+    delay_s: float
+    turn: ComplexArray
+    solve: FloatArray
+    """(degree + 1, stop - start)."""
+    excess: float
+    """Residual variance over the variance that noise explains."""
+    misfit: float
+    """What the residuals leave over beyond the noise: an rms complex error, in units of S."""
+
+    @property
+    def degree(self) -> int:
+        """Degree of the polynomial."""
+        return int(self.solve.shape[0]) - 1
+
+    def coefficients(self, s: Trace) -> ComplexArray:
+        """Return the Legendre coefficients, (..., degree + 1), of a trace or of copies of it."""
+        if isinstance(s, np.ndarray):
+            return self.coefficients_of_samples(s[..., self.start : self.stop])
+        return s.coefficients(self)
+
+    def coefficients_of_samples(self, samples: ComplexArray) -> ComplexArray:
+        """Return the Legendre coefficients, (..., degree + 1), of the samples the fit rests on, (..., stop - start)."""
+        turned = samples * self.turn
+        return self.project(1.0 / turned if self.inverse else turned)
+
+    def project(self, values: ComplexArray) -> ComplexArray:
+        """Return the coefficients, (..., degree + 1), of values in the form that is fitted, (..., stop - start)."""
+        return _times(values, self.solve.T)
+
+    def basis(self, frequency_hz: FloatArray) -> FloatArray:
+        """Return the basis functions at frequencies (...,), (..., degree + 1)."""
+        return np.asarray(legendre.legvander((frequency_hz - self.centre_hz) / self.scale_hz, self.degree))
+
+    def slope_basis(self, frequency_hz: FloatArray) -> FloatArray:
+        """Return the derivative of the basis with frequency, (..., degree + 1), per Hz."""
+        return np.asarray(self.basis(frequency_hz) @ _legendre_slopes(self.degree) / self.scale_hz)
+
+
+@cache
+def _legendre_slopes(degree: int) -> FloatArray:
+    """Return the derivatives of the Legendre polynomials up to `degree`, each as a column of Legendre coefficients."""
+    slopes = np.zeros((degree + 1, degree + 1))
+    for column in range(1, degree + 1):
+        slopes[:column, column] = legendre.legder(np.eye(degree + 1)[column])[:column]
+    return slopes
+
+
+@dataclass(frozen=True, eq=False)
+class _Nodes:
+    """Frequencies at which one fit is evaluated, with what does not depend on the samples: made once, used often."""
+
+    fit: Fit
+    basis: FloatArray
+    """(degree + 1, g)."""
+    slope_basis: FloatArray
+    turn: ComplexArray
+
+    @classmethod
+    def of(cls, fit: Fit, frequency_hz: FloatArray) -> _Nodes:
+        turn = np.conj(rotation(frequency_hz, fit.delay_s))
+        return cls(fit, fit.basis(frequency_hz).T, fit.slope_basis(frequency_hz).T, turn)
+
+    def evaluate(self, s: Trace) -> tuple[ComplexArray, FloatArray]:
+        """Return S (its mean delay put back) and the group delay in s, both (..., g)."""
+        coefficients = self.fit.coefficients(s)
+        polynomial = _times(coefficients, self.basis)
+        slope = _times(coefficients, self.slope_basis)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            angle_slope = np.imag(slope / polynomial) / (2 * np.pi)
+            value = 1.0 / polynomial if self.fit.inverse else polynomial
+        delay = self.fit.delay_s + (angle_slope if self.fit.inverse else -angle_slope)
+        return value * self.turn, delay
+
+    def level_db(self, s: Trace) -> FloatArray:
+        """Return 20 log10 of the magnitude of S, (..., g): what the real and the imaginary part give, no more."""
+        coefficients = self.fit.coefficients(s)
+        rows = coefficients.reshape(-1, coefficients.shape[-1])
+        level = np.empty((len(rows), self.basis.shape[1]))
+        for first in range(0, len(rows), _ROWS_AT_A_TIME):
+            some = slice(first, first + _ROWS_AT_A_TIME)
+            self._decibels(self._power(rows[some], level[some]))
+        return level.reshape(*coefficients.shape[:-1], -1)
+
+    def highest_db(self, s: Trace) -> FloatArray:
+        """Return the highest of these levels, (...,)."""
+        coefficients = self.fit.coefficients(s)
+        rows = coefficients.reshape(-1, coefficients.shape[-1])
+        power = np.empty(len(rows))
+        for first in range(0, len(rows), _ROWS_AT_A_TIME):
+            some = slice(first, first + _ROWS_AT_A_TIME)
+            every = self._power(rows[some], np.empty((len(rows[some]), self.basis.shape[1])))
+            power[some] = np.min(every, axis=-1) if self.fit.inverse else np.max(every, axis=-1)
+        return self._decibels(power).reshape(coefficients.shape[:-1])
+
+    def _power(self, coefficients: ComplexArray, power: FloatArray) -> FloatArray:
+        """Write the power of the polynomial, of S or 1/S, of rows of coefficients into `power`, (rows, g)."""
+        np.square(np.matmul(coefficients.real, self.basis, out=power), out=power)
+        imaginary = coefficients.imag @ self.basis
+        power += np.square(imaginary, out=imaginary)
+        return power
+
+    def _decibels(self, power: FloatArray) -> FloatArray:
+        """Turn powers into levels of S in place."""
+        # The natural logarithm, which processors have at half the cost of the common one.
+        with np.errstate(divide="ignore"):
+            np.log(power, out=power)
+        power *= (-10.0 if self.fit.inverse else 10.0) / np.log(10.0)
+        return power
+
+
+@dataclass(frozen=True, eq=False)
+class Curve:
+    """A stretch of a trace as one fit or several side by side."""
+
+    fits: tuple[Fit, ...]
+    grid_hz: FloatArray
+    """(g,) rising, dense enough that a parabola through three neighbours is exact for every purpose here."""
+
+    @property
+    def span_hz(self) -> float:
+        """Width in Hz of the samples that the narrowest fit rests on."""
+        return min(2.0 * fit.scale_hz for fit in self.fits)
+
+    @property
+    def accepted(self) -> bool:
+        """Whether every fit describes the trace down to its noise."""
+        return all(fit.excess <= ACCEPTED_EXCESS for fit in self.fits)
+
+    def on_grid(self, s: Trace) -> tuple[ComplexArray, FloatArray]:
+        """Return S and group delay in s on `grid_hz`, both (..., g), of a trace or copies of it."""
+        return _side_by_side([nodes.evaluate(s) for nodes in self._grid_nodes])
+
+    def level_on_grid(self, s: Trace) -> FloatArray:
+        """Return the level of S in dB on `grid_hz`, (..., g), at a fraction of the cost of :meth:`on_grid`."""
+        levels = [nodes.level_db(s) for nodes in self._grid_nodes]
+        return levels[0] if len(levels) == 1 else np.concatenate(levels, axis=-1)
+
+    def highest_level(self, s: Trace) -> FloatArray:
+        """Return the highest level of S in dB over the curve, (...,), of a trace or copies of it."""
+        return np.asarray(np.max([nodes.highest_db(s) for nodes in self._grid_nodes], axis=0))
+
+    def at(self, s: Trace, frequency_hz: float) -> tuple[ComplexArray, FloatArray]:
+        """Return S and group delay in s at one frequency, both (...,)."""
+        if frequency_hz not in self._point_nodes:
+            self._point_nodes[frequency_hz] = self._nodes(np.array([frequency_hz]))
+        value, delay = _side_by_side([nodes.evaluate(s) for nodes in self._point_nodes[frequency_hz]])
+        return value[..., 0], delay[..., 0]
+
+    @cached_property
+    def _grid_nodes(self) -> tuple[_Nodes, ...]:
+        return self._nodes(self.grid_hz)
+
+    @cached_property
+    def _point_nodes(self) -> dict[float, tuple[_Nodes, ...]]:
+        return {}
+
+    def _nodes(self, frequency_hz: FloatArray) -> tuple[_Nodes, ...]:
+        """Return rising frequencies shared out to the fits that speak for them."""
+        borders = [fit.low_hz for fit in self.fits[1:]]
+        owner = np.searchsorted(borders, frequency_hz, side="right")
+        shared = ((fit, frequency_hz[owner == index]) for index, fit in enumerate(self.fits))
+        return tuple(_Nodes.of(fit, mine) for fit, mine in shared if mine.size)
+
+
+def _side_by_side(parts: list[tuple[ComplexArray, FloatArray]]) -> tuple[ComplexArray, FloatArray]:
+    """Return values and delays of neighbouring stretches as one of each."""
+    if len(parts) == 1:
+        return parts[0]
+    return np.concatenate([value for value, _ in parts], axis=-1), np.concatenate([d for _, d in parts], axis=-1)
