@@ -49,6 +49,15 @@ class _Draws:
         """Whether a source is drawn in any trial."""
         return any(only in (None, source) for only in self._sources)
 
+    def even(self) -> FloatArray:
+        """Return draws that are uniform from 0 to 1, in each segment one from each of as many equal strata.
+
+        So a budget of few trials has the spread of its source right. M. D. McKay, R. J. Beckman, W. J. Conover,
+        Technometrics 21(2), 1979, 239-245 (Latin hypercube sampling).
+        """
+        strata = np.concatenate([self.rng.permutation(count) / count for count in self._counts])
+        return np.asarray(strata + self.rng.uniform(size=self.trials) / np.repeat(self._counts, self._counts))
+
     def pad_db(self, name: str) -> FloatArray:
         """Return the error of a pad's loss, dB: the same for every sweep."""
         if name not in self._pads:
@@ -56,7 +65,7 @@ class _Draws:
             if not self.active(f"pad {name}"):
                 self._pads[name] = np.zeros(self.trials)
             elif is_limit:
-                self._pads[name] = self.rng.uniform(-width, width, self.trials) * self.moves(f"pad {name}")
+                self._pads[name] = width * (2.0 * self.even() - 1.0) * self.moves(f"pad {name}")
             else:
                 self._pads[name] = self.rng.normal(0.0, width, self.trials) * self.moves(f"pad {name}")
         return self._pads[name]
@@ -72,7 +81,7 @@ class _Draws:
         """Return vectors of unit length and unknown phase; of no length where their source stands still."""
         if not self.active(source):
             return np.zeros(self.trials, np.complex128)
-        angle, length = 2.0 * np.pi * self.rng.uniform(size=self.trials), self.moves(source)
+        angle, length = 2.0 * np.pi * self.even(), self.moves(source)
         turned = np.empty(self.trials, np.complex128)
         turned.real, turned.imag = length * np.cos(angle), length * np.sin(angle)  # dearer as a complex exp
         return turned

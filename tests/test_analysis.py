@@ -112,6 +112,13 @@ def test_budget_shares_sum_to_one(sample):
                 assert_allclose(sum(figure.budget.values()), 1.0, rtol=1e-9, atol=0)
 
 
+def test_budget_has_the_variance_of_a_rectangular_tolerance(sample):
+    # One pad of ±0.3 dB was added, and moves a gain in dB by just its own error: u² = 0.3²/3 (JCGM 100:2008, 4.3.7).
+    gain = sample["detector driver"].figures["gain"]
+    of_pad = gain.budget["pad a20"] * gain.standard_uncertainty**2
+    assert_allclose(of_pad, 0.3**2 / 3.0, rtol=0.06, atol=0)
+
+
 def test_zero_doubt_gives_zero_width_and_the_same_values(tmp_path):
     pads = "[pads.a]\nloss_db = 20.0\ntolerance_db = 0.0\nreturn_loss_db = 100\n"
     analyzer = "[analyzer]\nsource_dbm = -10.0\nreading_db = 0.0\nport_match_db = 100\ndirectivity_db = 100\n"
