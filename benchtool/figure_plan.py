@@ -5,8 +5,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
-from dataclasses import dataclass, field
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import dataclass
 from functools import cached_property
 from typing import TypeAlias
 
@@ -15,24 +15,46 @@ import numpy as np
 from benchtool.curves import Curve, Trace
 from benchtool.fitting import fit_curve
 from benchtool.model import Bound, ComplexArray, Figure, Finding, FloatArray, Kind, Sweep
-from benchtool.noise import NoiseModel
+from benchtool.noise import NoiseModel, estimate_noise
 from benchtool.response import Passband
 from benchtool.sheet import FIGURE_UNITS
 from benchtool.units import format_si, to_db
 
-__all__ = ["Extractor", "FigureBuilder", "FigurePlan", "Traces"]
+__all__ = ["Extractor", "FigureBuilder", "FigurePlan", "SweepNoise", "Traces"]
 
 Traces: TypeAlias = Mapping[str, Trace]
 """The traces of a sweep, or of copies of it, by the parameter: S11, S12, S21, S22."""
 Extractor: TypeAlias = Callable[["FigurePlan", Traces, Mapping[str, FloatArray]], FloatArray]
 
 
+class SweepNoise(Mapping[str, NoiseModel | None]):
+    """Noise seen in each measured parameter of a sweep, found out when it is first asked for."""
+
+    def __init__(self, sweep: Sweep) -> None:
+        self._sweep = sweep
+        self._seen: dict[str, NoiseModel | None] = {}
+
+    def __getitem__(self, parameter: str) -> NoiseModel | None:
+        if parameter not in self._sweep.measured:
+            raise KeyError(parameter)
+        if parameter not in self._seen:
+            trace = self._sweep.s[int(parameter[1]) - 1, int(parameter[2]) - 1]
+            self._seen[parameter] = estimate_noise(self._sweep.frequency_hz, trace)
+        return self._seen[parameter]
+
+    def __iter__(self) -> Iterator[str]:
+        return iter(self._sweep.measured)
+
+    def __len__(self) -> int:
+        return len(self._sweep.measured)
+
+
 @dataclass(frozen=True, eq=False)
 class FigurePlan:
     """How the figures of one sweep are extracted.
 
-    `entries` are the figures in the order they are shown, with their units and bounds but without values; an entry
-    whose extractor is None cannot be known, and one of `findings` says why.
+    What lies beyond the passband is planned when it is first asked for, since most sweeps of a device serve to compare
+    drives alone.
     """
 
     kind: Kind
@@ -41,11 +63,32 @@ class FigurePlan:
     design_curve: Curve
     noise: Mapping[str, NoiseModel | None]
     """Noise seen in each measured parameter."""
-    curves: Mapping[str, tuple[Curve, ...]]
-    """Every curve that an extractor takes its figure from, by the parameter."""
-    entries: tuple[Figure, ...]
-    extractors: Mapping[str, Extractor | None]
-    findings: tuple[Finding, ...] = field(default=())
+    collect: Callable[[], FigureBuilder]
+    """Decides on all figures."""
+
+    @cached_property
+    def _built(self) -> FigureBuilder:
+        return self.collect()
+
+    @property
+    def curves(self) -> Mapping[str, Sequence[Curve]]:
+        """Every curve that an extractor takes its figure from, by the parameter."""
+        return self._built.curves
+
+    @property
+    def entries(self) -> Sequence[Figure]:
+        """The figures in the order they are shown, with their units and bounds but without values."""
+        return self._built.entries
+
+    @property
+    def extractors(self) -> Mapping[str, Extractor | None]:
+        """How each figure is extracted; None where it cannot be known, and one of `findings` says why."""
+        return self._built.extractors
+
+    @property
+    def findings(self) -> Sequence[Finding]:
+        """Doubts about the sweep that the planning came upon."""
+        return self._built.findings
 
     def extract(self, s: ComplexArray | Traces) -> dict[str, FloatArray]:
         """Return each figure that can be known, (...,), from scattering parameters (..., 2, 2, n) at the device.

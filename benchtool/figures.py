@@ -14,10 +14,10 @@ from typing import Final
 import numpy as np
 
 from benchtool.curves import Curve
-from benchtool.figure_plan import Extractor, FigureBuilder, FigurePlan, Traces
+from benchtool.figure_plan import Extractor, FigureBuilder, FigurePlan, SweepNoise, Traces
+from benchtool.fitting import fit_curve
 from benchtool.match import stability, worst_return_loss
 from benchtool.model import Bound, Figure, FloatArray, Kind, Sweep
-from benchtool.noise import estimate_noise
 from benchtool.phase import delay_variation, phase_linearity
 from benchtool.response import LevelWidth, Passband, PassbandFigures, plan_level_width, plan_passband
 from benchtool.sheet import TargetSpec
@@ -57,36 +57,27 @@ def plan_figures(
     ------
     ValueError : the window holds no sample.
     """
-    f = sweep.frequency_hz
-    noise = {name: estimate_noise(f, sweep.s[int(name[1]) - 1, int(name[2]) - 1]) for name in sweep.measured}
-    passband = plan_passband(f, sweep.s21, window_hz, noise.get("S21"))
-    build = FigureBuilder(sweep, kind, noise)
+    f, noise = sweep.frequency_hz, SweepNoise(sweep)
+    passband = plan_passband(f, sweep.s21, window_hz, noise["S21"])
     peak = passband.figures(sweep.s21)
     peak_hz = float(peak.peak_frequency)
     at = design_hz if design_hz is not None else peak_hz
-    inside_sweep = not build.outside("the design frequency", at, at)
-    grid = passband.curve.grid_hz
-    if grid[0] <= at <= grid[-1]:
-        design_curve = passband.curve
-    else:
-        width = float(grid[-1] - grid[0])
-        design_curve = build.curve("S21", at - 0.1 * width, at + 0.1 * width)
-    build.uses("S21", passband.curve)
-    _add_transmission(build, passband, peak, inside_sweep, design_curve, at)
-    _add_match(build, passband, peak, at, inside_sweep)
-    for target in targets:
-        _add_target(build, passband, target, peak_hz)
-    return FigurePlan(
-        kind,
-        at,
-        passband,
-        design_curve,
-        noise,
-        {name: tuple(curves) for name, curves in build.curves.items()},
-        tuple(build.entries),
-        build.extractors,
-        tuple(build.findings),
-    )
+    design_curve, grid = passband.curve, passband.curve.grid_hz
+    if not grid[0] <= at <= grid[-1]:
+        reach = 0.1 * float(grid[-1] - grid[0])
+        design_curve = fit_curve(f, sweep.s21, at - reach, at + reach, noise["S21"])
+
+    def collect() -> FigureBuilder:
+        build = FigureBuilder(sweep, kind, noise)
+        build.uses("S21", passband.curve, design_curve)
+        inside_sweep = not build.outside("the design frequency", at, at)
+        _add_transmission(build, passband, peak, inside_sweep, design_curve, at)
+        _add_match(build, passband, peak, at, inside_sweep)
+        for target in targets:
+            _add_target(build, passband, target, peak_hz)
+        return build
+
+    return FigurePlan(kind, at, passband, design_curve, noise, collect)
 
 
 def _add_transmission(
