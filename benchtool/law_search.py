@@ -53,6 +53,8 @@ _RECEIVER_UNSTATED: Final = (0.0, 7.0)
 """The 1 dB point in dBm of a low-cost receiver of which nothing is stated: mean and standard deviation (common
 practice, no source)."""
 _LEAST_U_DB: Final = 0.005
+_LAWS: Final = ((Law("tanh"), 0.1), (Law("cubic"), 0.1), (None, 0.8))
+"""Laws with their shares of belief; None is Rapp's, over every p."""
 _GRIDS: Final = ((21, 5), (21, 7), (21, 9))
 """Places of the 1 dB point, and values of Rapp's p, that each look takes in."""
 _NEWTON_STEPS: Final = 6
@@ -115,15 +117,14 @@ def weigh_limiting(table: DriveTable, doubts: Doubts) -> list[Weighed]:
     # With the same output pads throughout, the levels at port 2 and at the output differ by one number only.
     alike = bool(np.ptp(table.output_loss_db) == 0.0)
     sought: list[tuple[Cause, ...]] = [causes[::2], causes[1:2]] if alike else [(cause,) for cause in causes]
-    laws = ((Law("tanh"), 0.1), (Law("cubic"), 0.1), (None, 0.8))
-    every = [_LawSearch(table, doubts, some, law, share) for some in sought for law, share in laws]
-    live = every
+    searches = [_LevelSearch(table, doubts, some) for some in sought]
     for places, shapes in _GRIDS:
-        for search in live:
+        for search in searches:
             search.look(places, shapes)
-        top = max(search.log_best for search in live)
-        live = [search for search in live if search.log_best + search.between > top - _HOPELESS]
-    found = [weighed for search in every for weighed in search.found]
+        top = max(law.log_best for search in searches for law in search.laws)
+        for search in searches:
+            search.live = [law for law in search.live if law.log_best + law.between > top - _HOPELESS]
+    found = [weighed for search in searches for law in search.laws for weighed in law.found]
     return [merge(cause, "", [weighed for weighed in found if weighed.cause == cause]) for cause in causes]
 
 
@@ -160,18 +161,57 @@ class _Way:
     shift_db: float
 
 
-class _LawSearch:
-    """The evidence of causes by one law, summed over the 1 dB point and, where `law` is None, over Rapp's p.
+class _LawRange:
+    """Where the 1 dB point by one law may lie and, where `law` is None, which of Rapp's p it may have.
 
-    The causes are those that follow the same level but for one number. Each look takes in a grid and closes in on its
-    likely part. `log_best` is the best log weight that it saw, `between` how much better a point between the nodes may
-    be.
+    `found` is what the last look made of each way, `log_best` the best log weight that it saw, `between` how much
+    better a point between the nodes may be.
     """
 
-    def __init__(
-        self, table: DriveTable, doubts: Doubts, causes: Sequence[Cause], law: Law | None, share: float
-    ) -> None:
-        self.table, self.law = table, law
+    def __init__(self, law: Law | None, share: float, low: float, high: float) -> None:
+        self.law, self.share = law, share
+        self._low, self._high = low, high
+        self._soft, self._hard = float(np.log(SOFTEST_P)), float(np.log(HARDEST_P))
+        self.found: list[Weighed] = []
+        self.log_best, self.between = -np.inf, 0.0
+
+    def grid(self, places: int, shapes: int) -> tuple[FloatArray, FloatArray]:
+        """Return 1 dB points and logarithms of p, (n,) each, the latter running fastest."""
+        self._place = np.linspace(self._low, self._high, places)
+        self._shape = np.linspace(self._soft, self._hard, shapes if self.law is None else 1)
+        return np.repeat(self._place, self._shape.size), np.tile(self._shape, self._place.size)
+
+    def take(self, ways: Sequence[tuple[Cause, FloatArray, FloatArray, FloatArray]]) -> None:
+        """Take the log weight, level and misfit of each cause's ways on the grid, (n,) each, and close in."""
+        cell = float(self._place[1] - self._place[0])
+        if self.law is None:
+            cell *= float(self._shape[1] - self._shape[0]) / float(np.log(HARDEST_P / SOFTEST_P))
+        self.found, self.log_best, self.between = [], -np.inf, 0.0
+        matters = np.zeros((self._place.size, self._shape.size), np.bool_)
+        for cause, log, level, chi2 in ways:
+            best = float(np.max(log))
+            if best == -np.inf:
+                continue
+            self.found.append(_summed(cause, log, level, chi2, cell))
+            grid = log.reshape(matters.shape)
+            matters |= grid > best - _MATTERS
+            if best > self.log_best:
+                self.log_best, self.between = best, _between(grid)
+        if np.any(matters):
+            rows, columns = np.nonzero(matters)
+            self._low, self._high = _close_in(self._place, rows)
+            if self.law is None:
+                self._soft, self._hard = _close_in(self._shape, columns)
+
+
+class _LevelSearch:
+    """The evidence of causes that follow the same level but for one number, summed over laws and 1 dB points.
+
+    Each look takes in a grid for every law and closes in on its likely part.
+    """
+
+    def __init__(self, table: DriveTable, doubts: Doubts, causes: Sequence[Cause]) -> None:
+        self.table = table
         self._follows_gain = "input-limited" not in causes
         loss = table.output_loss_db if causes == ("receiver-overload",) else np.zeros(table.sweeps)
         # Level less the gain that it follows, (k, j).
@@ -181,51 +221,42 @@ class _LawSearch:
             shift = float(loss[0] - table.output_loss_db[0]) if cause == "receiver-overload" else 0.0
             # A tuned output that limits may also be pulled in tune; that is one of two ways, not a freedom for all.
             detuned = _DETUNES_SHARE if cause == "output-limited" else 0.0
-            self._ways += [_Way(cause, share * (1.0 - detuned), False, shift)]
-            self._ways += [_Way(cause, share * detuned, True, shift)] if detuned else []
+            self._ways += [_Way(cause, 1.0 - detuned, False, shift)]
+            self._ways += [_Way(cause, detuned, True, shift)] if detuned else []
         strongest = float(np.max(self._offset + (table.gain_db if self._follows_gain else 0.0)))
-        self._low, self._high = strongest - _REACH_BELOW_DB, strongest + _REACH_ABOVE_DB
-        self._soft, self._hard = float(np.log(SOFTEST_P)), float(np.log(HARDEST_P))
+        low, high = strongest - _REACH_BELOW_DB, strongest + _REACH_ABOVE_DB
+        self.laws = [_LawRange(law, share, low, high) for law, share in _LAWS]
+        self.live = self.laws
         self._patterns = doubts.patterns
         law_out, detuning = (np.eye(table.sweeps) / spread**2 for spread in (_LAW_DOUBT, _DETUNING))
         plain = [*doubts.precisions, law_out]
         self._priors = {False: prior_precision(plain)}
         if any(way.detunes for way in self._ways):
             self._priors[True] = prior_precision([*plain, detuning])
-        self.found: list[Weighed] = []
-        self.log_best, self.between = -np.inf, 0.0
 
     def look(self, places: int, shapes: int) -> None:
-        """Weigh a grid of so many 1 dB points and values of p, and close in."""
-        place = np.linspace(self._low, self._high, places)
-        shape = np.linspace(self._soft, self._hard, shapes if self.law is None else 1)
-        p1db, log_p = np.repeat(place, shape.size), np.tile(shape, place.size)
-        left, slope, drop = _fit_gain(self.table, self._offset, p1db, log_p, self.law, self._follows_gain)
-        cell = float(place[1] - place[0])
-        if self.law is None:
-            cell *= float(shape[1] - shape[0]) / float(np.log(HARDEST_P / SOFTEST_P))
-        seen = np.max(drop, axis=(1, 2)) >= _LEAST_DROP_DB
-        self.found, self.log_best, self.between = [], -np.inf, 0.0
-        if not np.any(seen):
+        """Weigh a grid of so many 1 dB points, and values of p, for each law that is still live."""
+        if not self.live:
             return
-        matters = np.zeros((place.size, shape.size), np.bool_)
+        grids = [law.grid(places, shapes) for law in self.live]
+        ends = np.cumsum([place.size for place, _ in grids])
+        parts = [slice(int(end) - place.size, int(end)) for end, (place, _) in zip(ends, grids, strict=True)]
+        p1db, log_p = (np.concatenate(column) for column in zip(*grids, strict=True))
+        left, slope, drop = self._fit_gain(p1db, log_p, parts)
+        seen = np.max(drop, axis=(1, 2)) >= _LEAST_DROP_DB
         evidence = {
             detunes: equations.log_evidence(self._priors[detunes])
             for detunes, equations in self._equations(left, slope, drop).items()
         }
+        weighed: list[tuple[Cause, FloatArray, FloatArray, FloatArray]] = []
         for way in self._ways:
             log, chi2 = evidence[way.detunes]
             level = p1db + way.shift_db
             prior = _log_level_prior(self.table, way.cause, level) + np.log(way.share * PRIOR[way.cause])
-            log = np.where(seen, log + prior, -np.inf)
-            self.found.append(_summed(way.cause, log, level, chi2, cell))
-            grid = log.reshape(place.size, shape.size)
-            matters |= grid > np.max(grid) - _MATTERS
-            if np.max(log) > self.log_best:
-                self.log_best, self.between = float(np.max(log)), _between(grid)
-        rows, columns = np.nonzero(matters)
-        self._low, self._high = _close_in(place, rows)
-        self._soft, self._hard = _close_in(shape, columns) if self.law is None else (self._soft, self._hard)
+            weighed.append((way.cause, np.where(seen, log + prior, -np.inf), level, chi2))
+        for law, part in zip(self.live, parts, strict=True):
+            belief = float(np.log(law.share))
+            law.take([(cause, log[part] + belief, level[part], chi2[part]) for cause, log, level, chi2 in weighed])
 
     def _equations(self, left: FloatArray, slope: FloatArray, drop: FloatArray) -> dict[bool, NormalEquations]:
         """Return the equations with the doubts and how far the law may be out and, where asked for, with detuning."""
@@ -242,6 +273,42 @@ class _LawSearch:
             return {False: whole}
         plain = np.arange(sweeps * (c + 2)).reshape(sweeps, c + 2)[:, : c + 1].ravel()
         return {False: whole.only(plain), True: whole}
+
+    def _fit_gain(
+        self, p1db: FloatArray, log_p: FloatArray, parts: Sequence[slice]
+    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Return what is left of the gain after the drop, its slope with g_j, and the drop, (G, k, j) each."""
+        p = np.exp(log_p)[:, None, None]
+
+        def drop_of(excess: FloatArray) -> tuple[FloatArray, FloatArray]:
+            drop, rate = np.empty_like(excess), np.empty_like(excess)
+            for law, part in zip(self.live, parts, strict=True):
+                if law.law is None:
+                    drop[part], rate[part] = rapp_drop_and_slope(excess[part], p[part])
+                else:
+                    drop[part], rate[part] = law.law.drop_and_slope_past_p1db(excess[part])
+            return drop, rate
+
+        gain, weight = self.table.gain_db[None], 1.0 / self.table.noise_db[None] ** 2
+        base = self._offset[None] - p1db[:, None, None]
+        if not self._follows_gain:
+            # The level is the same at every node but for a tilt of the source, and does not depend on g_j.
+            drop, _ = drop_of(base)
+            raised = gain + drop
+            own = np.sum(weight * raised, axis=1, keepdims=True) / np.sum(weight, axis=1, keepdims=True)
+            return raised - own, np.ones_like(drop), drop
+        own = np.repeat(np.max(gain, axis=1, keepdims=True), p1db.size, axis=0)
+        for _ in range(_NEWTON_STEPS):
+            drop, rate = drop_of(base + own)
+            slope = np.clip(1.0 - rate, 0.05, 1.0)
+            moves = weight * slope
+            move = np.sum(moves * (gain - own + drop), axis=1, keepdims=True)
+            move = np.clip(move / np.sum(moves * slope, axis=1, keepdims=True), -5.0, 5.0)
+            own = own + move
+            if np.max(np.abs(move)) < _STILL_DB:
+                break
+        drop, rate = drop_of(base + own)
+        return gain - own + drop, np.clip(1.0 - rate, 0.05, 1.0), drop
 
 
 def _summed(cause: Cause, log: FloatArray, p1db: FloatArray, chi2: FloatArray, cell: float) -> Weighed:
@@ -270,34 +337,3 @@ def _between(grid: FloatArray) -> float:
 
 def _close_in(axis: FloatArray, used: NDArray[np.signedinteger]) -> tuple[float, float]:
     return float(axis[max(int(np.min(used)) - 1, 0)]), float(axis[min(int(np.max(used)) + 1, axis.size - 1)])
-
-
-def _fit_gain(
-    table: DriveTable, offset: FloatArray, p1db: FloatArray, log_p: FloatArray, law: Law | None, follows: bool
-) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Return what is left of the gain after the drop, its slope with g_j, and the drop, (G, k, j) each."""
-    p = np.exp(log_p)[:, None, None]
-
-    def drop_of(excess: FloatArray) -> tuple[FloatArray, FloatArray]:
-        return rapp_drop_and_slope(excess, p) if law is None else law.drop_and_slope_past_p1db(excess)
-
-    gain, weight = table.gain_db[None], 1.0 / table.noise_db[None] ** 2
-    base = offset[None] - p1db[:, None, None]
-    if not follows:
-        # The level is the same at every node but for a tilt of the source, and does not depend on g_j.
-        drop, _ = drop_of(base)
-        raised = gain + drop
-        own = np.sum(weight * raised, axis=1, keepdims=True) / np.sum(weight, axis=1, keepdims=True)
-        return raised - own, np.ones_like(drop), drop
-    own = np.repeat(np.max(gain, axis=1, keepdims=True), p1db.size, axis=0)
-    for _ in range(_NEWTON_STEPS):
-        drop, rate = drop_of(base + own)
-        slope = np.clip(1.0 - rate, 0.05, 1.0)
-        moves = weight * slope
-        move = np.sum(moves * (gain - own + drop), axis=1, keepdims=True)
-        move = np.clip(move / np.sum(moves * slope, axis=1, keepdims=True), -5.0, 5.0)
-        own = own + move
-        if np.max(np.abs(move)) < _STILL_DB:
-            break
-    drop, rate = drop_of(base + own)
-    return gain - own + drop, np.clip(1.0 - rate, 0.05, 1.0), drop
