@@ -199,10 +199,12 @@ def _not_repeating(table: DriveTable, verdict: CauseVerdict) -> Finding:
         )
     else:
         why = f"{_shown(_evidence(table))}, which no limiting and no single pad explains"
+    # Where no explanation fits at all, sweeps of one line that disagree are still a fact.
+    sure = f" ({_sure(verdict)})" if verdict.confidence >= NAMED else ""
     return Finding(
         "reference-not-repeating",
         "caution",
-        f"sweeps do not repeat ({_sure(verdict)}): {why}" + (f"; {odd} stands apart most" if odd else ""),
+        f"sweeps do not repeat{sure}: {why}" + (f"; {odd} stands apart most" if odd else ""),
         "let the bench warm up, tighten connectors, look for oscillation, then sweep the line of "
         f"{odd or table.files[0]} again, twice in a row",
         odd,

@@ -20,7 +20,7 @@ from benchtool.drive_results import PadEstimate
 from benchtool.drive_table import DriveTable
 from benchtool.model import FloatArray
 from benchtool.onset_belief import Allowances
-from benchtool.rivals import Cause, Rival, rivals
+from benchtool.rivals import Cause, Rival, log_evidence, rivals
 
 __all__ = [
     "NAMED",
@@ -60,6 +60,8 @@ _DOUBTED_PAD_DB: Final = 6.0
 """Standard uncertainty of a pad that may be another pad altogether."""
 UNSPOILED_DB: Final = 0.2
 """A sweep that may have lost less than this in the receiver can still bear on the device."""
+_CLEARLY_ODD: Final = float(np.log(20.0))
+"""Logarithm of how much better the rest must be explained without one sweep than without another."""
 _UNSTEADY_DB: Final = 1.0
 """Standard uncertainty of each sweep of a device that does not repeat."""
 _CODE: Final[Mapping[Cause, CauseCode]] = {
@@ -100,15 +102,22 @@ def find_cause(table: DriveTable, confidence: float = 0.95) -> CauseVerdict | No
     for rival in found:
         share[rival.cause] += rival.probability
     code, sure = _decide(table, share, found[0])
-    odd = [rival for rival in found if rival.cause == "not-repeating" and rival.about]
-    return CauseVerdict(
-        code,
-        sure,
-        MappingProxyType(share),
-        _pads(table, found, confidence),
-        odd[0].about if odd and table.sweeps > 2 else None,
-        found,
-    )
+    odd = _odd_sweep(table, found) if table.sweeps > 2 else None
+    return CauseVerdict(code, sure, MappingProxyType(share), _pads(table, found, confidence), odd, found)
+
+
+def _odd_sweep(table: DriveTable, found: tuple[Rival, ...]) -> str | None:
+    """Return the sweep that stands apart most; None where two that should agree are as likely to be the odd one.
+
+    Where sweeps of one line disagree, the others are the witness: the odd one is that without which the rest is
+    explained best.
+    """
+    apart = {k for pair in table.disagreeing() for k in pair}
+    if not apart:
+        return next((rival.about for rival in found if rival.cause == "not-repeating" and rival.about), None)
+    rest = {k: log_evidence(table.only([i for i in range(table.sweeps) if i != k])) for k in apart}
+    first, second = sorted(rest, key=lambda k: -rest[k])[:2]
+    return table.files[first] if rest[first] - rest[second] > _CLEARLY_ODD else None
 
 
 def _misfits(best: Rival) -> bool:
@@ -164,8 +173,9 @@ def allowances(table: DriveTable, verdict: CauseVerdict) -> Allowances:
     likely = [pad for pad in verdict.pads if pad.probability >= STILL_POSSIBLE]
     doubted = {pad.name: _DOUBTED_PAD_DB for pad in likely} if doubtful else {}
     spoiled: set[str] = set()
-    unsteady = _UNSTEADY_DB if verdict.code == "reference-not-repeating" else 0.0
-    if verdict.odd_sweep is not None and p["not-repeating"] >= STILL_POSSIBLE:
+    named = verdict.code == "reference-not-repeating"
+    unsteady = _UNSTEADY_DB if named else 0.0
+    if verdict.odd_sweep is not None and (named or p["not-repeating"] >= STILL_POSSIBLE):
         spoiled.add(verdict.odd_sweep)
     if p["receiver-overload"] >= STILL_POSSIBLE:
         lost = receiver_drop(table, verdict)

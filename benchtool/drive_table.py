@@ -106,17 +106,22 @@ class DriveTable:
         return np.asarray(-np.gradient(self.slope_db, f) * 0.01 * (f[-1] - f[0]))
 
     def repeats(self) -> bool:
-        """Whether sweeps that were taken again agree within their own doubts (four standard uncertainties).
+        """Whether sweeps that were taken again agree within their own doubts."""
+        return not self.disagreeing()
+
+    def disagreeing(self) -> tuple[tuple[int, int], ...]:
+        """Return pairs of sweeps with one line that differ by more than four standard uncertainties of their own.
 
         Mismatch is none of these: the line is the same.
         """
+        found = []
         for a, b in self.taken_again():
             doubt = (
                 self.noise_db[a] ** 2 + self.noise_db[b] ** 2 + self.reading_u_db[a] ** 2 + self.reading_u_db[b] ** 2
             )
             if np.any(np.abs(self.gain_db[a] - self.gain_db[b]) > 4.0 * np.sqrt(doubt)):
-                return False
-        return True
+                found.append((a, b))
+        return tuple(found)
 
     def taken_again(self) -> tuple[tuple[int, int], ...]:
         """Return pairs of sweeps that were taken with the same source level and the same pads."""
@@ -213,9 +218,18 @@ def _smooth_level(sweep: Sweep) -> FloatArray:
     return np.asarray(10.0 * np.log10(np.maximum(moving_average(np.abs(sweep.s21) ** 2, 5), 1e-300)))
 
 
+def _inside(sweep: MeasuredSweep, low: float, high: float) -> int:
+    f = sweep.result.sweep.frequency_hz
+    return int(np.count_nonzero((f >= low) & (f <= high)))
+
+
 def _nodes(sweeps: Sequence[MeasuredSweep], low: float, high: float) -> FloatArray:
     """Return the frequencies, (j,), at which the sweeps are compared: those with signal in most of the sweeps."""
-    quietest = min(sweeps, key=lambda sweep: _noise_model(sweep).additive)
+    fit = [sweep for sweep in sweeps if _inside(sweep, low, high) >= 3]
+    if not fit:
+        return np.linspace(low, high, 3)
+    # A sweep too short to show its noise is not for that the quietest.
+    quietest = min(fit, key=lambda sweep: (sweep.plan.noise.get("S21") is None, _noise_model(sweep).additive))
     f = quietest.result.sweep.frequency_hz
     level = _smooth_level(quietest.result.sweep)
     floor = max(

@@ -28,7 +28,7 @@ from benchtool.evidence import normal_equations, prior_precision
 from benchtool.law_search import PRIOR, Cause, Doubts, Weighed, flat_precision, merge, weigh_limiting
 from benchtool.model import FloatArray
 
-__all__ = ["Cause", "Rival", "rivals"]
+__all__ = ["Cause", "Rival", "log_evidence", "rivals"]
 
 _OFFSETS_DB: Final = ((1.5, 0.8), (6.0, 0.2))
 """Standard deviations, and their shares, of what a wrong pad or a sweep that does not repeat is off by: a value that is
@@ -59,20 +59,32 @@ class Rival:
 
 def rivals(table: DriveTable) -> tuple[Rival, ...]:
     """Return every explanation of the table, most likely first; probabilities sum to one."""
+    # By the logarithm: probabilities of all but the best may be too small to tell apart.
+    weighed = sorted(_weighed(table), key=lambda each: -each.log_weight)
+    total = np.logaddexp.reduce([each.log_weight for each in weighed])
+    freedom = (table.sweeps - 1) * table.frequency_hz.size
+    return tuple(
+        Rival(w.cause, w.about, float(np.exp(w.log_weight - total)), w.value, w.u, w.chi2, freedom) for w in weighed
+    )
+
+
+def log_evidence(table: DriveTable) -> float:
+    """Return how likely the readings of a table are by all explanations together, as a logarithm.
+
+    It compares tables of as many sweeps with the same lines.
+    """
+    return float(np.logaddexp.reduce([each.log_weight for each in _weighed(table)]))
+
+
+def _weighed(table: DriveTable) -> list[Weighed]:
     doubts = Doubts.of(table)
     lawless = _Lawless(table, doubts)
-    weighed = [
+    return [
         lawless.weigh("clean", "", []),
         *weigh_limiting(table, doubts),
         *_pad_values(table, lawless),
         *_not_repeating(table, lawless),
     ]
-    total = np.logaddexp.reduce([each.log_weight for each in weighed])
-    freedom = (table.sweeps - 1) * table.frequency_hz.size
-    found = [
-        Rival(w.cause, w.about, float(np.exp(w.log_weight - total)), w.value, w.u, w.chi2, freedom) for w in weighed
-    ]
-    return tuple(sorted(found, key=lambda rival: -rival.probability))
 
 
 @dataclass(frozen=True, eq=False)
