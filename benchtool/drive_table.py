@@ -16,6 +16,7 @@ import numpy as np
 from benchtool.compression import MeasuredSweep
 from benchtool.doubts import source_doubt_db, sweep_doubts
 from benchtool.drive_doubts import HALF_FIT, MismatchDoubt, PadDoubt, mismatch_doubts, pad_doubts, parabola
+from benchtool.fitting import fit_curve
 from benchtool.model import FloatArray, Sweep, readonly
 from benchtool.noise import NOISE_FREE, NoiseModel, moving_average
 from benchtool.pads import PadBank
@@ -167,8 +168,10 @@ def drive_table(
     order = [int(k) for k in np.argsort(drive, kind="stable")]
     sweeps, entries, drive = [sweeps[k] for k in order], [entries[k] for k in order], drive[order]
     nodes = _nodes(sweeps, low, high)
-    read = [_levels(sweep, nodes) for sweep in sweeps]
-    design = [_levels(sweep, np.array([at_hz])) for sweep in sweeps]
+    grids = [sweep.result.sweep.frequency_hz for sweep in sweeps]
+    alike = all(np.array_equal(grids[0], grid) for grid in grids[1:])
+    read = [_levels(sweep, nodes, alike=alike) for sweep in sweeps]
+    design = [_levels(sweep, np.array([at_hz]), alike=alike) for sweep in sweeps]
     tilt = np.array([_source_tilt(entry, nodes, at_hz) for entry in entries])
     doubts = [
         sweep_doubts(sweep.result.sweep, entry, sheet, bank, at_hz)
@@ -247,14 +250,25 @@ def _nodes(sweeps: Sequence[MeasuredSweep], low: float, high: float) -> FloatArr
     return np.unique(np.interp(np.linspace(0.0, along[-1], min(_NODES, f.size)), along, f))
 
 
-def _levels(sweep: MeasuredSweep, at_hz: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Return the level of S21 in dB and its noise at each frequency, (j,) each, from a parabola round it."""
+def _levels(sweep: MeasuredSweep, at_hz: FloatArray, *, alike: bool) -> tuple[FloatArray, FloatArray]:
+    """Return the level of S21 in dB and its noise at each frequency, (j,) each, from a parabola round it.
+
+    What a parabola misses of a sharp curve is the same in every sweep that has the same frequencies. Sweeps that are
+    not `alike` in that are read from their own smooth curve, and what that leaves over counts as noise.
+    """
     f, s21 = sweep.result.sweep.frequency_hz, sweep.result.sweep.s21
     smooth = 10.0 ** (_smooth_level(sweep.result.sweep) / 20.0)
-    sigma = 20.0 / np.log(10.0) * _noise_model(sweep).sigma(smooth) / (np.sqrt(2.0) * smooth)
+    to_decibels = 20.0 / np.log(10.0) / np.sqrt(2.0)
+    sigma = to_decibels * _noise_model(sweep).sigma(smooth) / smooth
     near, weights = parabola(f, at_hz)
     gain = np.sum(weights * np.maximum(to_db(s21), -300.0)[near], axis=1)
-    return np.asarray(gain), np.asarray(np.sqrt(np.sum((weights * sigma[near]) ** 2, axis=1)))
+    noise = np.sqrt(np.sum((weights * sigma[near]) ** 2, axis=1))
+    if not alike:
+        curve = fit_curve(f, s21, float(at_hz[0]), float(at_hz[-1]), sweep.plan.noise.get("S21"))
+        gain = np.interp(at_hz, curve.grid_hz, curve.level_on_grid(s21))
+        misfit = np.max([fit.misfit for fit in curve.fits])
+        noise = np.hypot(noise, to_decibels * misfit / 10.0 ** (gain / 20.0))
+    return np.asarray(gain), np.asarray(noise)
 
 
 def _phase_deg(sweep: MeasuredSweep, at_hz: float) -> float:
