@@ -24,10 +24,13 @@ _LEAST_SHOWN_DB: Final = 0.01
 _Plan = Mapping[Purpose, NextSweep]
 
 
-def sweep_words(sweep: NextSweep, *, outputs: bool = True) -> str:
-    """Return a planned sweep's line: 'b10 at the input and c10, d10 at the output (−18.0 dBm drive)'."""
+def sweep_words(sweep: NextSweep, *, brief: bool = False) -> str:
+    """Return a planned sweep's line: 'b10 at the input and c10, d10 at the output (−18.0 dBm drive)'.
+
+    A `brief` one leaves out the output where it is that of the reference sweep.
+    """
     sides = [f"{', '.join(sweep.input_pads) or 'no pad'} at the input"]
-    if outputs:
+    if not (brief and sweep.keeps_output):
         sides.append(f"{', '.join(sweep.output_pads) or 'no pad'} at the output")
     drive = f" ({level_text(sweep.drive_dbm)} drive)" if sweep.drive_dbm is not None else ""
     return f"{' and '.join(sides)}{drive}"
@@ -76,7 +79,7 @@ def _lift(advice: str, verdict: CauseVerdict, onset: Onset, plan: _Plan) -> str:
         return advice
     return (
         "narrow the measuring bandwidth, average, or sweep with "
-        f"{sweep_words(plan['lift-signal'], outputs=False)} for what the noise hides"
+        f"{sweep_words(plan['lift-signal'], brief=True)} for what the noise hides"
     )
 
 
@@ -89,7 +92,7 @@ def _separate(advice: str, verdict: CauseVerdict, onset: Onset, plan: _Plan) -> 
 def _keep_below(advice: str, verdict: CauseVerdict, onset: Onset, plan: _Plan) -> str:
     """Return what to do about a device that limits: figures from a safe drive, and how to know it better."""
     if not onset.reference.proven and "prove-reference" in plan:
-        lower = sweep_words(plan["prove-reference"], outputs=False)
+        lower = sweep_words(plan["prove-reference"], brief=True)
         return f"{advice}; to prove {onset.reference.file} small-signal, sweep with {lower}"
     return f"{advice}; {_told(plan['bracket-onset'])}" if "bracket-onset" in plan else advice
 
@@ -121,9 +124,7 @@ def reference_finding(onset: Onset, verdict: CauseVerdict | None, planned: Seque
     how = "sweep again with 10 dB more input pad; if the gain agrees, it stands"
     lower = [sweep for sweep in planned if sweep.purpose == "prove-reference"]
     if lower:
-        drive = f" ({level_text(lower[0].drive_dbm)} drive)" if lower[0].drive_dbm is not None else ""
-        pads = ", ".join(lower[0].input_pads) or "no pad"
-        how = f"sweep again with {pads} at the input{drive}; if the gain agrees, it stands"
+        how = f"sweep again with {sweep_words(lower[0], brief=True)}; if the gain agrees, it stands"
     if verdict is not None and verdict.code == "noise-limited":
         how = f"noise outweighs the compression looked for: average first; then {how}"
     if verdict is not None and verdict.code == "reference-not-repeating":
@@ -139,4 +140,6 @@ def _reads_low(low: Estimate) -> str:
         return f"its gain reads low by less than {_LEAST_SHOWN_DB} dB"
     if low.low is None or low.high <= SAFE_DROP_DB:
         return f"its gain reads low by no more than {low.high:.2f} dB"
+    if low.low < _LEAST_SHOWN_DB:
+        return f"its gain may read low by up to {low.high:.2f} dB"
     return f"its gain may read low by {low.low:.2f} to {low.high:.2f} dB"

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import datetime
 import os
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import replace
 from pathlib import Path
 from typing import Final
@@ -252,7 +252,7 @@ def _study_drive(
     at_hz = reference.plan.design_hz
     study = study_compression(measured, device.sweeps, sheet, bank, at_hz, reference.file, device.kind)
     if study is None:
-        return None, ()
+        return None, tuple(_apart(measured, at_hz))
     planned = plan_next(sheet, bank, device.sweeps, study, reference.signal_to_noise_db)
     # That a device limits at a high drive is worth knowing, but no doubt about figures that a proven reference gives.
     harmless = study.verdict is not None and study.verdict.device_compresses and study.onset.reference.proven
@@ -275,6 +275,21 @@ def _study_drive(
         study.set_aside,
     )
     return drive, tuple(findings)
+
+
+def _apart(measured: Sequence[MeasuredSweep], at_hz: float) -> Iterator[Finding]:
+    """Yield the sweeps for which drives cannot be compared at the design frequency."""
+    for sweep in measured if len(measured) > 1 else ():
+        f = sweep.result.sweep.frequency_hz
+        if not f[0] <= at_hz <= f[-1]:
+            yield Finding(
+                "outside-sweep",
+                "caution",
+                f"{sweep.file} runs from {format_si(f[0], 'Hz', 6)} to {format_si(f[-1], 'Hz', 6)}, without the design "
+                f"frequency, {format_si(at_hz, 'Hz', 6)}, so nothing is known of compression",
+                "sweep it again over the design frequency, or leave it out of the device",
+                sweep.file,
+            )
 
 
 def _way_out(

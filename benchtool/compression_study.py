@@ -6,7 +6,7 @@ the cause leaves standing.
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Final
 
@@ -70,7 +70,7 @@ def study_compression(
     unknown = _onset_unknown(onset, table) if kind == "amplifier" else None
     found = tuple(each for each in (finding, unknown) if each is not None)
     aside = {} if verdict is None else set_aside(table, verdict, reference)
-    return CompressionStudy(table, verdict, onset, _map(table), found, aside)
+    return CompressionStudy(table, verdict, onset, _map(table, allow.spoiled | aside.keys()), found, aside)
 
 
 def _onset_unknown(onset: Onset, table: DriveTable) -> Finding | None:
@@ -84,11 +84,16 @@ def _onset_unknown(onset: Onset, table: DriveTable) -> Finding | None:
     )
 
 
-def _map(table: DriveTable) -> CompressionMap | None:
+def _map(table: DriveTable, set_aside: Collection[str]) -> CompressionMap | None:
+    """Return compression over frequency and drive, from the lowest drive whose gain is not set aside."""
     drive = np.mean(table.drive_dbm, axis=1)
-    if len(np.unique(np.round(drive, 1))) < _MAP_DRIVES:
+    kept = np.array([file not in set_aside for file in table.files])
+    if len(np.unique(np.round(drive, 1))) < _MAP_DRIVES or not np.any(kept):
         return None
-    return CompressionMap(table.frequency_hz, drive, table.files, table.gain_db[0] - table.gain_db)
+    lowest = kept & (np.round(drive, 1) == np.round(np.min(drive[kept]), 1))
+    return CompressionMap(
+        table.frequency_hz, drive, table.files, np.mean(table.gain_db[lowest], axis=0) - table.gain_db
+    )
 
 
 def onset_figures(onset: Onset) -> dict[str, Figure]:

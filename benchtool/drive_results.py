@@ -128,6 +128,8 @@ class NextSweep:
     settles: str
     cautions: tuple[str, ...]
     purpose: Purpose
+    keeps_output: bool = False
+    """Whether its output pads are those of the reference sweep."""
 
 
 @dataclass(frozen=True, eq=False)

@@ -224,7 +224,10 @@ def _less_drive(sweep: MeasuredSweep, reference: MeasuredSweep, drop_db: float, 
     if here.source_dbm == there.source_dbm and more_db > drop_db + 0.5 * _CLEAR_OF_DB:
         advice = f"take figures from {reference.file}, swept with {decibels(round(more_db, 1))} more input pad"
     else:
-        advice = f"to take figures at that source level, add {drop_db + _CLEAR_OF_DB:.0f} dB of input pad"
+        # The reference may be down as well, and then the device is down by more than the sweeps differ.
+        low = None if drive is None else drive.onset.reference.reads_low_db.high
+        clear_db = drop_db + (low or 0.0) + _CLEAR_OF_DB
+        advice = f"to take figures at that source level, add {clear_db:.0f} dB of input pad"
     open_yet = drive is not None and drive.cause in ("input-limited-or-pad", "cause-unclear")
     return f"if the device limits, {advice}" if open_yet else advice
 

@@ -2,7 +2,8 @@
 
 Each pad is used once; pads of the calibration that every sweep kept stay in line. No line is offered whose level at
 port 2, taken at the top of its doubts, passes a stated limit: the level from which the receiver compresses, and 10 dB
-below damage. Where no limit is stated, none passes the highest level of the session.
+below damage. Where no limit is stated, none passes the highest level of the session. A device that was compressed in
+every sweep has more gain than they show, up to what its output has given.
 """
 
 from __future__ import annotations
@@ -59,9 +60,12 @@ def port2_limit_dbm(sheet: BenchSheet) -> float | None:
 
 
 def possible_lines(
-    sheet: BenchSheet, bank: PadBank, entries: Sequence[SweepEntry], table: DriveTable
+    sheet: BenchSheet, bank: PadBank, entries: Sequence[SweepEntry], table: DriveTable, reads_low_db: float
 ) -> Iterator[Line]:
-    """Yield every line that the stock of pads and the limits allow."""
+    """Yield every line that the stock of pads and the limits allow.
+
+    `reads_low_db` is by how much the gain seen may read low by compression; infinite where nothing is known of it.
+    """
     cal = sheet.calibration
     stays_in = tuple(pad for pad in cal.input_pads if all(pad in entry.input_pads for entry in entries))
     stays_out = tuple(pad for pad in cal.output_pads if all(pad in entry.output_pads for entry in entries))
@@ -71,6 +75,7 @@ def possible_lines(
     source = entries[0].source_at(table.at_hz) or 0.0
     gain = float(np.max(table.gain_db))
     highest_drive = float(np.max(table.drive_dbm))
+    highest_output = float(np.max(table.drive_dbm + table.gain_db))
     highest_port2 = float(np.max(table.drive_dbm + table.gain_db - table.output_loss_db[:, None]))
     stated = port2_limit_dbm(sheet)
     sides = [names for count in range(_MOST_ADDED + 1) for names in combinations(free, count)]
@@ -81,7 +86,10 @@ def possible_lines(
             pads_in, pads_out = (*stays_in, *_long_first(into, loss)), (*stays_out, *_long_first(out, loss))
             drive = source - sum(loss[pad] for pad in pads_in)
             port2 = drive + gain - sum(loss[pad] for pad in pads_out)
-            doubt = table.source_half_width_db + sum(most[pad] for pad in (*pads_in, *pads_out))
+            # At no more drive than was swept no device gives more than it gave; beyond, no more than drive was added.
+            could_give = highest_output + max(0.0, drive - highest_drive)
+            more_gain = min(reads_low_db, max(0.0, could_give - (drive + gain)))
+            doubt = table.source_half_width_db + sum(most[pad] for pad in (*pads_in, *pads_out)) + more_gain
             too_high = port2 + doubt > stated if stated is not None and table.levels_known else port2 > highest_port2
             if too_high or drive > highest_drive + (STEP_UP_DB if table.levels_known else 0.0):
                 continue

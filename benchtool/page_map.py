@@ -55,7 +55,7 @@ def map_shown(device: DeviceResult) -> MapShown | None:
     study = device.drive
     if study is None or study.map is None or study.onset.basis in ("bound", "none"):
         return None
-    spoiled = {point.file for point in study.onset.points if point.spoiled}
+    spoiled = {point.file for point in study.onset.points if point.spoiled} | study.set_aside.keys()
     whole = study.map
     kept = [k for k, file in enumerate(whole.files) if file not in spoiled]
     steps = np.round(whole.drive_dbm[kept], 1)

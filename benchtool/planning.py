@@ -80,7 +80,8 @@ def plan_next(
     """
     by_name = {entry.name: entry for entry in entries}
     ordered = tuple(by_name[file] for file in study.table.files)
-    found = tuple(possible_lines(sheet, bank, ordered, study.table))
+    low = study.onset.reference.reads_low_db.high
+    found = tuple(possible_lines(sheet, bank, ordered, study.table, float("inf") if low is None else max(low, 0.0)))
     bench = _Bench(sheet, bank, study, ordered, signal_to_noise_db, found)
     if (again := _repeat(bench)) is not None:
         # Nothing else is worth a sweep until the bench repeats.
@@ -118,7 +119,19 @@ def _as_proposal(bench: _Bench, line: Line, purpose: Purpose, settles: str, *mor
         settles,
         tuple(cautions),
         purpose,
+        line.output_pads == _reference_entry(bench).output_pads,
     )
+
+
+def _reference_entry(bench: _Bench) -> SweepEntry:
+    return next(entry for entry in bench.entries if entry.name == bench.study.onset.reference.file)
+
+
+def _output_kept(bench: _Bench, lines: Sequence[Line]) -> list[Line]:
+    """Return those of the lines whose output pads are the reference's; where there is none, those with more loss."""
+    own = _reference_entry(bench).output_pads
+    same = [line for line in lines if line.output_pads == own]
+    return same or [line for line in lines if _loss_db(bench, line.output_pads) > _loss_db(bench, own)]
 
 
 def _best(lines: Sequence[Line], cost: Callable[[Line], float]) -> Line | None:
@@ -139,8 +152,7 @@ def _repeat(bench: _Bench) -> NextSweep | None:
     verdict = bench.study.verdict
     if verdict is None or verdict.code != "reference-not-repeating":
         return None
-    reference = bench.study.onset.reference.file
-    entry = next(entry for entry in bench.entries if entry.name == reference)
+    reference, entry = bench.study.onset.reference.file, _reference_entry(bench)
     same = [c for c in bench.candidates if (c.input_pads, c.output_pads) == (entry.input_pads, entry.output_pads)]
     if not same:
         return None
@@ -184,11 +196,11 @@ def _lift_signal(bench: _Bench) -> NextSweep | None:
     lines = [
         line
         for line in bench.candidates
-        if line.drive > drives[noisy] + _NEW_DRIVE_DB and (safe is None or line.drive <= safe)
+        if line.drive > drives[noisy] + _NEW_DRIVE_DB
+        and (safe is None or line.drive <= safe)
+        and float(np.min(np.abs(line.drive - drives))) > _NEW_DRIVE_DB
     ]
-    best = _best(
-        [line for line in lines if not _taken(bench, line)], lambda line: abs(line.drive - drives[noisy] - _LIFT_DB)
-    )
+    best = _best(_output_kept(bench, lines), lambda line: abs(line.drive - drives[noisy] - _LIFT_DB))
     if best is None:
         return None
     return _as_proposal(
@@ -340,7 +352,7 @@ def _prove_reference(bench: _Bench) -> NextSweep | None:
     if onset.safe_drive_dbm.low is not None:
         aim = min(aim, onset.safe_drive_dbm.low)
     lines = [line for line in bench.candidates if line.drive <= now - _NEW_DRIVE_DB and not _taken(bench, line)]
-    best = _best(lines, lambda line: abs(line.drive - aim))
+    best = _best(_output_kept(bench, lines), lambda line: abs(line.drive - aim))
     if best is None:
         return None
     cautions = []

@@ -12,7 +12,9 @@ from benchtool.drive_results import Estimate, NextSweep, Onset, PadEstimate, Ref
 from benchtool.findings import in_order
 from benchtool.model import Finding
 
-SWEEP = NextSweep(("b10", "a20"), ("c10",), -8.0, -38.0, -10.0, -20.0, 17.0, "which cause it is", (), "separate-causes")
+SWEEP = NextSweep(
+    ("b10", "a20"), ("c10",), -8.0, -38.0, -10.0, -20.0, 17.0, "which cause it is", (), "separate-causes", True
+)
 PAD = PadEstimate("a20", 20.0, 18.0, 17.9, 18.1, 0.5)
 KNOWN = Estimate(0.0, 0.0, 0.0)
 
@@ -104,3 +106,10 @@ def test_a_cause_comes_before_what_it_explains():
         "receiver-near-limit",
         "one-path",
     ]
+
+
+def test_output_pads_are_named_where_they_change():
+    kept, changed = SWEEP, replace(SWEEP, keeps_output=False)
+    assert sweep_words(kept, brief=True) == "b10, a20 at the input (−38.0 dBm drive)"
+    assert sweep_words(changed, brief=True) == "b10, a20 at the input and c10 at the output (−38.0 dBm drive)"
+    assert sweep_words(replace(changed, output_pads=()), brief=True).endswith("no pad at the output (−38.0 dBm drive)")
