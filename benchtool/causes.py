@@ -62,6 +62,7 @@ UNSPOILED_DB: Final = 0.2
 """A sweep that may have lost less than this in the receiver can still bear on the device."""
 _CLEARLY_ODD: Final = float(np.log(20.0))
 """Logarithm of how much better the rest must be explained without one sweep than without another."""
+_UNCLEAR_DB: Final = 2.0
 _UNSTEADY_DB: Final = 1.0
 """Standard uncertainty of each sweep of a device that does not repeat."""
 _CODE: Final[Mapping[Cause, CauseCode]] = {
@@ -174,7 +175,9 @@ def allowances(table: DriveTable, verdict: CauseVerdict) -> Allowances:
     doubted = {pad.name: _DOUBTED_PAD_DB for pad in likely} if doubtful else {}
     spoiled: set[str] = set()
     named = verdict.code == "reference-not-repeating"
-    unsteady = _UNSTEADY_DB if named else 0.0
+    # No explanation fits: any pad or sweep may be off, and the onset must not be the surer for it.
+    nothing_fits = verdict.code == "cause-unclear" and verdict.confidence == 0.0
+    unsteady = _UNSTEADY_DB if named else _UNCLEAR_DB if nothing_fits else 0.0
     if verdict.odd_sweep is not None and (named or p["not-repeating"] >= STILL_POSSIBLE):
         spoiled.add(verdict.odd_sweep)
     if p["receiver-overload"] >= STILL_POSSIBLE:

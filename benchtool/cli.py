@@ -113,7 +113,8 @@ def _load(
         sheet = sheet_from_files(
             sweeps, design=design, source_dbm=source, input_pads_db=inputs or [], output_pads_db=outputs or []
         )
-        return sheet, sweeps[0].parent / "report"
+        # Never over the results of a bench that has the same folder.
+        return sheet, sweeps[0].parent / "quick-look"
     if len(bench) > 1:
         raise RequestError(
             f"{len(bench)} arguments that are not all .s2p files", "give one folder, one sheet, or only .s2p files"

@@ -335,8 +335,8 @@ def _cross_checks(kind: Kind, reference: MeasuredSweep) -> Iterator[Finding]:
         "q-disagrees",
         "note" if kind != "amplifier" else "caution",
         f"{reference.file}: loaded Q is {shown}; a single-tuned response has one Q",
-        "expected of a filter with several resonators; else look for compression, a second resonance, a cable left in "
-        "line, or too few samples",
+        ("look for" if kind == "amplifier" else "expected of a filter with several resonators; else look for")
+        + " compression, a second resonance, a cable left in line, or too few samples",
         reference.file,
     )
 

@@ -37,7 +37,7 @@ __all__ = [
 ]
 
 _SHEET_NAME: Final = "bench.toml"
-_RESULT_FOLDERS: Final = ("report", "corrected")
+_RESULT_FOLDERS: Final = ("report", "corrected", "quick-look")
 _RANK: Final[dict[Verdict, int]] = {"missed": 0, "undecided": 1, "met": 2, "none": 3}
 
 

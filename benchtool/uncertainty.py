@@ -148,7 +148,8 @@ def _possible_values(figure: Figure, trial: FloatArray, noise_bias: float) -> Fl
     """
     assert figure.value is not None
     if figure.id in ("input_return_loss", "output_return_loss"):
-        mirrored = 2.0 * from_db(-figure.value) - from_db(-trial)
+        # Past nothing it comes out on the other side: a reflection smaller than its doubt may be as large as that.
+        mirrored = np.abs(2.0 * from_db(-figure.value) - from_db(-trial))
         return -to_db(np.maximum(mirrored, _SMALLEST_REFLECTION))
     return np.asarray(figure.value + _departure(figure, trial) - 2.0 * noise_bias)
 
@@ -165,6 +166,9 @@ def _noise_bias(departure: FloatArray) -> float:
 
 def _with_interval(figure: Figure, values: FloatArray, confidence: float, budget: Mapping[str, float]) -> Figure:
     low, high = coverage_interval(values, confidence)
+    if figure.value is not None and figure.id != "phase":
+        # Near a limit of what is possible the doubts may all point one way; what was read is never ruled out.
+        low, high = min(low, figure.value), max(high, figure.value)
     finite = values[np.isfinite(values)]
     spread = float(np.std(finite, ddof=1)) if finite.size > 1 else 0.0
     bound: Bound | None = figure.bound

@@ -51,7 +51,8 @@ def first_with(cause, code, seeds=range(60)):
 
 def gain_unseen(study, drive_dbm, low_db=None):
     """What a device may have in gain beyond what its sweeps show: what the reference reads low, up to its output."""
-    low_db = study.onset.reference.reads_low_db.high if low_db is None else low_db
+    known = study.onset.reference.reads_low_db.high
+    low_db = low_db if low_db is not None else np.inf if known is None else known
     table = study.table
     most = np.max(table.drive_dbm + table.gain_db) + max(0.0, drive_dbm - np.max(table.drive_dbm))
     return min(low_db, max(0.0, most - drive_dbm - np.max(table.gain_db)))
