@@ -102,6 +102,7 @@ class SweepDoubts:
     output_ports: tuple[float, ...]
     input_between: tuple[float, ...] = ()
     """Port and pad seeing each other in front of the device, once for each way round: twice their product."""
+    output_between: tuple[float, ...] = ()
     turned: bool = False
     """Whether S22 comes from the device turned round, read through the input-side pads."""
 
@@ -230,6 +231,7 @@ def sweep_doubts(sweep: Sweep, entry: SweepEntry, sheet: BenchSheet, bank: PadBa
         ports[0],
         ports[1],
         tuple(2.0 * port * reflection for reflection in _own_reflections(weights[0], bank)),
+        tuple(2.0 * port * reflection for reflection in _own_reflections(weights[1], bank)),
         entry.reversed is not None,
     )
 

@@ -6,6 +6,7 @@ Distributions are those of :mod:`benchtool.doubts`; how copies come to the figur
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from typing import Final, TypeAlias
 
 import numpy as np
@@ -107,6 +108,8 @@ class SweepCopier:
         through = traces["S21"]
         shape = through / max(float(np.max(np.abs(through))), 1e-300)
         joints = [_functions(joint, traces, shape) for joint in self._joints]
+        # Turned end for end, the device shows the line its other ports.
+        turned = [_functions(_turned(joint), traces, shape) for joint in self._joints]
         loop = [traces["S12"] * through] if "S12" in sweep.measured else []
         misfit = np.zeros(sweep.frequency_hz.size)
         for fit in (*plan.passband.curve.fits, *plan.design_curve.fits):
@@ -118,7 +121,8 @@ class SweepCopier:
             if name not in _REFLECTIONS:
                 if name == "S21":
                     noises["interpolation"] = misfit
-                self._models[name] = TraceModel(own, fits, joints, (), noises)
+                seen = turned if name == "S12" and doubts.turned else joints
+                self._models[name] = TraceModel(own, fits, seen, (), noises)
                 continue
             # Error vectors; the near joint, passed twice; between port and pad, once; the far port, through the device.
             self._models[name] = TraceModel(own, fits, (), [np.ones_like(own), own**2, own, *loop], noises)
@@ -128,15 +132,14 @@ class SweepCopier:
         draws = _Draws(rng, segments, self._bank)
         doubts = self._doubts
         into, out = draws.pads_factor(doubts.input_weights), draws.pads_factor(doubts.output_weights)
-        through = into * out * draws.reading(doubts.reading_db)
-        sizes: list[ComplexArray] = []
-        for joint in self._joints:
-            alone, seen = _drawn(joint, draws)
-            through = through * alone
-            sizes += seen
+        through, sizes = self._through(draws, into * out)
         found = {}
         for name, model in self._models.items():
             noises = {source: draws.moves(source) for source in model.noises if draws.active(source)}
+            if name == "S12" and doubts.turned:
+                # Another reading, with the device the other way round; the pads are the same.
+                found[name] = TraceCopies(model, rng, *self._through(draws, into * out), (), noises)
+                continue
             if name not in _REFLECTIONS:
                 found[name] = TraceCopies(model, rng, through, sizes, (), noises)
                 continue
@@ -146,15 +149,32 @@ class SweepCopier:
             found[name] = TraceCopies(model, rng, scale, (), added, noises)
         return found
 
+    def _through(self, draws: _Draws, pads: FloatArray) -> tuple[ComplexArray, list[ComplexArray]]:
+        """Return the factor of a wave through the line that is the same at all frequencies, and the sizes beside it."""
+        factor = pads * draws.reading(self._doubts.reading_db)
+        sizes: list[ComplexArray] = []
+        for joint in self._joints:
+            alone, seen = _drawn(joint, draws)
+            factor = factor * alone
+            sizes += seen
+        return factor, sizes
+
     def _added(self, draws: _Draws, first: bool, count: int) -> list[ComplexArray]:
         """Return the size of each term of a reflection: what directivity, pads and the ports' own match add to it."""
         doubts = self._doubts
         vectors = doubts.input_vectors if first else doubts.output_vectors
-        near, far = (doubts.input_ports, doubts.output_ports)[:: 1 if first else -1]
-        between = doubts.input_between if first else ()
+        # Turned end for end, S22 was read through the input side, with S11 at the other end.
+        by_input = first or doubts.turned
+        near, far = (doubts.input_ports, doubts.output_ports)[:: 1 if by_input else -1]
+        between = doubts.input_between if by_input else doubts.output_between
         sources = (("directivity", vectors), ("mismatch", near), ("mismatch", between), ("mismatch", far))
         nothing = np.zeros(draws.trials, np.complex128)
         return [sum((size * draws.phasor(source) for size in sizes), nothing) for source, sizes in sources[:count]]
+
+
+def _turned(joint: Joint) -> Joint:
+    """Return a joint as it is with the device end for end."""
+    return joint if joint.device is None else replace(joint, device="S22" if joint.device == "S11" else "S11")
 
 
 def _functions(joint: Joint, traces: Mapping[str, ComplexArray], shape: ComplexArray) -> list[ComplexArray]:

@@ -8,9 +8,11 @@ import pytest
 import skrf
 from numpy.testing import assert_allclose, assert_array_equal
 
+from benchtool.analysis import analyse
 from benchtool.errors import SweepFileError
 from benchtool.joining import join_reversed
 from benchtool.model import PARAMETERS, Finding, Sweep
+from benchtool.sheet import load_sheet
 
 FREQUENCY_HZ = np.linspace(1e6, 9e6, 5)
 RNG = np.random.default_rng(7)
@@ -109,3 +111,33 @@ def test_sweeps_that_do_not_belong_together_are_refused(forward, backward, messa
     with pytest.raises(SweepFileError) as caught:
         join_reversed(forward, backward)
     assert str(caught.value) == f"{Path('bench') / 'back.s2p'}: {message}"
+
+
+def test_output_match_of_a_turned_sweep_is_doubted_by_the_port_that_read_it(tmp_path):
+    # S22 read at port 1, whose match of 20 dB adds S22²·0.1 to it at the worst phase: truth must lie in the interval.
+    # With an output pad of 10 dB in line, port 2 itself would add a hundredth of that.
+    f = np.linspace(19e6, 24e6, 201)
+    tank = 1.0 / (1.0 + 30j * (f / 21.4e6 - 21.4e6 / f))
+    rng = np.random.default_rng(3)
+
+    def write(name, s11, s21):
+        hiss = 1e-5 * (rng.normal(size=(2, f.size)) + 1j * rng.normal(size=(2, f.size)))
+        rows = [
+            f"{hz:.0f} {a.real:.8g} {a.imag:.8g} {b.real:.8g} {b.imag:.8g} 0 0 0 0"
+            for hz, a, b in zip(f, s11 + hiss[0], s21 + hiss[1], strict=True)
+        ]
+        (tmp_path / name).write_text("# Hz S RI R 50\n" + "\n".join(rows) + "\n", encoding="utf-8")
+
+    pad, true = 10 ** (-10 / 20), 0.6
+    write("forward.s2p", 0.3 + 0.1 * tank, 20.0 * tank * pad)
+    write("back.s2p", np.full(f.size, true / (1.0 - 0.1 * true), complex), 1e-4 * tank * pad)
+    (tmp_path / "bench.toml").write_text(
+        "version = 1\n[analyzer]\nsource_dbm = -10\ndirectivity_db = 60\nport_match_db = 20\nreading_db = 0.01\n"
+        "[pads.a10]\nloss_db = 10\nreturn_loss_db = 60\ntolerance_db = 0.01\n"
+        '[[device]]\nname = "d"\nkind = "amplifier"\ndesign_frequency = "21.4 MHz"\n'
+        '[[device.sweep]]\nfile = "forward.s2p"\nreversed = "back.s2p"\noutput_pads = ["a10"]\n',
+        encoding="utf-8",
+    )
+    figure = analyse(load_sheet(tmp_path), trials=2000).devices[0].figures["output_return_loss"]
+    assert figure.low <= -20 * np.log10(true) <= figure.high
+    assert figure.high - figure.low < 1.5
