@@ -18,14 +18,16 @@ from benchtool.compression_study import onset_figures, study_compression
 from benchtool.doubts import SweepDoubts, assumptions, pads_that_count, sweep_doubts
 from benchtool.drive_results import DriveStudy
 from benchtool.errors import BenchtoolError, FaultsError, SheetError, SweepFileError
+from benchtool.figure_plan import units_or_span
 from benchtool.figures import FigurePlan, plan_figures, target_key
 from benchtool.findings import buried_parameters, device_findings, in_order
 from benchtool.joining import join_reversed, settle_ports
-from benchtool.model import BenchResult, DeviceResult, Figure, Finding, SignalPath, Sweep, SweepResult
+from benchtool.model import BenchResult, DeviceResult, Figure, Finding, SignalPath, Sweep, SweepResult, TargetResult
 from benchtool.pads import PadBank, de_embed, output_reflection, signal_path
 from benchtool.planning import plan_next
 from benchtool.response import span_of
 from benchtool.sheet import BenchSheet, Device, SweepEntry
+from benchtool.slips import VOID
 from benchtool.small_signal import BOUND_WHEN_COMPRESSED, carry_drive_doubt
 from benchtool.touchstone import read_sweep
 from benchtool.uncertainty import figure_trials
@@ -199,6 +201,7 @@ def analyse_device(
         )
         for key, target in zip(keys, device.targets, strict=True)
     )
+    results = _void(results, findings)
     used = {pad for entry in device.sweeps for pad in pads_that_count(entry, sheet)}
     return DeviceResult(
         device.name,
@@ -277,17 +280,26 @@ def _study_drive(
     return drive, tuple(findings)
 
 
+def _void(results: tuple[TargetResult, ...], findings: Sequence[Finding]) -> tuple[TargetResult, ...]:
+    """Return the targets undecided where what was measured is not what the sheet says."""
+    wrong = next((finding for finding in findings if finding.code in VOID), None)
+    if wrong is None:
+        return results
+    return tuple(replace(each, verdict="undecided", probability=None, advice=wrong.advice) for each in results)
+
+
 def _apart(measured: Sequence[MeasuredSweep], at_hz: float) -> Iterator[Finding]:
-    """Yield the sweeps for which drives cannot be compared at the design frequency."""
-    for sweep in measured if len(measured) > 1 else ():
-        f = sweep.result.sweep.frequency_hz
-        if not f[0] <= at_hz <= f[-1]:
+    """Yield the sweeps for which drives cannot be compared at the design frequency, where others have it."""
+    spans = [sweep.result.sweep.frequency_hz[[0, -1]] for sweep in measured]
+    without = [not low <= at_hz <= high for low, high in spans]
+    for sweep, (low, high), lacks in zip(measured, spans, without, strict=True):
+        if lacks and not all(without):
             yield Finding(
                 "outside-sweep",
                 "caution",
-                f"{sweep.file} runs from {format_si(f[0], 'Hz', 6)} to {format_si(f[-1], 'Hz', 6)}, without the design "
+                f"{sweep.file} runs from {format_si(low, 'Hz', 6)} to {format_si(high, 'Hz', 6)}, without the design "
                 f"frequency, {format_si(at_hz, 'Hz', 6)}, so nothing is known of compression",
-                "sweep it again over the design frequency, or leave it out of the device",
+                units_or_span(at_hz, float(np.sqrt(low * high))),
                 sweep.file,
             )
 

@@ -133,7 +133,8 @@ def _sweep_lines(folder: Path, sweep: Sweep) -> Iterator[str]:
         f"{f.size} points, {span}; measured: {', '.join(sweep.measured) or 'nothing'}",
     )
     yield _line(
-        '# input_pads = ["?"]', "fill in: pads from port 1 to the device at this sweep; left out = as at calibration"
+        '# input_pads = ["?"]',
+        "fill in: every pad from port 1 to the device, calibrated ones too; left out = as then",
     )
     yield _line('# output_pads = ["?"]', "fill in: pads from port 2 to the device; left out = as at calibration")
 

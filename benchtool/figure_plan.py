@@ -8,7 +8,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
-from typing import TypeAlias
+from typing import Final, TypeAlias
 
 import numpy as np
 
@@ -20,7 +20,10 @@ from benchtool.response import Passband
 from benchtool.sheet import FIGURE_UNITS
 from benchtool.units import format_si, to_db
 
-__all__ = ["Extractor", "FigureBuilder", "FigurePlan", "SweepNoise", "Traces"]
+__all__ = ["Extractor", "FigureBuilder", "FigurePlan", "SweepNoise", "Traces", "units_or_span"]
+
+_FAR: Final = 50.0
+"""A frequency this many times off is taken for a slip in its unit."""
 
 Traces: TypeAlias = Mapping[str, Trace]
 """The traces of a sweep, or of copies of it, by the parameter: S11, S12, S21, S22."""
@@ -193,7 +196,7 @@ class FigureBuilder:
             "outside-sweep",
             f"{what} is asked for at {asked}, but the sweep runs from {format_si(f[0], 'Hz', 6)} to "
             f"{format_si(f[-1], 'Hz', 6)}",
-            "sweep over that frequency, or change the target",
+            units_or_span(float(np.sqrt(abs(low_hz * high_hz))), float(np.sqrt(f[0] * f[-1]))),
         )
         return True
 
@@ -207,3 +210,12 @@ class FigureBuilder:
     def uses(self, parameter: str, *curves: Curve) -> None:
         """Note that extractors use these curves of one scattering parameter."""
         self.curves.setdefault(parameter, []).extend(curves)
+
+
+def units_or_span(asked_hz: float, swept_hz: float) -> str:
+    """Return what to do about a frequency that is not in a sweep; far away, its unit is the likelier slip."""
+    times = swept_hz / asked_hz if asked_hz > 0.0 and swept_hz > 0.0 else 1.0
+    if 1.0 / _FAR < times < _FAR:
+        return "sweep over that frequency, or change what is asked for"
+    far = f"{max(times, 1.0 / times):.0f} times {'higher' if times > 1.0 else 'lower'}"
+    return f'the sweep lies {far}: check the unit in the file\'s option line, and the one in the sheet ("10.7 MHz")'

@@ -21,6 +21,7 @@ from benchtool.match import BURIED_UNCERTAINTY, stability
 from benchtool.model import Compression, Finding, Kind
 from benchtool.noise import moving_average
 from benchtool.phase import ambiguous_steps
+from benchtool.slips import slips
 from benchtool.units import HALF_POWER_DB, format_si
 
 __all__ = ["CAUSES", "SEVERITIES", "buried_parameters", "device_findings", "in_order"]
@@ -78,6 +79,7 @@ def device_findings(
         found += _receiver_level(sweep, sweeps, drive)
         found += _noise(sweep)
     found += reference.plan.findings
+    found += slips(sweeps, compression)
     found += _drive(kind, sweeps, reference, compression, drive)
     found += _shape(reference)
     found += _against_design(kind, design_hz, reference)

@@ -69,6 +69,7 @@ LAYERS = [
     "planning",
     "advice",
     "small_signal",
+    "slips",
     "findings",
     "verdict",
     "analysis",
