@@ -23,6 +23,7 @@ from benchtool.figures import FigurePlan, plan_figures, target_key
 from benchtool.findings import buried_parameters, device_findings, in_order
 from benchtool.joining import join_reversed, settle_ports
 from benchtool.model import BenchResult, DeviceResult, Figure, Finding, SignalPath, Sweep, SweepResult, TargetResult
+from benchtool.pad_belief import carry_pad_doubt
 from benchtool.pads import PadBank, de_embed, output_reflection, signal_path
 from benchtool.planning import plan_next
 from benchtool.response import span_of
@@ -181,6 +182,9 @@ def analyse_device(
         deciding=keys or [next(iter(reference.plan.extractors))],
     )
     figures, values = dict(trial.figures), dict(trial.values)
+    if drive is not None:
+        added = {**own.input_weights, **own.output_weights}
+        figures, values = carry_pad_doubt(figures, values, drive.pads, added, confidence, seed=number)
     if drive is not None and device.kind == "amplifier":
         figures, values = carry_drive_doubt(figures, values, drive.onset.reference, seed=number)
         figures.update(onset_figures(drive.onset))

@@ -68,6 +68,7 @@ LAYERS = [
     "pad_stock",
     "planning",
     "advice",
+    "pad_belief",
     "small_signal",
     "slips",
     "findings",
