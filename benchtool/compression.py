@@ -16,7 +16,7 @@ import numpy as np
 from benchtool.digits import level_text
 from benchtool.figures import FigurePlan
 from benchtool.fitting import fit_curve
-from benchtool.model import ComplexArray, Compression, CompressionPoint, FloatArray, Sweep, SweepResult
+from benchtool.model import Compression, CompressionPoint, FloatArray, Sweep, SweepResult
 from benchtool.response import PassbandFigures
 from benchtool.units import to_db, wrap_degrees
 
@@ -91,19 +91,17 @@ def choose_reference(sweeps: Sequence[MeasuredSweep]) -> tuple[MeasuredSweep, st
     return ordered[best], "every sweep is noisy, and this one least"
 
 
-def _level_db(value: complex | ComplexArray) -> FloatArray:
-    return np.asarray(np.maximum(to_db(np.asarray(value)), _NO_SIGNAL_DB))
+def _level_db(value: complex) -> float:
+    return float(max(to_db(value), _NO_SIGNAL_DB))
 
 
-def _over_band(sweep: Sweep, plan: FigurePlan, nodes: FloatArray) -> ComplexArray:
-    """Return S21 of a sweep at the nodes, (g,), from its own smooth curve."""
+def _over_band(sweep: Sweep, plan: FigurePlan, nodes: FloatArray) -> FloatArray:
+    """Return the level of S21 of a sweep at the nodes in dB, (g,), from its own smooth curve."""
     curve, low, high = plan.passband.curve, float(nodes[0]), float(nodes[-1])
     if not curve.grid_hz[0] <= low <= high <= curve.grid_hz[-1]:
         curve = fit_curve(sweep.frequency_hz, sweep.s21, low, high, plan.noise.get("S21"))
-    value, _ = curve.on_grid(sweep.s21)
-    turned = np.unwrap(np.angle(value))
-    level = np.interp(nodes, curve.grid_hz, _level_db(value))
-    return np.asarray(10.0 ** (level / 20.0) * np.exp(1j * np.interp(nodes, curve.grid_hz, turned)))
+    level = np.maximum(curve.level_on_grid(sweep.s21), _NO_SIGNAL_DB)
+    return np.asarray(np.interp(nodes, curve.grid_hz, level))
 
 
 def _band(sweeps: Sequence[MeasuredSweep], reference: MeasuredSweep, at_hz: float) -> FloatArray:
@@ -135,9 +133,9 @@ def compare_drives(
     for sweep in sweeps:
         path = sweep.result.path
         here, peak = _at(sweep, at_hz), _at(sweep, peak_hz)
-        change = _level_db(base) - _level_db(_over_band(sweep.result.sweep, sweep.plan, nodes))
+        change = base - _over_band(sweep.result.sweep, sweep.plan, nodes)
         worst = int(np.argmax(change))
-        drop = float(_level_db(base_at) - _level_db(here))
+        drop = _level_db(base_at) - _level_db(here)
         elsewhere = float(change[worst]) > drop + _CLEARLY_WORSE_DB
         deepest = float(change[worst]) if elsewhere else drop
         points.append(
@@ -145,10 +143,10 @@ def compare_drives(
                 sweep.file,
                 path.drive_dbm,
                 path.device_output_dbm,
-                float(_level_db(here)),
+                _level_db(here),
                 drop,
                 float(wrap_degrees(float(np.degrees(np.angle(here * np.conj(base_at)))))),
-                float(_level_db(base_peak) - _level_db(peak)),
+                _level_db(base_peak) - _level_db(peak),
                 deepest,
                 float(nodes[worst]) if elsewhere else at_hz,
                 sweep is not reference and deepest > COMPRESSED_DB,

@@ -17,10 +17,8 @@ from numpy.polynomial import legendre
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import rotation
 
-__all__ = ["ACCEPTED_EXCESS", "Copies", "Curve", "Fit", "Trace"]
+__all__ = ["Copies", "Curve", "Fit", "Trace"]
 
-ACCEPTED_EXCESS: Final = 1.6
-"""Residual variance over noise variance up to which a fit is taken to describe the trace."""
 _ROWS_AT_A_TIME: Final = 128
 """Copies worked on together: arrays larger than a processor's cache cost several times as much to fill."""
 
@@ -178,11 +176,6 @@ class Curve:
     def span_hz(self) -> float:
         """Width in Hz of the samples that the narrowest fit rests on."""
         return min(2.0 * fit.scale_hz for fit in self.fits)
-
-    @property
-    def accepted(self) -> bool:
-        """Whether every fit describes the trace down to its noise."""
-        return all(fit.excess <= ACCEPTED_EXCESS for fit in self.fits)
 
     def on_grid(self, s: Trace) -> tuple[ComplexArray, FloatArray]:
         """Return S and group delay in s on `grid_hz`, both (..., g), of a trace or copies of it."""

@@ -177,7 +177,7 @@ def drive_table(
         sweep_doubts(sweep.result.sweep, entry, sheet, bank, at_hz)
         for sweep, entry in zip(sweeps, entries, strict=True)
     ]
-    buried = _buried(sweeps, nodes)
+    buried = _buried(sweeps)
     guide = sweeps[int(np.argmax(buried < _TOO_BURIED))]
     arrays = {
         "frequency_hz": nodes,
@@ -280,7 +280,7 @@ def _phase_deg(sweep: MeasuredSweep, at_hz: float) -> float:
     return float(np.polyval(np.polyfit(trace.frequency_hz[near] - at_hz, turned, min(2, turned.size - 1)), 0.0))
 
 
-def _buried(sweeps: Sequence[MeasuredSweep], nodes: FloatArray) -> FloatArray:
+def _buried(sweeps: Sequence[MeasuredSweep]) -> FloatArray:
     """Return the share of each sweep, (k,), in which what the quietest sweep shows lies under that sweep's noise."""
     quietest = min(sweeps, key=lambda sweep: _noise_model(sweep).additive)
     level = _smooth_level(quietest.result.sweep)

@@ -277,7 +277,7 @@ def _shape(reference: MeasuredSweep) -> Iterator[Finding]:
         )
     sweep = reference.result.sweep
     level = float(np.max(np.abs(sweep.s21)))
-    steps = ambiguous_steps(sweep.frequency_hz, sweep.s21, 0.1 * level)
+    steps = ambiguous_steps(sweep.s21, 0.1 * level)
     if steps:
         yield Finding(
             "phase-ambiguous",

@@ -21,7 +21,7 @@ from typing import Final
 import numpy as np
 from numpy.polynomial import legendre
 
-from benchtool.curves import ACCEPTED_EXCESS, Curve, Fit
+from benchtool.curves import Curve, Fit
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import NOISE_FREE, NoiseModel, line_delay, moving_average, rotation, trend_delay
 
@@ -29,6 +29,8 @@ __all__ = ["fit_curve"]
 
 MAX_DEGREE: Final = 10
 _MIN_POINTS: Final = 5
+_ACCEPTED_EXCESS: Final = 1.6
+"""Residual variance over noise variance up to which a fit is taken to describe the trace."""
 _WORTH_SPLITTING: Final = 14
 _ROUNDING: Final = 1e-11
 _GOOD_ENOUGH: Final = 2e-5
@@ -150,7 +152,7 @@ def _fit(frequency_hz: FloatArray, s: ComplexArray, low_hz: float, high_hz: floa
     excess = float(np.sum(relative)) / freedom
     beyond = max(float(np.sum(error)) / freedom - float(np.mean(noise.sigma(smooth) ** 2)), 0.0)
     # Residuals scatter round the noise by their own uncertainty; only what stands clear of that is misfit.
-    misfit = float(np.sqrt(beyond)) if excess > ACCEPTED_EXCESS else 0.0
+    misfit = float(np.sqrt(beyond)) if excess > _ACCEPTED_EXCESS else 0.0
     return Fit(start, stop, low_hz, high_hz, centre, scale, form.inverse, form.delay_s, turn, solve, excess, misfit)
 
 
@@ -159,7 +161,7 @@ def _pieces(frequency_hz: FloatArray, s: ComplexArray, low_hz: float, high_hz: f
     margin = 0.1 * (high_hz - low_hz)
     fit = _fit(frequency_hz, s, low_hz - margin, high_hz + margin, context)
     enough = fit.stop - fit.start >= _WORTH_SPLITTING
-    if fit.excess > ACCEPTED_EXCESS and enough:
+    if fit.excess > _ACCEPTED_EXCESS and enough:
         middle = 0.5 * (low_hz + high_hz)
         return [
             *_pieces(frequency_hz, s, low_hz, middle, context),

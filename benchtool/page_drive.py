@@ -58,7 +58,7 @@ def draw_drive(paper: Paper, device: DeviceResult, marks: Sequence[DriveMark], p
     axes = upper.axes(paper)
     across = _across(marks, onset)
     reference = _reference_gain(onset, device.compression, marks)
-    frame(axes, across, _gain_limits(marks, onset, across, reference), 5, tall)
+    frame(axes, across, _gain_limits(marks, onset, reference), 5, tall)
     _shade_safe(axes, onset)
     if onset is None or onset.basis != "none":
         axes.axhline(reference - 1.0, color=VERMILLION, linewidth=0.8, linestyle=_DOWN, zorder=1.6)
@@ -66,7 +66,7 @@ def draw_drive(paper: Paper, device: DeviceResult, marks: Sequence[DriveMark], p
         axes.axhline(reference, color=LIGHT, linewidth=0.6)
         axes.plot([m.drive_dbm for m in marks], [known(m.gain_db) for m in marks], color=INK, linewidth=0.9)
     elif onset.basis != "none":
-        _draw_curve(axes, onset, across)
+        _draw_curve(axes, onset)
     drawn = apart(marks, _APART_PT * (across[1] - across[0]) / area.width)
     _draw_marks(axes, drawn)
     _mark_p1db(axes, device, onset, reference, across)
@@ -99,9 +99,7 @@ def _across(marks: Sequence[DriveMark], onset: Onset | None) -> tuple[float, flo
     return widened(shown, 0.1, 10.0)
 
 
-def _gain_limits(
-    marks: Sequence[DriveMark], onset: Onset | None, across: tuple[float, float], reference: float
-) -> tuple[float, float]:
+def _gain_limits(marks: Sequence[DriveMark], onset: Onset | None, reference: float) -> tuple[float, float]:
     values = [reference, reference - 1.5]
     for mark in marks:
         gain = known(mark.gain_db)
@@ -195,7 +193,7 @@ def _shade_safe(axes: Axes, onset: Onset | None) -> None:
         axes.plot([safe, safe], axes.get_ylim(), color=BLUE, linewidth=0.9, zorder=0.4)
 
 
-def _draw_curve(axes: Axes, onset: Onset, across: tuple[float, float]) -> None:
+def _draw_curve(axes: Axes, onset: Onset) -> None:
     """Draw the gain that all sweeps together allow: the middle as a line, low to high as a band."""
     finite = np.all(np.isfinite(onset.curve_gain_db), axis=0)
     drive, (low, middle, high) = onset.curve_drive_dbm[finite], onset.curve_gain_db[:, finite]

@@ -25,7 +25,7 @@ __all__ = [
 ]
 
 AMBIGUOUS_STEP_DEG: Final = 150.0
-"""Phase step from sample to sample, less the mean delay, above which the turn could be one way or the other."""
+"""Phase step from sample to sample above which the turn could be one way or the other."""
 
 
 def unwrapped_phase(frequency_hz: FloatArray, s: ComplexArray) -> FloatArray:
@@ -35,7 +35,7 @@ def unwrapped_phase(frequency_hz: FloatArray, s: ComplexArray) -> FloatArray:
     return np.asarray(np.degrees(turned) - 360.0 * delay * frequency_hz)
 
 
-def ambiguous_steps(frequency_hz: FloatArray, s: ComplexArray, magnitude_floor: float = 0.0) -> int:
+def ambiguous_steps(s: ComplexArray, magnitude_floor: float = 0.0) -> int:
     """Return how many sample-to-sample phase steps are too large to unwrap safely; s is (n,).
 
     Steps between samples below `magnitude_floor` are noise and do not count.

@@ -104,7 +104,8 @@ def run_blocks(
     Parameters
     ----------
     block : takes a number of trials, returns that many values of each quantity
-    trials : how many in all; None stops when the intervals of the `deciding` quantities have settled, or at `most`
+    trials : how many in all; None stops when the intervals of the `deciding` quantities have settled,
+        or at `most`, which a normal quantity reaches first
     size : trials of one block, which bounds the memory
     """
     wanted = most if trials is None else trials
