@@ -364,7 +364,7 @@ def _path(sheet: BenchSheet, entry: SweepEntry, bank: PadBank, plan: FigurePlan,
 def _withhold_buried(reference: MeasuredSweep, doubts: SweepDoubts) -> dict[str, Figure]:
     """Return the figures of the reference sweep; a return loss buried under pads is withheld (a finding says why)."""
     figures = reference.plan.figures(reference.result.sweep.s)
-    for name in buried_parameters(reference, doubts):
+    for name in buried_parameters(reference.result, doubts):
         key = "input_return_loss" if name == "S11" else "output_return_loss"
         if key in figures:
             figures[key] = replace(figures[key], value=None, bound=None)

@@ -19,6 +19,7 @@ __all__ = [
     "interval_text",
     "level_text",
     "limits_text",
+    "probability_text",
     "quantity",
     "stated",
     "value_text",
@@ -160,3 +161,10 @@ def decibels(value_db: float) -> str:
     """Return decibels with no more decimals than they need, two at most: '20 dB', '9.63 dB'."""
     text = f"{value_db:.2f}".rstrip("0").rstrip(".").replace("-", "−")
     return f"{'0' if text in ('−0', '') else text} dB"
+
+
+def probability_text(share: float) -> str:
+    """Return a probability in percent to three digits, '77.8 %'; nothing that was drawn is certain."""
+    if share > 0.999:
+        return "> 99.9 %"
+    return "< 0.1 %" if share < 0.001 else f"{100 * share:.3g} %"

@@ -14,7 +14,9 @@ import numpy as np
 
 from benchtool import __version__
 from benchtool.analysis import correct_sweep, read_all
+from benchtool.doubts import sweep_doubts
 from benchtool.drive_results import Estimate
+from benchtool.findings import buried_parameters
 from benchtool.model import BenchResult, DeviceResult, Figure, SweepResult
 from benchtool.pads import PadBank
 from benchtool.sheet import BenchSheet
@@ -278,6 +280,11 @@ def corrected_files(sheet: BenchSheet, *, strict: bool = False, version: Literal
             f"taken out: {result.input_correction_db:g} dB on the input side, "
             f"{result.output_correction_db:g} dB on the output side",
             f"measured: {', '.join(result.sweep.measured)}; made by benchtool {__version__}",
+        ]
+        doubts = sweep_doubts(result.sweep, entry, sheet, bank, device.design_hz or middle)
+        comments += [
+            f"{name} was read through added pads twice and is of no use: +-{doubt:.2g}, where 1 is full reflection"
+            for name, doubt in buried_parameters(result, doubts).items()
         ]
         files.append((f"{stem}.s2p", format_sweep(result.sweep, comments=comments, version=version)))
     return files

@@ -18,7 +18,7 @@ from benchtool.digits import decibels, level_text, stated
 from benchtool.doubts import SweepDoubts
 from benchtool.drive_results import DriveStudy
 from benchtool.match import BURIED_UNCERTAINTY, stability
-from benchtool.model import Compression, Finding, Kind
+from benchtool.model import Compression, Finding, Kind, SweepResult
 from benchtool.noise import moving_average
 from benchtool.phase import ambiguous_steps
 from benchtool.slips import slips
@@ -360,13 +360,12 @@ def _may_oscillate(kind: Kind, reference: MeasuredSweep) -> Iterator[Finding]:
         )
 
 
-def buried_parameters(sweep: MeasuredSweep, doubts: SweepDoubts) -> dict[str, float]:
+def buried_parameters(result: SweepResult, doubts: SweepDoubts) -> dict[str, float]:
     """Return which reflections of a sweep are buried under added pads: parameter and doubt of its magnitude.
 
     The rule is that of :func:`benchtool.match.buried_uncertainty`, with the pads' own reflection added to the
     directivity, since a matched pad that is not quite matched is read as part of the device.
     """
-    result = sweep.result
     before_s22 = result.input_correction_db if doubts.turned else result.output_correction_db
     sides = (
         ("S11", result.input_correction_db, doubts.reflection_doubt("S11")),
@@ -380,7 +379,7 @@ def buried_parameters(sweep: MeasuredSweep, doubts: SweepDoubts) -> dict[str, fl
 
 
 def _buried(sweep: MeasuredSweep, doubts: SweepDoubts, wanted: Collection[str]) -> Iterator[Finding]:
-    for name, doubt in buried_parameters(sweep, doubts).items():
+    for name, doubt in buried_parameters(sweep.result, doubts).items():
         side = "input" if name == "S11" else "output"
         yield Finding(
             "return-loss-buried",

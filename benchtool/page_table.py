@@ -10,7 +10,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Final
 
-from benchtool.digits import budget_text, figure_label, interval_text, limits_text, value_text
+from benchtool.digits import budget_text, figure_label, interval_text, limits_text, probability_text, value_text
 from benchtool.model import DeviceResult, Figure, TargetResult, Verdict
 from benchtool.page_paper import FAINT, GREEN, HEADING_PT, INK, LIGHT, RULE, WIDTH_PT, ZONE, Block, Paper
 from benchtool.page_text import Lines, fit, width_pt
@@ -176,18 +176,12 @@ def _draw_row(paper: Paper, row: _Row, y: float) -> None:
     paper.text(_VERDICT_PT + 4.0, y + 7.6, VERDICT_MARK[verdict], 7.5, color=VERDICT_COLOUR[verdict], align="center")
     paper.text(_VERDICT_PT + 10.5, y + 7.6, verdict if verdict != "none" else "no target", 7.0, bold=True)
     if row.target.probability is not None:
-        paper.text(WIDTH_PT, y + 7.6, _probability(row.target.probability), 6.5, color=LIGHT, align="right")
+        paper.text(WIDTH_PT, y + 7.6, probability_text(row.target.probability), 6.5, color=LIGHT, align="right")
     if row.advice:
         paper.lines(
             12.0, bottom - row.advice.height_pt(1.15) - row.air / 2.0 + 0.8, row.advice, color=LIGHT, leading=1.15
         )
     paper.stroke([0, WIDTH_PT], [bottom, bottom], RULE, 0.25)
-
-
-def _probability(share: float) -> str:
-    if share > 0.999:
-        return "> 99.9 %"
-    return "< 0.1 %" if share < 0.001 else f"{100 * share:.3g} %"
 
 
 def other_figures(device: DeviceResult, most_rows: int) -> Block:

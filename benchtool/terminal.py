@@ -10,7 +10,15 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
-from benchtool.digits import figure_label, interval_text, level_text, limits_text, quantity, value_text
+from benchtool.digits import (
+    figure_label,
+    interval_text,
+    level_text,
+    limits_text,
+    probability_text,
+    quantity,
+    value_text,
+)
 from benchtool.model import BenchResult, DeviceResult, Sweep
 from benchtool.units import format_si, to_db
 
@@ -38,7 +46,7 @@ def _device_table(device: DeviceResult) -> Table:
         table.add_column(column, no_wrap=True, justify="right" if column in ("value", "p(met)") else "left")
     for target in device.targets:
         figure = device.figures[target.figure]
-        chance = "" if target.probability is None else f"{target.probability:.1%}"
+        chance = "" if target.probability is None else probability_text(target.probability)
         verdict = Text(target.verdict, style=_STYLES[target.verdict])
         table.add_row(
             figure_label(target.figure), value_text(figure), interval_text(figure), limits_text(target), verdict, chance
@@ -73,7 +81,7 @@ def print_next(result: BenchResult) -> None:
         planned = device.drive.next_sweeps if device.drive is not None else ()
         console.print(_literal(device.name), soft_wrap=True)
         if not planned:
-            console.print("  nothing more to settle about drive")
+            console.print(f"  {_nothing_planned(device)}", soft_wrap=True)
         for number, sweep in enumerate(planned, start=1):
             lines = [f"  {number}. {_side('input', sweep.input_pads)}; {_side('output', sweep.output_pads)}"]
             lines.append(
@@ -91,12 +99,20 @@ def print_next(result: BenchResult) -> None:
     )
 
 
+def _nothing_planned(device: DeviceResult) -> str:
+    """Return why no sweep is planned: there is nothing to settle, or nothing to settle it with."""
+    unproven = device.drive is not None and not device.drive.onset.reference.proven
+    if device.kind == "amplifier" and (device.drive is None or unproven):
+        return "nothing proves the reference small-signal, and no pad of the sheet would: add one to [pads]"
+    return "nothing more to settle about drive"
+
+
 def _side(side: str, pads: Sequence[str]) -> str:
     return f"{side} pads, from the analyzer: {', '.join(pads) if pads else 'none'}"
 
 
 def _headroom(headroom_db: float | None) -> str:
-    return "" if headroom_db is None else f" ({headroom_db:.1f} dB below the limit)"
+    return "" if headroom_db is None else f" ({headroom_db:.1f} dB below the limit, every doubt counted)"
 
 
 def print_sweep(sweep: Sweep) -> None:

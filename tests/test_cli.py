@@ -260,3 +260,26 @@ def test_real_transistor_goes_through_report(tmp_path):
     assert device["figures"]["gain"]["bound"] == "at least"
     assert device["figures"]["bandwidth"]["value"] is None
     assert {"edge-outside-sweep", "drive-unproven"} <= {finding["code"] for finding in device["findings"]}
+
+
+def test_next_says_when_it_has_nothing_to_propose_with():
+    done = run("next", SAMPLE / "first_low.s2p", "--design", "21.4 MHz", "--source", "-8")
+    assert done.returncode == 0, done.stderr
+    assert "nothing proves the reference small-signal, and no pad of the sheet would: add one to [pads]" in done.stdout
+
+
+def test_corrected_file_says_which_reflection_is_of_no_use(tmp_path):
+    assert run("correct", SAMPLE, "--out", tmp_path).returncode == 0
+    buried = (tmp_path / "first_low_at_device.s2p").read_text(encoding="utf-8")
+    assert "! S11 was read through added pads twice and is of no use: +-4.7, where 1 is full reflection\n" in buried
+    assert "of no use" not in (tmp_path / "first_high_at_device.s2p").read_text(encoding="utf-8")
+
+
+def test_quick_look_leaves_the_results_of_a_bench_alone(tmp_path):
+    sweep = tmp_path / "one.s2p"
+    sweep.write_bytes((SAMPLE / "first_low.s2p").read_bytes())
+    (tmp_path / "report").mkdir()
+    (tmp_path / "report" / "results.json").write_text("of a bench", encoding="utf-8")
+    assert run("report", sweep, "--no-page", "--trials", "20").returncode in (0, 1)
+    assert (tmp_path / "report" / "results.json").read_text(encoding="utf-8") == "of a bench"
+    assert (tmp_path / "quick-look" / "results.json").is_file()
