@@ -59,6 +59,9 @@ def carry_drive_doubt(
 
 def _bounded(figure: Figure) -> Figure:
     bound = BOUND_WHEN_COMPRESSED.get(figure.id)
+    if figure.id == "centre_frequency":
+        # Both edges are bounds, and nothing is known of how they would move.
+        return replace(figure, value=None, low=None, high=None, bound=None, standard_uncertainty=None)
     if figure.value is None or bound is None:
         return figure
     if figure.bound is not None and figure.bound != bound:

@@ -68,3 +68,10 @@ def test_doubts_from_both_sides_leave_nothing():
     kept, _ = carry_drive_doubt(given, values(), proof(False))
     assert kept["lower_edge"].value is None
     assert kept["lower_edge"].bound is None
+
+
+def test_between_two_bounds_no_centre_is_known():
+    centre = {"centre_frequency": Figure("centre_frequency", 21.5e6, "Hz", 21.4e6, 21.6e6, 0.95, None, 5e4)}
+    kept, _ = carry_drive_doubt(centre, {}, proof(False))
+    assert (kept["centre_frequency"].value, kept["centre_frequency"].low) == (None, None)
+    assert carry_drive_doubt(centre, {}, proof(True, 0.0, 0.0, 0.0))[0] == centre
