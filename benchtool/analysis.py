@@ -205,7 +205,7 @@ def analyse_device(
         )
         for key, target in zip(keys, device.targets, strict=True)
     )
-    results = _void(results, findings)
+    results = _void(results, findings, drive)
     used = {pad for entry in device.sweeps for pad in pads_that_count(entry, sheet)}
     return DeviceResult(
         device.name,
@@ -284,12 +284,25 @@ def _study_drive(
     return drive, tuple(findings)
 
 
-def _void(results: tuple[TargetResult, ...], findings: Sequence[Finding]) -> tuple[TargetResult, ...]:
-    """Return the targets undecided where what was measured is not what the sheet says."""
+_OF_LEVEL: Final = frozenset({"gain", "peak_gain", "insertion_loss", "input_p1db", "output_p1db"})
+"""Figures that a pad or a sweep that is off makes wrong."""
+
+
+def _void(
+    results: tuple[TargetResult, ...], findings: Sequence[Finding], drive: DriveStudy | None
+) -> tuple[TargetResult, ...]:
+    """Return targets undecided where what was measured is not what the sheet says.
+
+    Where no explanation fits the sweeps some pad or sweep is off, nobody knows which: no level can then be judged.
+    """
     wrong = next((finding for finding in findings if finding.code in VOID), None)
-    if wrong is None:
-        return results
-    return tuple(replace(each, verdict="undecided", probability=None, advice=wrong.advice) for each in results)
+    nothing_fits = drive is not None and drive.cause == "cause-unclear" and drive.confidence == 0.0
+    unclear = next((finding for finding in findings if finding.code == "cause-unclear" and nothing_fits), None)
+    judged = []
+    for each in results:
+        why = wrong or (unclear if each.id in _OF_LEVEL else None)
+        judged.append(each if why is None else replace(each, verdict="undecided", probability=None, advice=why.advice))
+    return tuple(judged)
 
 
 def _apart(measured: Sequence[MeasuredSweep], at_hz: float) -> Iterator[Finding]:

@@ -14,13 +14,13 @@ F0 = 21.4e6
 GAIN_DB = 26.0206
 
 
-def write(folder, sweeps, *, quality=30.0, p1db_dbm=None):
+def write(folder, sweeps, *, quality=30.0, p1db_dbm=None, targets=""):
     """Write a bench of sweeps, each a name, frequencies, dB of added input pad and dB that it reads too much."""
     rng = np.random.default_rng(11)
     text = "version = 1\n[analyzer]\nsource_dbm = 0\nport2_compression_dbm = 60\nreading_db = 0.02\n"
     pads = sorted({pad for _, _, pad, _ in sweeps if pad})
     text += "".join(f"[pads.p{pad}]\nloss_db = {pad}\ntolerance_db = 0.05\nreturn_loss_db = 50\n" for pad in pads)
-    text += '[[device]]\nname = "stage"\nkind = "amplifier"\ndesign_frequency = "21.4 MHz"\n'
+    text += '[[device]]\nname = "stage"\nkind = "amplifier"\ndesign_frequency = "21.4 MHz"\n' + targets
     for name, f, pad, off in sweeps:
         tank = 10 ** (GAIN_DB / 20) / (1.0 + 1j * quality * (f / F0 - F0 / f))
         if p1db_dbm is not None:
@@ -90,3 +90,18 @@ def test_of_two_that_disagree_the_others_tell_the_odd_one(tmp_path, off):
     assert np.max(np.abs(shown.compression_db[:2])) < 0.3  # −40 and −30 dBm: nothing compressed there
     finding = next(f for f in device.findings if f.code == "reference-not-repeating")
     assert "probability" not in finding.message
+
+
+def test_where_nothing_fits_no_level_is_judged(tmp_path):
+    # A pad 2 dB off and a device that limits: no single cause explains both, and the gain read is 2 dB wrong.
+    ladder = [("one.s2p", 40, -2.0), ("mid.s2p", 30, 0.0), ("high.s2p", 20, 0.0), ("full.s2p", 10, 0.0)]
+    targets = "[device.targets]\ngain = { min = 25 }\nbandwidth = { max = '1 MHz' }\noutput_p1db = { min = 12 }\n"
+    sweeps = [(name, NARROW, pad, read) for name, pad, read in ladder]
+    device = write(tmp_path, sweeps, p1db_dbm=-18.0, targets=targets)
+    assert (device.drive.cause, device.drive.confidence) == ("cause-unclear", 0.0)
+    found = {target.id: target for target in device.targets}
+    assert {name: found[name].verdict for name in ("gain", "output_p1db")} == dict.fromkeys(
+        ("gain", "output_p1db"), "undecided"
+    )
+    assert found["bandwidth"].verdict == "met"
+    assert found["gain"].advice == next(f.advice for f in device.findings if f.code == "cause-unclear")
