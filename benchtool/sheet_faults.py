@@ -147,7 +147,10 @@ class FaultLog:
                 self.add(key, "missing", _MISSING.get(last, f"add {last}"))
             case "extra_forbidden":
                 known = list(model.model_fields)
-                self.add(key, "unknown key", suggestion(last, known, f"the keys here are {', '.join(known)}"))
+                remedy = suggestion(last, known, f"the keys here are {', '.join(known)}")
+                if "targets" in known and isinstance(details["input"], dict):
+                    remedy = "a target stands below the line [device.targets]"
+                self.add(key, "unknown key", remedy)
             case _:  # every field has a reader of its own; a new field without one still gets a plain line
                 self.add(key, f"{shown(details['input'])} cannot stand here", "compare it with the README's sheet")
 

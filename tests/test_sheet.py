@@ -152,6 +152,10 @@ ONE_FAULT = {
         'missing; rejection needs it: at = "10.7 MHz"',
     ),
     "target_parameter_unneeded": ("device[1].targets.gain.at", "gain takes no 'at'; delete it"),
+    "target_beside_targets": (
+        "device[1].peak_frequency",
+        "unknown key; a target stands below the line [device.targets]",
+    ),
     "target_two_forms": (
         "device[1].targets.gain",
         "nominal beside min; write either min and max, or nominal and tolerance",
