@@ -127,6 +127,11 @@ class SweepCopier:
             # Error vectors; the near joint, passed twice; between port and pad, once; the far port, through the device.
             self._models[name] = TraceModel(own, fits, (), [np.ones_like(own), own**2, own, *loop], noises)
 
+    @property
+    def samples(self) -> int:
+        """How many samples each copy takes that are drawn one by one; most traces are copied as coefficients."""
+        return sum(model.used.size for model in self._models.values() if model.by_samples)
+
     def copies(self, rng: np.random.Generator, segments: Sequence[Segment]) -> dict[str, TraceCopies]:
         """Return copies of every trace that figures are taken from, segment after segment."""
         draws = _Draws(rng, segments, self._bank)

@@ -31,7 +31,7 @@ _BIAS_TRIALS: Final = 1000
 """Trials with noise alone: their median is the bias that is taken out, and must not wander."""
 _MAY_BE_LOST: Final = 0.01
 _BLOCK_BYTES: Final = 48e6
-"""Memory that one block of perturbed copies may take."""
+"""Memory that the samples of one block of copies may take."""
 _PLAUSIBLE_BIAS: Final = 0.6
 """Largest bias that noise is taken to give a figure, as a share of its standard uncertainty."""
 _SMALLEST_REFLECTION: Final = 1e-4
@@ -50,8 +50,9 @@ class FigureTrials:
     findings: tuple[Finding, ...]
 
 
-def _block_size(points: int) -> int:
-    return int(max(16, min(BLOCK, _BLOCK_BYTES / (4 * 16 * points))))
+def _block_size(samples: int) -> int:
+    """Return how many trials to draw at a time, when each takes so many samples drawn one by one."""
+    return int(max(16, min(BLOCK, _BLOCK_BYTES / (4 * 16 * max(samples, 1)))))
 
 
 def figure_trials(
@@ -83,7 +84,7 @@ def figure_trials(
         found = plan.extract(copier.copies(rng, segments))
         return {key: found[key] for key in known if key in found}
 
-    size = _block_size(sweep.frequency_hz.size)
+    size = _block_size(copier.samples)
     raw = run_blocks(
         lambda count: block([(None, count)]),
         confidence,
