@@ -52,6 +52,7 @@ NAMED: Final = 0.9
 _CLEAN: Final = 0.5
 """Probability of a clean bench from which nothing is alarmed."""
 STILL_POSSIBLE: Final = 0.02
+"""Probability below which a cause is no longer allowed for."""
 _MISFIT: Final = 1e-6
 """Chance of a misfit as large as the best rival's below which no rival is believed."""
 _BURIED_SHARE: Final = 0.2
@@ -62,9 +63,10 @@ UNSPOILED_DB: Final = 0.2
 """A sweep that may have lost less than this in the receiver can still bear on the device."""
 _CLEARLY_ODD: Final = float(np.log(20.0))
 """Logarithm of how much better the rest must be explained without one sweep than without another."""
-_UNCLEAR_DB: Final = 2.0
 _UNSTEADY_DB: Final = 1.0
-"""Standard uncertainty of each sweep of a device that does not repeat."""
+_UNCLEAR_DB: Final = 2.0
+"""Standard uncertainty of each sweep of a device that does not repeat, and of one whose sweeps nothing explains: that
+of a pad taken for another (common practice, no source)."""
 _CODE: Final[Mapping[Cause, CauseCode]] = {
     "clean": "clean",
     "output-limited": "output-limited",

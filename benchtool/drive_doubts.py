@@ -50,7 +50,6 @@ class PadDoubt:
 
     name: str
     loss_db: float
-    half_width_db: float
     u_db: float
     reads: FloatArray
     drives: FloatArray
@@ -111,7 +110,6 @@ def pad_doubts(
             PadDoubt(
                 name,
                 bank.loss_db(name, at_hz),
-                width if is_limit else 2.0 * width,
                 rectangular_u(width) if is_limit else width,
                 readonly(reads.get(name, [0.0] * len(doubts)), np.float64),
                 readonly(drives, np.float64),

@@ -8,11 +8,11 @@ from __future__ import annotations
 
 from collections.abc import Collection, Iterable, Iterator, Sequence
 from dataclasses import replace
-from typing import Final
+from typing import Final, get_args
 
 import numpy as np
 
-from benchtool.causes import NAMED, STILL_POSSIBLE
+from benchtool.causes import NAMED, STILL_POSSIBLE, CauseCode
 from benchtool.compression import MeasuredSweep
 from benchtool.digits import decibels, level_text, stated
 from benchtool.doubts import SweepDoubts
@@ -27,16 +27,7 @@ from benchtool.units import HALF_POWER_DB, format_si
 __all__ = ["CAUSES", "SEVERITIES", "buried_parameters", "device_findings", "in_order"]
 
 SEVERITIES: Final = ("fault", "caution", "note")
-CAUSES: Final = (
-    "output-limited",
-    "input-limited",
-    "receiver-overload",
-    "pad-value-suspect",
-    "input-limited-or-pad",
-    "reference-not-repeating",
-    "noise-limited",
-    "cause-unclear",
-)
+CAUSES: Final = tuple(code for code in get_args(CauseCode) if code != "clean")
 """Codes that tell why gain changed between sweeps."""
 _EXPLAINED: Final = ("compressed-sweep", "receiver-near-limit")
 """Codes of what is seen, which a cause explains."""

@@ -33,7 +33,7 @@ PRIOR: Final[Mapping[Cause, float]] = {
     "pad-value": 0.1,
     "not-repeating": 0.1,
 }
-"""How likely each cause is before anything was measured."""
+"""How likely each cause is before anything was measured (a judgement, no source)."""
 _REACH_BELOW_DB: Final = 25.0
 _REACH_ABOVE_DB: Final = 6.0
 """How far below and above the strongest level the 1 dB point may lie."""

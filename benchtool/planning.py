@@ -13,6 +13,7 @@ from typing import Final
 
 import numpy as np
 
+from benchtool.causes import STILL_POSSIBLE
 from benchtool.compression_study import CompressionStudy
 from benchtool.digits import level_text, quantity
 from benchtool.doubts import pad_doubt_db
@@ -31,7 +32,6 @@ __all__ = ["NextSweep", "plan_next"]
 _MOST: Final = 3
 _NEW_DRIVE_DB: Final = 1.5
 """A drive that is no further from one already swept shows nothing new."""
-_STILL_POSSIBLE: Final = 0.02
 _SURE: Final = 0.95
 """Probability of a cause from which no sweep is spent on telling it from its rivals."""
 _WORTH: Final = 0.02
@@ -250,7 +250,7 @@ def _separate(bench: _Bench) -> NextSweep | None:
         return None
     if verdict.confidence >= _SURE:
         return None
-    likely = [rival for rival in verdict.rivals if rival.probability >= _STILL_POSSIBLE]
+    likely = [rival for rival in verdict.rivals if rival.probability >= STILL_POSSIBLE]
     if verdict.code == "pad-value-suspect":
         likely = likely[:1] + [rival for rival in verdict.rivals if rival.cause == "clean"]
     lines = [line for line in bench.candidates if line.drive <= float(np.max(bench.table.drive_dbm)) + 0.5]

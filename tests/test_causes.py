@@ -36,7 +36,7 @@ def load(name):
 
 
 def pad(name, loss, reads, drives, width=0.3):
-    return PadDoubt(name, loss, width, width / np.sqrt(3.0), np.array(reads, float), np.array(drives, float))
+    return PadDoubt(name, loss, width / np.sqrt(3.0), np.array(reads, float), np.array(drives, float))
 
 
 def table(drives, drop=None, *, offsets=None, output_pads=None, pads=(), u=0.05, noise=0.02, source=0.5, limit=10.0):
