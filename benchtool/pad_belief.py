@@ -15,7 +15,7 @@ import numpy as np
 
 from benchtool.drive_results import PadEstimate
 from benchtool.model import Figure, FloatArray
-from benchtool.propagation import coverage_interval
+from benchtool.propagation import interval_about
 
 __all__ = ["carry_pad_doubt"]
 
@@ -64,8 +64,8 @@ def carry_pad_doubt(
 
 def _with_doubt(figure: Figure, values: FloatArray, source: str) -> Figure:
     """Return a figure with the interval of its values, what they scatter more being put to the pad in its budget."""
-    assert figure.confidence is not None and figure.standard_uncertainty
-    low, high = coverage_interval(values, figure.confidence)
+    assert figure.value is not None and figure.confidence is not None and figure.standard_uncertainty
+    low, high = interval_about(figure.value, values, figure.confidence)
     finite = values[np.isfinite(values)]
     spread = float(np.std(finite, ddof=1))
     kept = min(1.0, (figure.standard_uncertainty / spread) ** 2) if spread > 0.0 else 1.0

@@ -18,6 +18,7 @@ __all__ = [
     "MOST_TRIALS",
     "Interval",
     "coverage_interval",
+    "interval_about",
     "mismatch_limits_db",
     "mismatch_u_db",
     "propagate",
@@ -60,6 +61,16 @@ def coverage_interval(values: FloatArray, confidence: float, *, shortest: bool =
     else:
         ordered = np.partition(values, (start, min(start + held, count - 1)))
     return float(ordered[start]), float(ordered[min(start + held, count - 1)])
+
+
+def interval_about(value: float, values: FloatArray, confidence: float) -> tuple[float, float]:
+    """Return the coverage interval of possible values of what was read as `value`, which it always holds.
+
+    Near a limit of what is possible, or where a cause is all but sure, the doubts may all point one way; what was read
+    is never ruled out by them.
+    """
+    low, high = coverage_interval(values, confidence)
+    return min(low, value), max(high, value)
 
 
 def propagate(

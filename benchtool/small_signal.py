@@ -16,7 +16,7 @@ import numpy as np
 
 from benchtool.drive_results import ReferenceProof
 from benchtool.model import Bound, Figure, FloatArray
-from benchtool.propagation import coverage_interval
+from benchtool.propagation import interval_about
 
 __all__ = ["BOUND_WHEN_COMPRESSED", "carry_drive_doubt"]
 
@@ -80,7 +80,7 @@ def _widened(
         if figure is None or figure.value is None or key not in values or figure.confidence is None:
             continue
         moved[key] = values[key] + rng.uniform(max(low, 0.0), max(high, 0.0), values[key].shape)
-        ends = coverage_interval(moved[key], figure.confidence)
+        ends = interval_about(figure.value, moved[key], figure.confidence)
         spread = float(np.std(moved[key], ddof=1))
         wider[key] = replace(figure, low=ends[0], high=ends[1], standard_uncertainty=spread)
     return wider, moved

@@ -21,7 +21,7 @@ from benchtool.doubts import SweepDoubts
 from benchtool.draws import Segment, SweepCopier
 from benchtool.model import Bound, Figure, Finding, FloatArray
 from benchtool.pads import PadBank
-from benchtool.propagation import BLOCK, coverage_interval, run_blocks
+from benchtool.propagation import BLOCK, interval_about, run_blocks
 from benchtool.units import from_db, to_db
 
 __all__ = ["FigureTrials", "figure_trials"]
@@ -166,10 +166,8 @@ def _noise_bias(departure: FloatArray) -> float:
 
 
 def _with_interval(figure: Figure, values: FloatArray, confidence: float, budget: Mapping[str, float]) -> Figure:
-    low, high = coverage_interval(values, confidence)
-    if figure.value is not None and figure.id != "phase":
-        # Near a limit of what is possible the doubts may all point one way; what was read is never ruled out.
-        low, high = min(low, figure.value), max(high, figure.value)
+    assert figure.value is not None
+    low, high = interval_about(figure.value, values, confidence)
     finite = values[np.isfinite(values)]
     spread = float(np.std(finite, ddof=1)) if finite.size > 1 else 0.0
     bound: Bound | None = figure.bound

@@ -219,6 +219,19 @@ def test_noise_estimate_agrees_with_the_noise_put_in(snr_db, points):
     assert_allclose(np.mean(found), sigma, rtol=0.1, atol=0)
 
 
+@pytest.mark.parametrize("level", [1e-4, 1e-2, 1e3])
+def test_noise_is_told_apart_alike_at_every_level(level):
+    # A trace a thousand times as small has a floor a thousand times as small, and the same share of trace noise.
+    rng = np.random.default_rng(6)
+    f = np.linspace(9.9e6, 11.5e6, 801)
+    clean = single_tuned(f, 10.7e6, 50)
+    hiss = rng.standard_normal((2, f.size)) + 1j * rng.standard_normal((2, f.size))
+    s21 = clean * (1.0 + 5e-3 * hiss[0]) + 1e-4 * hiss[1]
+    one, scaled = estimate_noise(f, s21), estimate_noise(f, level * s21)
+    assert one.proportional > 3e-3
+    assert_allclose([scaled.additive / level, scaled.proportional], [one.additive, one.proportional], rtol=1e-6, atol=0)
+
+
 @pytest.mark.skipif(not REAL.is_dir(), reason="the measured resonator is not at hand")
 @pytest.mark.parametrize("window", [(1.5e9, 2.5e9), (3.5e9, 4.5e9)])
 def test_measured_resonator_against_scikit_rf(window):

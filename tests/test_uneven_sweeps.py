@@ -5,6 +5,7 @@ Invented benches whose truth is known: a linear or a Rapp-limited single-tuned s
 
 import numpy as np
 import pytest
+from numpy.testing import assert_allclose
 
 from benchtool.analysis import analyse
 from benchtool.page_map import map_shown
@@ -14,7 +15,7 @@ F0 = 21.4e6
 GAIN_DB = 26.0206
 
 
-def write(folder, sweeps, *, quality=30.0, p1db_dbm=None, targets=""):
+def write(folder, sweeps, *, quality=30.0, p1db_dbm=None, targets="", match=0.1):
     """Write a bench of sweeps, each a name, frequencies, dB of added input pad and dB that it reads too much."""
     rng = np.random.default_rng(11)
     text = "version = 1\n[analyzer]\nsource_dbm = 0\nport2_compression_dbm = 60\nreading_db = 0.02\n"
@@ -28,7 +29,7 @@ def write(folder, sweeps, *, quality=30.0, p1db_dbm=None, targets=""):
             tank = tank / np.sqrt(1.0 + (10**0.1 - 1.0) * 10 ** (level / 10.0))
         hiss = 3e-4 * 10 ** (-pad / 20) * (rng.normal(size=f.size) + 1j * rng.normal(size=f.size))
         read = (tank + 10 * hiss) * 10 ** ((off - pad) / 20)
-        rows = [f"{hz:.0f} 0.1 0 {s.real:.9g} {s.imag:.9g} 0 0 0 0" for hz, s in zip(f, read, strict=True)]
+        rows = [f"{hz:.0f} {match} 0 {s.real:.9g} {s.imag:.9g} 0 0 0 0" for hz, s in zip(f, read, strict=True)]
         (folder / name).write_text("# Hz S RI R 50\n" + "\n".join(rows) + "\n", encoding="utf-8")
         text += f'[[device.sweep]]\nfile = "{name}"\n' + (f'input_pads = ["p{pad}"]\n' if pad else "")
     (folder / "bench.toml").write_text(text, encoding="utf-8")
@@ -104,4 +105,16 @@ def test_where_nothing_fits_no_level_is_judged(tmp_path):
         ("gain", "output_p1db"), "undecided"
     )
     assert found["bandwidth"].verdict == "met"
+    # The 1 dB point is −18 dBm at the input: the bound is true, and no narrow interval is given.
+    onset = device.drive.onset.input_p1db_dbm
+    assert onset.bound == "at least"
+    assert onset.value < -18.0
     assert found["gain"].advice == next(f.advice for f in device.findings if f.code == "cause-unclear")
+
+
+def test_a_reflection_far_below_its_doubt_lies_in_its_interval(tmp_path):
+    # Directivity is taken as 36 dB where it is not stated, so a reading of 60 dB may be a match of about that.
+    loss = write(tmp_path, [("only.s2p", NARROW, 0, 0.0)], match=0.001).figures["input_return_loss"]
+    assert_allclose(loss.value, 60.0, rtol=0, atol=0.1)
+    assert loss.low < 36.0
+    assert loss.low <= loss.value <= loss.high
