@@ -137,17 +137,6 @@ class _Nodes:
             self._decibels(self._power(rows[some], level[some]))
         return level.reshape(*coefficients.shape[:-1], -1)
 
-    def highest_db(self, s: Trace) -> FloatArray:
-        """Return the highest of these levels, (...,)."""
-        coefficients = self.fit.coefficients(s)
-        rows = coefficients.reshape(-1, coefficients.shape[-1])
-        power = np.empty(len(rows))
-        for first in range(0, len(rows), _ROWS_AT_A_TIME):
-            some = slice(first, first + _ROWS_AT_A_TIME)
-            every = self._power(rows[some], np.empty((len(rows[some]), self.basis.shape[1])))
-            power[some] = np.min(every, axis=-1) if self.fit.inverse else np.max(every, axis=-1)
-        return self._decibels(power).reshape(coefficients.shape[:-1])
-
     def _power(self, coefficients: ComplexArray, power: FloatArray) -> FloatArray:
         """Write the power of the polynomial, of S or 1/S, of rows of coefficients into `power`, (rows, g)."""
         np.square(np.matmul(coefficients.real, self.basis, out=power), out=power)
@@ -185,10 +174,6 @@ class Curve:
         """Return the level of S in dB on `grid_hz`, (..., g), at a fraction of the cost of :meth:`on_grid`."""
         levels = [nodes.level_db(s) for nodes in self._grid_nodes]
         return levels[0] if len(levels) == 1 else np.concatenate(levels, axis=-1)
-
-    def highest_level(self, s: Trace) -> FloatArray:
-        """Return the highest level of S in dB over the curve, (...,), of a trace or copies of it."""
-        return np.asarray(np.max([nodes.highest_db(s) for nodes in self._grid_nodes], axis=0))
 
     def at(self, s: Trace, frequency_hz: float) -> tuple[ComplexArray, FloatArray]:
         """Return S and group delay in s at one frequency, both (...,)."""

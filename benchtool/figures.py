@@ -16,6 +16,7 @@ import numpy as np
 from benchtool.curves import Curve
 from benchtool.figure_plan import Extractor, FigureBuilder, FigurePlan, SweepNoise, Traces
 from benchtool.fitting import fit_curve
+from benchtool.level_search import LevelSearch
 from benchtool.match import stability, worst_return_loss
 from benchtool.model import Bound, Figure, FloatArray, Kind, Sweep
 from benchtool.phase import delay_variation, phase_linearity
@@ -152,7 +153,8 @@ def _add_match(build: FigureBuilder, band: Passband, edges: PassbandFigures, at_
 
 
 def _worst(curve: Curve, parameter: str) -> Extractor:
-    return lambda _plan, traces, _found: worst_return_loss(curve, traces[parameter])
+    search = LevelSearch(curve)
+    return lambda _plan, traces, _found: worst_return_loss(search, traces[parameter])
 
 
 def _stability(build: FigureBuilder, figure: str, at_hz: float) -> Extractor:

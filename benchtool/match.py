@@ -11,7 +11,8 @@ from typing import Final
 
 import numpy as np
 
-from benchtool.curves import Curve, Trace
+from benchtool.curves import Trace
+from benchtool.level_search import LevelSearch
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.units import from_db
 
@@ -29,9 +30,9 @@ BURIED_UNCERTAINTY: Final = 0.3
 """Uncertainty of a reflection magnitude above which a return loss read through pads says nothing."""
 
 
-def worst_return_loss(curve: Curve, reflection: Trace) -> FloatArray:
-    """Return the smallest return loss in dB over the curve, (...,), of a reflection or copies of it."""
-    return -curve.highest_level(reflection)
+def worst_return_loss(search: LevelSearch, reflection: Trace) -> FloatArray:
+    """Return the smallest return loss in dB over a stretch, (...,), of a reflection or copies of it."""
+    return -search.levels(reflection).highest()[1]
 
 
 def buried_uncertainty(correction_db: float, directivity_db: float) -> float:

@@ -23,6 +23,7 @@ from numpy.typing import NDArray
 
 from benchtool.curves import Curve, Trace
 from benchtool.fitting import fit_curve
+from benchtool.level_search import LevelSearch
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import NoiseModel, moving_average, rotation, trend_delay
 from benchtool.units import HALF_POWER_DB, to_db
@@ -46,8 +47,6 @@ class PassbandFigures:
     upper_edge: FloatArray
     curve: Curve
     trace: Trace
-    peak_node: NDArray[np.intp]
-    """Node of the curve's grid nearest the peak; it serves what is worked out only when it is asked for."""
 
     @cached_property
     def _smooth(self) -> tuple[ComplexArray, FloatArray]:
@@ -64,8 +63,9 @@ class PassbandFigures:
         grid = self.curve.grid_hz
         angle = np.unwrap(np.angle(self._smooth[0]), axis=-1) * (180 / np.pi)
         at_peak = _interpolate(grid, angle, self.peak_frequency)
-        early = crossing(grid, -angle, -at_peak - 45.0, self.peak_node, -1)
-        late = crossing(grid, angle, at_peak - 45.0, self.peak_node, +1)
+        node = np.searchsorted(grid, self.peak_frequency)
+        early = crossing(grid, -angle, -at_peak - 45.0, node, -1)
+        late = crossing(grid, angle, at_peak - 45.0, node - 1, +1)
         with np.errstate(divide="ignore", invalid="ignore"):
             return np.asarray(np.sqrt(early * late) / (late - early))
 
@@ -96,8 +96,9 @@ class Passband:
     """Where a sweep peaks and how that peak is to be measured."""
 
     curve: Curve
+    search: LevelSearch
     peak_range: tuple[int, int]
-    """Slice of the grid in which the peak is looked for."""
+    """Slice of the curve's grid in which the peak is looked for."""
     lower_inside: bool
     upper_inside: bool
     peak_inside: bool
@@ -111,15 +112,10 @@ class Passband:
 
     def figures(self, s21: Trace) -> PassbandFigures:
         """Return the figures of a trace, or of copies of it."""
-        grid = self.curve.grid_hz
-        level = self.curve.level_on_grid(s21)
-        start, stop = self.peak_range
-        index = np.argmax(level[..., start:stop], axis=-1) + start
-        peak_frequency, peak_gain = _vertex(grid, level, index, (start, stop))
-        target = peak_gain - HALF_POWER_DB
-        lower = crossing(grid, level, target, index, -1)
-        upper = crossing(grid, level, target, index, +1)
-        return PassbandFigures(peak_gain, peak_frequency, lower, upper, self.curve, s21, index)
+        levels = self.search.levels(s21)
+        peak_frequency, peak_gain = levels.highest()
+        lower, upper = (levels.falls_from_top(peak_gain - HALF_POWER_DB, direction) for direction in (-1, 1))
+        return PassbandFigures(peak_gain, peak_frequency, lower, upper, self.curve, s21)
 
 
 def _gather(values: FloatArray, index: np.ndarray) -> FloatArray:
@@ -145,25 +141,6 @@ def _interpolate(grid: FloatArray, values: FloatArray, at_hz: FloatArray) -> Flo
         + y1 * a * c / ((x1 - x0) * (x1 - x2))
         + y2 * a * b / ((x2 - x0) * (x2 - x1))
     )
-
-
-def _vertex(
-    grid: FloatArray, level: FloatArray, index: np.ndarray, limits: tuple[int, int]
-) -> tuple[FloatArray, FloatArray]:
-    """Return frequency and level of the parabola through the largest node and its neighbours, each (...,)."""
-    low, high = limits
-    if grid.size < 3:
-        return grid[index], _gather(level, index)
-    middle = _within(index, 1, grid.size - 2)
-    x0, x1, x2 = grid[middle - 1], grid[middle], grid[middle + 1]
-    y0, y1, y2 = (_gather(level, middle + k) for k in (-1, 0, 1))
-    first, second = (y1 - y0) / (x1 - x0), (y2 - y1) / (x2 - x1)
-    bend = (second - first) / (x2 - x0)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        vertex = 0.5 * (x0 + x1) - 0.5 * first / bend
-    inside = (bend < 0) & (vertex >= np.maximum(x0, grid[low])) & (vertex <= np.minimum(x2, grid[high - 1]))
-    frequency = np.where(inside, vertex, grid[index])
-    return frequency, _interpolate(grid, level, frequency)
 
 
 def crossing(grid: FloatArray, level: FloatArray, target: FloatArray, index: np.ndarray, direction: int) -> FloatArray:
@@ -272,6 +249,7 @@ def plan_passband(
     humps = _humps(frequency_hz, level, (start, stop), (left, right), float(level[peak]))
     return Passband(
         curve,
+        LevelSearch(curve, float(grid[a]), float(grid[b - 1])),
         (a, b),
         lower_inside,
         upper_inside,
@@ -304,15 +282,18 @@ class LevelWidth:
     lower: Curve
     upper: Curve
 
+    @cached_property
+    def _searches(self) -> tuple[LevelSearch, LevelSearch]:
+        return LevelSearch(self.lower), LevelSearch(self.upper)
+
     def width(self, s21: Trace, peak_gain_db: FloatArray) -> FloatArray:
         """Return the width in Hz, (...,), of a trace or copies of it; NaN where an edge is lost."""
         target = peak_gain_db - self.below_db
-        edges = []
-        for curve, direction in ((self.lower, -1), (self.upper, 1)):
-            level = curve.level_on_grid(s21)
-            inner = np.full(target.shape, 0 if direction > 0 else curve.grid_hz.size - 1)
-            edges.append(crossing(curve.grid_hz, level, target, inner, direction))
-        return np.asarray(edges[1] - edges[0])
+        lower, upper = (
+            search.levels(s21).falls(target, direction)
+            for search, direction in zip(self._searches, (-1, 1), strict=True)
+        )
+        return upper - lower
 
 
 def plan_level_width(

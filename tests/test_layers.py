@@ -41,6 +41,7 @@ LAYERS = [
     "noise",
     "curves",
     "fitting",
+    "level_search",
     "pads",
     "response",
     "phase",

@@ -1,0 +1,201 @@
+"""A smooth curve and copies of its trace in; where each copy is highest, and where it falls below a level, out.
+
+Levels are looked at on some of the curve's nodes. Between these the curve is a known polynomial, so the place itself is
+found by Newton's method on the logarithm of its power, which is close to a parabola near a resonance and to a straight
+line on a skirt: from there one step or two, kept between the neighbouring nodes, find it to a billionth of the band.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from functools import cache, cached_property
+from typing import Final
+
+import numpy as np
+from numpy.polynomial import legendre
+from numpy.typing import NDArray
+
+from benchtool.curves import Curve, Fit, Trace
+from benchtool.model import ComplexArray, FloatArray
+
+__all__ = ["LevelSearch", "Levels"]
+
+_EVERY: Final = 4
+_EVERY_OF_PIECES: Final = 2
+"""Of one fit every so many nodes are looked at; several side by side have fewer nodes each, and more are."""
+_DB: Final = 10.0 / float(np.log(10.0))
+"""Decibels for each unit of the natural logarithm of power."""
+
+
+class LevelSearch:
+    """Where the levels of one curve are looked at: planned once, used on the trace and on any number of copies.
+
+    Parameters
+    ----------
+    curve : the smooth curve of the trace
+    low_hz, high_hz : the highest level is sought between these, where the curve has nodes there
+    """
+
+    def __init__(self, curve: Curve, low_hz: float = -np.inf, high_hz: float = np.inf) -> None:
+        grid = curve.grid_hz
+        first = min(int(np.searchsorted(grid, low_hz, side="left")), grid.size - 1)
+        last = max(int(np.searchsorted(grid, high_hz, side="right")) - 1, first)
+        every = _EVERY if len(curve.fits) == 1 else _EVERY_OF_PIECES
+        used = np.unique([*range(0, grid.size, every), grid.size - 1, first, last])
+        self.nodes_hz = grid[used]
+        self.first, self.last = int(np.searchsorted(used, first)), int(np.searchsorted(used, last))
+        self.fits = curve.fits
+        self.borders = np.array([fit.low_hz for fit in curve.fits[1:]])
+        owner = np.searchsorted(self.borders, self.nodes_hz, side="right")
+        self._bases = [fit.basis(self.nodes_hz[owner == place]).T for place, fit in enumerate(curve.fits)]
+
+    def levels(self, s: Trace) -> Levels:
+        """Return the levels of a trace, (n,), or of copies of it, (..., n)."""
+        coefficients = [fit.coefficients(s) for fit in self.fits]
+        rows = [each.reshape(-1, each.shape[-1]) for each in coefficients]
+        powers = [_power(fit, own, basis) for fit, own, basis in zip(self.fits, rows, self._bases, strict=True)]
+        power = powers[0] if len(powers) == 1 else np.concatenate(powers, axis=1)
+        pieces = [_Polynomials(fit, own) for fit, own in zip(self.fits, rows, strict=True)]
+        return Levels(self, power, pieces, coefficients[0].shape[:-1])
+
+
+class Levels:
+    """The levels of copies of one trace: on the nodes of a search, and between them."""
+
+    def __init__(
+        self, search: LevelSearch, power: FloatArray, pieces: Sequence[_Polynomials], shape: tuple[int, ...]
+    ) -> None:
+        self._search, self._power, self._pieces, self._shape = search, power, pieces, shape
+        self._rows = np.arange(len(power))
+
+    def highest(self) -> tuple[FloatArray, FloatArray]:
+        """Return the frequency of the highest level between the limits of the search and the level in dB, (...,) each.
+
+        At a limit, the level there.
+        """
+        search, nodes, node = self._search, self._search.nodes_hz, self._top
+        below, above = np.maximum(node - 1, search.first), np.minimum(node + 1, search.last)
+        low, at, high = nodes[below], nodes[node], nodes[above]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            left, top, right = (np.log(self._power[self._rows, place]) for place in (below, node, above))
+            # The vertex of the parabola through three nodes, and from there a step of Newton's.
+            fall, rise = (top - left) / (at - low), (right - top) / (high - at)
+            vertex = 0.5 * (low + at) + 0.5 * fall * (high - low) / (fall - rise)
+            inside = (fall > rise) & (vertex > low) & (vertex < high)
+            start = np.where(inside, vertex, at)
+            level, slope, bend = self._logarithm(start, 2)
+            step = -slope / bend
+            found = inside & (bend < 0.0) & (start + step >= low) & (start + step <= high)
+            level += 0.5 * slope * step
+        # Where no top is found between the nodes, it is at one.
+        found &= level >= top
+        at, level = np.where(found, start + step, at), np.where(found, level, top)
+        return at.reshape(self._shape), (_DB * level).reshape(self._shape)
+
+    def falls_from_top(self, target_db: FloatArray, direction: int) -> FloatArray:
+        """Return where the level first falls below `target_db` (...,), going from the highest node in `direction`.
+
+        NaN where it stays above to the end of the curve.
+        """
+        return self._falls(target_db, self._top, direction)
+
+    def falls(self, target_db: FloatArray, direction: int) -> FloatArray:
+        """Return where the level first falls below `target_db` (...,), from one end of the curve to the other."""
+        end = 0 if direction > 0 else self._power.shape[1] - 1
+        return self._falls(target_db, np.full(len(self._power), end), direction)
+
+    @cached_property
+    def _top(self) -> NDArray[np.intp]:
+        search = self._search
+        return search.first + np.argmax(self._power[:, search.first : search.last + 1], axis=1)
+
+    def _falls(self, target_db: FloatArray, start: NDArray[np.intp], direction: int) -> FloatArray:
+        nodes, target = self._search.nodes_hz, np.reshape(target_db, -1) / _DB
+        # Only the side that some copy looks at is gone through.
+        first, last = (int(np.min(start)), nodes.size) if direction > 0 else (0, int(np.max(start)) + 1)
+        places = np.arange(first, last)
+        beyond = places > start[:, None] if direction > 0 else places < start[:, None]
+        below = beyond & (self._power[:, first:last] < np.exp(target)[:, None])
+        found = below.any(axis=1)
+        outer = first + np.argmax(below, axis=1) if direction > 0 else last - 1 - np.argmax(below[:, ::-1], axis=1)
+        outer = np.where(found, outer, nodes.size - 1 if direction > 0 else 0)
+        inner = np.minimum(np.maximum(outer - direction, 0), nodes.size - 1)
+        low, high = (nodes[inner], nodes[outer]) if direction > 0 else (nodes[outer], nodes[inner])
+        with np.errstate(divide="ignore", invalid="ignore"):
+            above, under = (np.log(self._power[self._rows, place]) - target for place in (inner, outer))
+            at = nodes[inner] + (nodes[outer] - nodes[inner]) * above / (above - under)
+            level, slope = self._logarithm(at, 1)
+            at = np.minimum(np.maximum(at - (level - target) / slope, low), high)
+            # Already so near that the slope will do for another step.
+            (level,) = self._logarithm(at, 0)
+            at = np.minimum(np.maximum(at - (level - target) / slope, low), high)
+        return np.asarray(np.where(found, at, np.nan)).reshape(self._shape)
+
+    def _logarithm(self, at_hz: FloatArray, order: int) -> list[FloatArray]:
+        """Return the logarithm of each copy's power at a frequency of its own, and its derivatives up to `order`."""
+        if len(self._pieces) == 1:
+            return self._pieces[0].logarithm(at_hz, self._rows, order)
+        owner = np.searchsorted(self._search.borders, at_hz, side="right")
+        found = np.empty((order + 1, at_hz.size))
+        for place, piece in enumerate(self._pieces):
+            mine = np.flatnonzero(owner == place)
+            if mine.size:
+                found[:, mine] = piece.logarithm(at_hz[mine], mine, order)
+        return list(found)
+
+
+class _Polynomials:
+    """What one fit makes of each copy: S or 1/S in powers of the frequency, scaled to lie between -1 and 1."""
+
+    def __init__(self, fit: Fit, coefficients: ComplexArray) -> None:
+        self._fit = fit
+        # Powers before copies, so that Horner's scheme runs along rows, and in real numbers, as the frequencies are.
+        self._powers = np.empty((fit.degree + 1, 2, len(coefficients)))
+        np.matmul(_powers(fit.degree), coefficients.real.T, out=self._powers[:, 0])
+        np.matmul(_powers(fit.degree), coefficients.imag.T, out=self._powers[:, 1])
+
+    def logarithm(self, at_hz: FloatArray, rows: NDArray[np.intp], order: int) -> list[FloatArray]:
+        """Return the logarithm of the power of S of some copies at a frequency each, and derivatives up to `order`."""
+        fit = self._fit
+        powers = self._powers if rows.size == self._powers.shape[2] else self._powers[:, :, rows]
+        way = (at_hz - fit.centre_hz) / fit.scale_hz
+        terms = [powers[-1].copy(), *(np.zeros_like(powers[-1]) for _ in range(order))]
+        for power in powers[-2::-1]:
+            for higher, lower in zip(terms[:0:-1], terms[-2::-1], strict=True):
+                higher *= way
+                higher += lower
+            terms[0] *= way
+            terms[0] += power
+        (real, imaginary), sign = terms[0], -1.0 if fit.inverse else 1.0
+        square = real**2 + imaginary**2
+        found = [sign * np.log(square)]
+        if order > 0:
+            # The logarithm's derivative is the real part of twice q'/q = q' q*/|q|².
+            along = (terms[1][0] * real + terms[1][1] * imaginary) / square
+            found.append(2.0 * sign / fit.scale_hz * along)
+        if order > 1:
+            across = (terms[1][1] * real - terms[1][0] * imaginary) / square
+            bend = 2.0 * (terms[2][0] * real + terms[2][1] * imaginary) / square
+            found.append(2.0 * sign / fit.scale_hz**2 * (bend - along**2 + across**2))
+        return found
+
+
+def _power(fit: Fit, coefficients: ComplexArray, basis: FloatArray) -> FloatArray:
+    """Return the power of S of each copy at the nodes of a basis, (copies, g)."""
+    power = np.asarray(coefficients.real @ basis)
+    imaginary = coefficients.imag @ basis
+    np.square(power, out=power)
+    power += np.square(imaginary, out=imaginary)
+    if fit.inverse:
+        with np.errstate(divide="ignore"):
+            np.reciprocal(power, out=power)
+    return power
+
+
+@cache
+def _powers(degree: int) -> FloatArray:
+    """Return the Legendre polynomials up to `degree` in powers of their argument, each a column, (degree + 1)²."""
+    found = np.zeros((degree + 1, degree + 1))
+    for column in range(degree + 1):
+        found[: column + 1, column] = legendre.leg2poly(np.eye(degree + 1)[column])[: column + 1]
+    return found
