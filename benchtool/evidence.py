@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 
 from benchtool.model import FloatArray
 
-__all__ = ["NormalEquations", "normal_equations", "prior_precision"]
+__all__ = ["Integrated", "NormalEquations", "normal_equations", "prior_precision"]
 
 _GUARD: Final = 1e-9
 """Added to the misfit before the factor is taken, and subtracted after: a perfect fit must not fail by rounding."""
@@ -39,10 +39,6 @@ class NormalEquations:
     pull: FloatArray
     chi2: FloatArray
     log_normal: FloatArray
-
-    def combined(self, columns: FloatArray) -> NormalEquations:
-        """Return the equations of other freedoms, each a combination (m,) of these, as the columns of (m, m')."""
-        return NormalEquations(columns.T @ self.gram @ columns, self.pull @ columns, self.chi2, self.log_normal)
 
     def only(self, freedoms: NDArray[np.intp]) -> NormalEquations:
         """Return the equations of some of the freedoms."""
@@ -62,10 +58,46 @@ class NormalEquations:
         occam = 0.5 * float(np.linalg.slogdet(prior)[1]) - np.sum(np.log(diagonal[:, :m]), axis=1)
         return self.log_normal + occam - 0.5 * chi2, chi2
 
-    def freedom(self, index: int, prior: FloatArray) -> tuple[float, float]:
-        """Return mean and standard uncertainty of one freedom of the first copy."""
-        spread = np.linalg.inv(self.gram[0] + prior)
-        return float(spread[index] @ self.pull[0]), float(np.sqrt(spread[index, index]))
+    def integrated(self, freedoms: NDArray[np.intp], prior: FloatArray) -> Integrated:
+        """Return the first copy with some freedoms integrated over, whose prior precision is (m', m')."""
+        factor = np.linalg.cholesky(self.gram[0][np.ix_(freedoms, freedoms)] + prior)
+        bordered = np.column_stack([self.gram[0][freedoms], self.pull[0, freedoms]])
+        taken = np.linalg.solve(factor, bordered)
+        left = np.append(self.pull[0], self.chi2[0]) - taken.T @ taken[:, -1]
+        occam = 0.5 * float(np.linalg.slogdet(prior)[1]) - float(np.sum(np.log(np.diagonal(factor))))
+        gram = self.gram[0] - taken[:, :-1].T @ taken[:, :-1]
+        return Integrated(float(self.log_normal[0]) + occam, float(left[-1]), gram, left[:-1])
+
+
+@dataclass(frozen=True, eq=False)
+class Integrated:
+    """Readings with some freedoms integrated over, and what is left for others: `gram` (m, m) and `pull` (m,).
+
+    `log_rest` is the log evidence but for the misfit `chi2`.
+    """
+
+    log_rest: float
+    chi2: float
+    gram: FloatArray
+    pull: FloatArray
+
+    def with_extras(self, columns: FloatArray, u: FloatArray) -> tuple[float, float, FloatArray, FloatArray]:
+        """Return log evidence and misfit with e further freedoms, and the mean (e,) and covariance (e, e) of these.
+
+        Parameters
+        ----------
+        columns : (m, e) each a combination of the freedoms of the equations
+        u : (e,) their standard deviations before the readings were seen
+        """
+        if u.size == 0:
+            return self.log_rest - 0.5 * self.chi2, self.chi2, np.zeros(0), np.zeros((0, 0))
+        precision = columns.T @ self.gram @ columns + np.diag(u**-2.0)
+        pull = self.pull @ columns
+        covariance = np.asarray(np.linalg.inv(precision), np.float64)
+        mean = covariance @ pull
+        chi2 = self.chi2 - float(pull @ mean)
+        occam = -float(np.sum(np.log(u))) - 0.5 * float(np.linalg.slogdet(precision)[1])
+        return self.log_rest + occam - 0.5 * chi2, chi2, mean, covariance
 
 
 def normal_equations(weight: FloatArray, slope: FloatArray, left: FloatArray, columns: FloatArray) -> NormalEquations:

@@ -12,7 +12,6 @@ from dataclasses import dataclass
 from typing import Final, Literal, TypeAlias
 
 import numpy as np
-from numpy.typing import NDArray
 
 from benchtool.drive_table import DriveTable
 from benchtool.evidence import NormalEquations, normal_equations, prior_precision
@@ -55,10 +54,10 @@ practice, no source)."""
 _LEAST_U_DB: Final = 0.005
 _LAWS: Final = ((Law("tanh"), 0.1), (Law("cubic"), 0.1), (None, 0.8))
 """Laws with their shares of belief; None is Rapp's, over every p."""
-_GRIDS: Final = ((21, 5), (21, 7), (21, 9))
+_GRIDS: Final = ((16, 5), (12, 6), (12, 7))
 """Places of the 1 dB point, and values of Rapp's p, that each look takes in."""
 _NEWTON_STEPS: Final = 6
-_STILL_DB: Final = 1e-6
+_STILL_DB: Final = 1e-4
 _MATTERS: Final = 12.0
 _HOPELESS: Final = 30.0
 """Logarithm of how much less likely than the best a law may be and still be looked at more closely."""
@@ -164,44 +163,68 @@ class _Way:
 class _LawRange:
     """Where the 1 dB point by one law may lie and, where `law` is None, which of Rapp's p it may have.
 
-    `found` is what the last look made of each way, `log_best` the best log weight that it saw, `between` how much
-    better a point between the nodes may be.
+    A knee of another p that fits as well has its 1 dB point elsewhere: the likely part is a ridge that runs slantwise,
+    and the grid follows it. `found` is what the last look made of each way, `log_best` the best log weight that it saw,
+    `between` how much better a point between the nodes may be.
     """
 
     def __init__(self, law: Law | None, share: float, low: float, high: float) -> None:
         self.law, self.share = law, share
-        self._low, self._high = low, high
         self._soft, self._hard = float(np.log(SOFTEST_P)), float(np.log(HARDEST_P))
+        self._ridge = np.array([self._soft]), np.array([0.5 * (low + high)])
+        self._below, self._above = 0.5 * (low - high), 0.5 * (high - low)
         self.found: list[Weighed] = []
         self.log_best, self.between = -np.inf, 0.0
 
     def grid(self, places: int, shapes: int) -> tuple[FloatArray, FloatArray]:
         """Return 1 dB points and logarithms of p, (n,) each, the latter running fastest."""
-        self._place = np.linspace(self._low, self._high, places)
-        self._shape = np.linspace(self._soft, self._hard, shapes if self.law is None else 1)
-        return np.repeat(self._place, self._shape.size), np.tile(self._shape, self._place.size)
+        self._shape = np.linspace(self._soft, self._hard, shapes) if self.law is None else np.array([self._soft])
+        self._offset = np.linspace(self._below, self._above, places)
+        self._p1db = self._offset[:, None] + np.interp(self._shape, *self._ridge)
+        return self._p1db.ravel(), np.tile(self._shape, places)
 
     def take(self, ways: Sequence[tuple[Cause, FloatArray, FloatArray, FloatArray]]) -> None:
         """Take the log weight, level and misfit of each cause's ways on the grid, (n,) each, and close in."""
-        cell = float(self._place[1] - self._place[0])
+        places, shapes = self._p1db.shape
+        # The trapezoidal rule: what lies at the ends of p has half a cell.
+        share = np.full(places, self._offset[1] - self._offset[0])
+        share[[0, -1]] *= 0.5
+        of_shape = np.ones(shapes)
         if self.law is None:
-            cell *= float(self._shape[1] - self._shape[0]) / float(np.log(HARDEST_P / SOFTEST_P))
+            of_shape *= float(self._shape[1] - self._shape[0]) / float(np.log(HARDEST_P / SOFTEST_P))
+            of_shape[[0, -1]] *= 0.5
+        cells = np.outer(share, of_shape).ravel()
         self.found, self.log_best, self.between = [], -np.inf, 0.0
-        matters = np.zeros((self._place.size, self._shape.size), np.bool_)
+        score = np.full((places, shapes), -np.inf)
         for cause, log, level, chi2 in ways:
             best = float(np.max(log))
             if best == -np.inf:
                 continue
-            self.found.append(_summed(cause, log, level, chi2, cell))
-            grid = log.reshape(matters.shape)
-            matters |= grid > best - _MATTERS
+            self.found.append(_summed(cause, log, level, chi2, cells))
+            grid = log.reshape(score.shape)
+            np.maximum(score, grid - best, out=score)
             if best > self.log_best:
                 self.log_best, self.between = best, _between(grid)
-        if np.any(matters):
-            rows, columns = np.nonzero(matters)
-            self._low, self._high = _close_in(self._place, rows)
-            if self.law is None:
-                self._soft, self._hard = _close_in(self._shape, columns)
+        if self.found:
+            self._close_in(score)
+
+    def _close_in(self, score: FloatArray) -> None:
+        """Keep what matters of the grid by its logarithms less their best, and learn the ridge."""
+        step = self._offset[1] - self._offset[0]
+        row, lift = _tops(score)
+        top = self._p1db[0] + row * step
+        matters = np.flatnonzero(lift > -_MATTERS)
+        seen = np.flatnonzero(np.isfinite(lift))
+        self._ridge = self._shape[seen], top[seen]
+        near = score[:, matters] > -_MATTERS
+        # At least the node of the top itself, and a step beyond what matters either way.
+        near[np.rint(row[matters]).astype(np.intp), np.arange(matters.size)] = True
+        first, last = np.argmax(near, axis=0), len(near) - 1 - np.argmax(near[::-1], axis=0)
+        self._below = float(np.min(first - 1 - row[matters])) * step
+        self._above = float(np.max(last + 1 - row[matters])) * step
+        if self.law is None:
+            self._soft = float(self._shape[max(int(matters[0]) - 1, 0)])
+            self._hard = float(self._shape[min(int(matters[-1]) + 1, self._shape.size - 1)])
 
 
 class _LevelSearch:
@@ -224,8 +247,8 @@ class _LevelSearch:
             self._ways += [_Way(cause, 1.0 - detuned, False, shift)]
             self._ways += [_Way(cause, detuned, True, shift)] if detuned else []
         strongest = float(np.max(self._offset + (table.gain_db if self._follows_gain else 0.0)))
-        low, high = strongest - _REACH_BELOW_DB, strongest + _REACH_ABOVE_DB
-        self.laws = [_LawRange(law, share, low, high) for law, share in _LAWS]
+        self._reach = strongest - _REACH_BELOW_DB, strongest + _REACH_ABOVE_DB
+        self.laws = [_LawRange(law, share, *self._reach) for law, share in _LAWS]
         self.live = self.laws
         self._patterns = doubts.patterns
         law_out, detuning = (np.eye(table.sweeps) / spread**2 for spread in (_LAW_DOUBT, _DETUNING))
@@ -244,6 +267,7 @@ class _LevelSearch:
         p1db, log_p = (np.concatenate(column) for column in zip(*grids, strict=True))
         left, slope, drop = self._fit_gain(p1db, log_p, parts)
         seen = np.max(drop, axis=(1, 2)) >= _LEAST_DROP_DB
+        seen &= (p1db >= self._reach[0]) & (p1db <= self._reach[1])
         evidence = {
             detunes: equations.log_evidence(self._priors[detunes])
             for detunes, equations in self._equations(left, slope, drop).items()
@@ -311,15 +335,28 @@ class _LevelSearch:
         return gain - own + drop, np.clip(1.0 - rate, 0.05, 1.0), drop
 
 
-def _summed(cause: Cause, log: FloatArray, p1db: FloatArray, chi2: FloatArray, cell: float) -> Weighed:
+def _summed(cause: Cause, log: FloatArray, p1db: FloatArray, chi2: FloatArray, cells: FloatArray) -> Weighed:
     """Return the sum of a grid of log weights (G,), with mean and spread of the 1 dB point over it."""
     best = float(np.max(log))
-    belief = np.exp(log - best)
+    belief = np.exp(log - best) * cells
     total = float(np.sum(belief))
     belief /= total
     value = float(belief @ p1db)
     u = float(np.sqrt(belief @ (p1db - value) ** 2))
-    return Weighed(cause, "", best + float(np.log(total * cell)), value, u, float(chi2[int(np.argmax(log))]))
+    return Weighed(cause, "", best + float(np.log(total)), value, u, float(chi2[int(np.argmax(log))]))
+
+
+def _tops(score: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Return row and height of the highest point of each column, by the parabola through three nodes."""
+    row, columns = np.argmax(score, axis=0), np.arange(score.shape[1])
+    middle = np.clip(row, 1, len(score) - 2)
+    early, top, late = (score[middle + k, columns] for k in (-1, 0, 1))
+    with np.errstate(invalid="ignore"):
+        slope, bend = 0.5 * (late - early), early - 2.0 * top + late
+        shift = -slope / bend
+        inside = (middle == row) & (bend < 0.0) & np.isfinite(bend)
+        height = top + 0.5 * slope * shift
+    return np.where(inside, row + shift, row), np.where(inside, height, score[row, columns])
 
 
 def _between(grid: FloatArray) -> float:
@@ -333,7 +370,3 @@ def _between(grid: FloatArray) -> float:
         steps = [line[at] - line[near] for near in (at - 1, at + 1) if 0 <= near < line.size]
         rise += max(steps, default=0.0)
     return float(rise)
-
-
-def _close_in(axis: FloatArray, used: NDArray[np.signedinteger]) -> tuple[float, float]:
-    return float(axis[max(int(np.min(used)) - 1, 0)]), float(axis[min(int(np.max(used)) + 1, axis.size - 1)])

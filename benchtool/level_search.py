@@ -107,7 +107,7 @@ class Levels:
     @cached_property
     def _top(self) -> NDArray[np.intp]:
         search = self._search
-        return search.first + np.argmax(self._power[:, search.first : search.last + 1], axis=1)
+        return np.asarray(search.first + np.argmax(self._power[:, search.first : search.last + 1], axis=1), np.intp)
 
     def _falls(self, target_db: FloatArray, start: NDArray[np.intp], direction: int) -> FloatArray:
         nodes, target = self._search.nodes_hz, np.reshape(target_db, -1) / _DB

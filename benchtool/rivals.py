@@ -24,7 +24,7 @@ from typing import Final, Literal
 import numpy as np
 
 from benchtool.drive_table import DriveTable
-from benchtool.evidence import normal_equations, prior_precision
+from benchtool.evidence import Integrated, normal_equations, prior_precision
 from benchtool.law_search import PRIOR, Cause, Doubts, Weighed, flat_precision, merge, weigh_limiting
 from benchtool.model import FloatArray
 
@@ -110,23 +110,29 @@ class _Lawless:
         left = gain - np.sum(weight * gain, axis=1, keepdims=True) / np.sum(weight, axis=1, keepdims=True)
         every = np.broadcast_to(columns, (1, table.sweeps, *columns.shape))
         self._equations = normal_equations(weight, np.ones_like(gain), left, every)
-        self._freedoms = np.eye(table.sweeps * len(columns)).reshape(table.sweeps, len(columns), -1)
+        self._size = len(columns)
+        self._settled: dict[str, Integrated] = {}
+
+    def _but_for(self, pad: str) -> Integrated:
+        """Return what the doubts leave, the tolerance of one pad not being among them."""
+        if pad not in self._settled:
+            doubts = self._doubts.precisions
+            flat = flat_precision(self.table, pad) if pad else doubts[0]
+            places = np.arange(self.table.sweeps * self._size).reshape(-1, self._size)[:, : len(doubts)]
+            self._settled[pad] = self._equations.integrated(places.ravel(), prior_precision([flat, *doubts[1:]]))
+        return self._settled[pad]
 
     def weigh(self, cause: Cause, about: str, extras: Sequence[_Extra], share: float = 1.0) -> Weighed:
         """Return one explanation; the first of its extras is what it estimates."""
-        doubts = len(self._doubts.precisions)
-        size = self.table.sweeps * doubts
-        # Within a sweep its doubts stand side by side, as the prior has them.
-        parts = [self._freedoms[:, :doubts].reshape(size, -1).T]
-        parts += [(extra.reach @ self._freedoms[:, self._place[extra.along]])[:, None] for extra in extras]
-        equations = self._equations.combined(np.concatenate(parts, axis=1))
-        replaced = next((extra.pad for extra in extras if extra.pad), "")
-        flat = flat_precision(self.table, replaced) if replaced else self._doubts.precisions[0]
-        prior = np.diag(np.concatenate([np.zeros(size), [extra.u**-2.0 for extra in extras]]))
-        prior[:size, :size] = prior_precision([flat, *self._doubts.precisions[1:]])
-        log, chi2 = equations.log_evidence(prior)
-        value, u = equations.freedom(size, prior) if extras else (None, None)
-        return Weighed(cause, about, float(log[0]) + float(np.log(PRIOR[cause] * share)), value, u, float(chi2[0]))
+        columns = np.zeros((self.table.sweeps, self._size, len(extras)))
+        for index, extra in enumerate(extras):
+            columns[:, self._place[extra.along], index] = extra.reach
+        doubts = self._but_for(next((extra.pad for extra in extras if extra.pad), ""))
+        spread = np.array([extra.u for extra in extras])
+        wanted = columns.reshape(self.table.sweeps * self._size, len(extras))
+        log, chi2, mean, covariance = doubts.with_extras(wanted, spread)
+        value, u = (float(mean[0]), float(np.sqrt(covariance[0, 0]))) if extras else (None, None)
+        return Weighed(cause, about, log + float(np.log(PRIOR[cause] * share)), value, u, chi2)
 
     def offset(
         self, cause: Cause, about: str, reach: FloatArray, share: float, others: tuple[_Extra, ...] = (), pad: str = ""

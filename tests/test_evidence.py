@@ -1,5 +1,7 @@
 """Evidence of linear freedoms against scipy's density of a normal distribution, and what must not matter to it."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from numpy.testing import assert_allclose
@@ -69,13 +71,27 @@ def test_a_gain_common_to_all_sweeps_changes_nothing(readings):
     assert_allclose(after[0], before[0], rtol=1e-7, atol=0)
 
 
-def test_freedoms_combined_are_the_equations_of_the_combined_columns(readings):
-    weight, left, columns, _ = readings
-    one, mixing = np.ones_like(left), np.array([[1.0, 2.0], [-0.5, 1.0]])
-    whole = np.kron(np.eye(SWEEPS), mixing)
-    combined = normal_equations(weight, one, left, columns).combined(whole)
-    direct = normal_equations(weight, one, left, np.swapaxes(np.swapaxes(columns, 2, 3) @ mixing, 2, 3))
-    assert_allclose(combined.gram, direct.gram, rtol=1e-9, atol=1e-9)
-    assert_allclose(combined.pull, direct.pull, rtol=1e-9, atol=1e-9)
-    kept = np.array([0, 3])
-    assert_allclose(direct.only(kept).gram[0], direct.gram[0][np.ix_(kept, kept)], rtol=0, atol=0)
+def test_doubts_first_and_extras_after_are_all_freedoms_at_once(readings):
+    # The evidence is one integral, whichever part of it is taken first; the whole is checked against scipy above.
+    weight, left, columns, precisions = readings
+    one, shift = np.ones_like(left), np.linspace(-1.0, 1.0, NODES)
+    more = np.concatenate([columns, np.broadcast_to(shift, (1, SWEEPS, 1, NODES))], axis=2)
+    reach, u = np.array([[0.5, 0.0], [0.0, 1.0], [2.0, -1.0]]), np.array([0.7, 2.0])
+    doubts = np.arange(SWEEPS * (FREEDOMS + 1)).reshape(SWEEPS, -1)[:, :FREEDOMS].ravel()
+    extras = np.zeros((SWEEPS, FREEDOMS + 1, 2))
+    extras[:, FREEDOMS] = reach
+    prior = prior_precision(precisions)
+    equations = normal_equations(weight, one, left, more)
+    log, chi2, mean, covariance = equations.integrated(doubts, prior).with_extras(extras.reshape(-1, 2), u)
+    combined = np.column_stack([np.eye(SWEEPS * (FREEDOMS + 1))[:, doubts], extras.reshape(-1, 2)])
+    whole = np.zeros((doubts.size + 2, doubts.size + 2))
+    whole[:-2, :-2], whole[-2:, -2:] = prior, np.diag(u**-2.0)
+    at_once = replace(equations, gram=combined.T @ equations.gram @ combined, pull=equations.pull @ combined)
+    expected_log, expected_chi2 = at_once.log_evidence(whole)
+    assert_allclose([log, chi2], [expected_log[0], expected_chi2[0]], rtol=1e-9, atol=0)
+    spread = np.linalg.inv(at_once.gram[0] + whole)
+    assert_allclose(covariance, spread[-2:, -2:], rtol=1e-9, atol=0)
+    assert_allclose(mean, (spread @ at_once.pull[0])[-2:], rtol=1e-9, atol=0)
+    alone = equations.integrated(doubts, prior).with_extras(np.zeros((whole.shape[0] + 1, 0)), np.zeros(0))
+    expected_log, expected_chi2 = equations.only(doubts).log_evidence(prior)
+    assert_allclose(alone[:2], [expected_log[0], expected_chi2[0]], rtol=1e-9, atol=0)
