@@ -18,6 +18,7 @@ from functools import cache
 from typing import Final, Literal, TypeAlias
 
 import numpy as np
+from numpy.typing import NDArray
 
 from benchtool.model import FloatArray, readonly
 
@@ -28,6 +29,8 @@ __all__ = [
     "Law",
     "cubic_drop_db",
     "cubic_level_db",
+    "drops_and_slopes",
+    "drops_by_law",
     "rapp_drop_and_slope",
     "rapp_drop_db",
     "rapp_level_db",
@@ -63,12 +66,17 @@ def rapp_drop_and_slope(excess_db: FloatArray, p: FloatArray) -> tuple[FloatArra
 
     `p` must broadcast against the levels.
     """
+    drop, level, fallen = _rapp_past_p1db(excess_db, p)
+    rest = 1.0 / (1.0 + fallen)
+    return drop, np.where(level > 0.0, rest, 1.0 - rest)
+
+
+def _rapp_past_p1db(excess_db: FloatArray, p: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return the drop in dB, the logarithm of (g|x|/Vs)^2p, and the exponential of that logarithm's negative size."""
     scale = p * (np.log(10.0) / 10.0)
     level = scale * excess_db + np.log(np.expm1(scale))
     fallen = np.exp(-np.abs(level))
-    rest = 1.0 / (1.0 + fallen)
-    drop = (np.maximum(level, 0.0) + np.log1p(fallen)) / scale
-    return drop, np.where(level > 0.0, rest, 1.0 - rest)
+    return (np.maximum(level, 0.0) + np.log1p(fallen)) / scale, level, fallen
 
 
 def rapp_level_db(drop_db: FloatArray | float, p: float) -> FloatArray:
@@ -196,3 +204,31 @@ def _laws() -> tuple[Law, ...]:
 
 LAWS: Final = _laws()
 """The laws a device may follow where nothing is known of it; their shares sum to one."""
+
+_RAPP_P: Final = np.array([law.p for law in LAWS if law.p is not None])
+
+
+def drops_and_slopes(excess_db: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Return drop of gain in dB and its derivative by level by each of :data:`LAWS`, (..., laws), all at once.
+
+    `excess_db` are levels in dB over the 1 dB compression point, (...,).
+    """
+    drop = np.empty((*excess_db.shape, len(LAWS)))
+    slope = np.empty_like(drop)
+    rapp = _RAPP_P.size
+    drop[..., :rapp], slope[..., :rapp] = rapp_drop_and_slope(excess_db[..., None], _RAPP_P)
+    for index, law in enumerate(LAWS[rapp:], start=rapp):
+        drop[..., index], slope[..., index] = law.drop_and_slope_past_p1db(excess_db)
+    return drop, slope
+
+
+def drops_by_law(excess_db: FloatArray, index: NDArray[np.integer]) -> FloatArray:
+    """Return the drop of gain in dB at levels over the 1 dB point, (..., n), by laws of :data:`LAWS`, `index` (n,)."""
+    drop = np.empty(excess_db.shape)
+    mine = np.flatnonzero(index < _RAPP_P.size)
+    drop[..., mine] = _rapp_past_p1db(excess_db[..., mine], _RAPP_P[index[mine]])[0]
+    for number, law in enumerate(LAWS[_RAPP_P.size :], start=_RAPP_P.size):
+        mine = np.flatnonzero(index == number)
+        if mine.size:
+            drop[..., mine] = law.drop_past_p1db(excess_db[..., mine])
+    return drop

@@ -79,6 +79,7 @@ def estimate_onset(
     true_p1db, true_gain = belief.p1db + shift, belief.gain + lift
     lift_db = float(np.median(true_gain)) - 1.0
     curve_drive, curve_gain = _curve(belief, drive, confidence)
+    drops = drop_at(belief, all_drives)
     return Onset(
         at_hz=table.at_hz,
         confidence=confidence,
@@ -88,8 +89,8 @@ def estimate_onset(
         output_p1db_dbm=_p1db(table, belief, basis, true_p1db + true_gain - 1.0, confidence, lift_db),
         safe_drive_dbm=_safe(table, belief, basis, shift, confidence),
         small_signal_gain_db=_interval(true_gain, confidence),
-        reference=_proof(belief, reference, float(all_drives[every.files.index(reference)]), drive, confidence),
-        points=_points(every, belief, all_drives, allow.spoiled, confidence),
+        reference=_proof(reference, drops[every.files.index(reference)], drive, confidence),
+        points=_points(every, drops, all_drives, allow.spoiled, confidence),
         curve_drive_dbm=curve_drive,
         curve_gain_db=curve_gain,
     )
@@ -152,17 +153,15 @@ def _safe_excess() -> FloatArray:
     return np.array([float(law.excess_over_p1db(SAFE_DROP_DB)) for law in LAWS])
 
 
-def _proof(belief: Belief, reference: str, at_dbm: float, drive: FloatArray, confidence: float) -> ReferenceProof:
+def _proof(reference: str, drop: FloatArray, drive: FloatArray, confidence: float) -> ReferenceProof:
     if np.ptp(drive) < _SAME_DRIVE_DB:
         return ReferenceProof(reference, False, Estimate(None))
-    drop = drop_at(belief, at_dbm)
-    high = float(np.quantile(drop, confidence))
-    low = float(np.quantile(drop, 1.0 - confidence))
-    return ReferenceProof(reference, high <= SAFE_DROP_DB, Estimate(float(np.median(drop)), low, high))
+    low, middle, high = (float(each) for each in np.quantile(drop, [1.0 - confidence, 0.5, confidence]))
+    return ReferenceProof(reference, high <= SAFE_DROP_DB, Estimate(middle, low, high))
 
 
 def _points(
-    table: DriveTable, belief: Belief, drive: FloatArray, spoiled: Collection[str], confidence: float
+    table: DriveTable, drops: FloatArray, drive: FloatArray, spoiled: Collection[str], confidence: float
 ) -> tuple[DrivePoint, ...]:
     reach = NormalDist().inv_cdf(0.5 + confidence / 2.0)
     of_pads = np.array([pad.u_db * pad.reads for pad in table.pads]).reshape(-1, table.sweeps)
@@ -172,7 +171,7 @@ def _points(
     points = []
     for k, file in enumerate(table.files):
         gain = float(table.design_gain_db[k])
-        drop = _interval(drop_at(belief, float(drive[k])), confidence)
+        drop = _interval(drops[k], confidence)
         turned = float(wrap_degrees(float(table.design_phase_deg[k] - table.design_phase_deg[0])))
         # A reading's doubt is the same share in magnitude and in phase.
         doubt = reach * float(np.degrees(np.log(10.0) / 20.0 * from_first[k]))

@@ -18,7 +18,7 @@ from typing import Final
 import numpy as np
 
 from benchtool.drive_table import DriveTable, PadDoubt
-from benchtool.limiting import LAWS
+from benchtool.limiting import LAWS, drops_and_slopes, drops_by_law
 from benchtool.model import FloatArray
 
 __all__ = [
@@ -37,8 +37,9 @@ __all__ = [
 BELOW_DB: Final = 15.0
 ABOVE_DB: Final = 25.0
 """How far below the lowest and above the highest drive the 1 dB point is looked for."""
-_GRID: Final = 161
-_DRAWS: Final = 8000
+_GRID: Final = 101
+_DRAWS: Final = 4000
+"""Drawn evenly along the grid, so that quantiles wander far less than those of as many independent draws."""
 _SEEN: Final = 4.5
 """Logarithm of the likelihood ratio, compressed against not, from which compression counts as seen (3 sigma)."""
 _LAW_DOUBT: Final = 0.02
@@ -124,9 +125,8 @@ def _forward(factor: FloatArray, right: FloatArray) -> FloatArray:
 def _drops(table: DriveTable, p1db: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Return drop and slope of each sweep for every 1 dB point and law, (points * laws, k), laws running fastest."""
     excess = design_drive(table) - p1db[:, None]
-    drop, slope = zip(*(law.drop_and_slope_past_p1db(excess) for law in LAWS), strict=True)
-    flat = (-1, table.sweeps)
-    return np.stack(drop, axis=1).reshape(flat), np.stack(slope, axis=1).reshape(flat)
+    drop, slope = (np.moveaxis(each, -1, 1).reshape(-1, table.sweeps) for each in drops_and_slopes(excess))
+    return drop, slope
 
 
 def design_drive(table: DriveTable) -> FloatArray:
@@ -182,10 +182,20 @@ def believe(table: DriveTable, allow: Allowances, confidence: float, rng: np.ran
     place = grid[index // len(LAWS)] + step * rng.uniform(-0.5, 0.5, _DRAWS)
     gain = small_signal[index] + np.sqrt(variance[index]) * rng.standard_normal(_DRAWS)
     reach = NormalDist().inv_cdf(confidence)
-    whole, along = scan[0]
-    refused = np.flatnonzero(along < clean - 0.5 * reach**2)
-    bound = float(whole[refused[-1]]) if refused.size else float("-inf")
+    bound = _last_below(*scan[0], clean - 0.5 * reach**2)
     return Belief(place, index % len(LAWS), gain, allow.at_output is not None or best - clean > _SEEN, bound)
+
+
+def _last_below(grid: FloatArray, values: FloatArray, limit: float) -> float:
+    """Return where values on a grid last rise through a limit; minus infinity where none lies below it."""
+    below = np.flatnonzero(values < limit)
+    if below.size == 0:
+        return float("-inf")
+    last = int(below[-1])
+    if last == grid.size - 1:
+        return float(grid[-1])
+    way = (limit - values[last]) / (values[last + 1] - values[last])
+    return float(grid[last] + way * (grid[last + 1] - grid[last]))
 
 
 def common_errors(
@@ -206,10 +216,4 @@ def drop_at(belief: Belief, drive_dbm: float | FloatArray, draws: int | None = N
     """Return draws of the drop of gain at one nominal drive or at several, (..., draws)."""
     every = slice(None) if draws is None else slice(None, None, max(1, belief.p1db.size // draws))
     place, index = belief.p1db[every], belief.law[every]
-    drives = np.asarray(drive_dbm)[..., None]
-    drop = np.empty((*drives.shape[:-1], place.size))
-    for i, law in enumerate(LAWS):
-        mine = np.flatnonzero(index == i)
-        if mine.size:
-            drop[..., mine] = law.drop_past_p1db(drives - place[mine])
-    return drop
+    return drops_by_law(np.asarray(drive_dbm)[..., None] - place, index)
