@@ -116,6 +116,7 @@ class TraceCopies:
         moves: Mapping[str, FloatArray],
     ) -> None:
         self._model, self._scale, self._sizes, self._added = model, scale, sizes, added
+        self._found: dict[Fit, ComplexArray] = {}
         self._noise: dict[str, ComplexArray] = {}
         for source, moving in moves.items():
             if source in model.noises:
@@ -127,6 +128,11 @@ class TraceCopies:
 
     def coefficients(self, fit: Fit) -> ComplexArray:
         """Return the Legendre coefficients of a fit to the copies, (copies, degree + 1)."""
+        if fit not in self._found:
+            self._found[fit] = self._coefficients(fit)
+        return self._found[fit]
+
+    def _coefficients(self, fit: Fit) -> ComplexArray:
         if self._model.by_samples:
             first = int(np.searchsorted(self._model.used, fit.start))
             return fit.coefficients_of_samples(self._samples[:, first : first + fit.stop - fit.start])

@@ -5,16 +5,18 @@ Distributions are those of :mod:`benchtool.doubts`; how copies come to the figur
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import replace
+from functools import cache
 from typing import Final, TypeAlias
 
 import numpy as np
+from numpy.typing import NDArray
 
 from benchtool.copies import TraceCopies, TraceModel
 from benchtool.doubts import Joint, SweepDoubts, pad_doubt_db
 from benchtool.figures import FigurePlan
-from benchtool.model import ComplexArray, FloatArray, Sweep
+from benchtool.model import ComplexArray, FloatArray, Sweep, readonly
 from benchtool.noise import NOISE_FREE
 from benchtool.pads import PadBank
 from benchtool.units import from_db
@@ -50,14 +52,17 @@ class _Draws:
         """Whether a source is drawn in any trial."""
         return any(only in (None, source) for only in self._sources)
 
-    def even(self) -> FloatArray:
-        """Return draws that are uniform from 0 to 1, in each segment one from each of as many equal strata.
+    def _strata(self, source: str) -> Iterator[tuple[slice, NDArray[np.int64]]]:
+        """Yield each segment in which a source is drawn, with the places of as many equal strata in random order.
 
-        So a budget of few trials has the spread of its source right. M. D. McKay, R. J. Beckman, W. J. Conover,
-        Technometrics 21(2), 1979, 239-245 (Latin hypercube sampling).
+        One draw from each stratum gives a budget of few trials the spread of its source right. M. D. McKay,
+        R. J. Beckman, W. J. Conover, Technometrics 21(2), 1979, 239-245 (Latin hypercube sampling).
         """
-        strata = np.concatenate([self.rng.permutation(count) / count for count in self._counts])
-        return np.asarray(strata + self.rng.uniform(size=self.trials) / np.repeat(self._counts, self._counts))
+        start = 0
+        for only, count in zip(self._sources, self._counts, strict=True):
+            if only in (None, source):
+                yield slice(start, start + count), self.rng.permutation(count)
+            start += count
 
     def pad_db(self, name: str) -> FloatArray:
         """Return the error of a pad's loss, dB: the same for every sweep."""
@@ -66,7 +71,11 @@ class _Draws:
             if not self.active(f"pad {name}"):
                 self._pads[name] = np.zeros(self.trials)
             elif is_limit:
-                self._pads[name] = width * (2.0 * self.even() - 1.0) * self.moves(f"pad {name}")
+                error = np.zeros(self.trials)
+                for segment, strata in self._strata(f"pad {name}"):
+                    share = (strata + self.rng.uniform(size=strata.size)) / strata.size
+                    error[segment] = width * (2.0 * share - 1.0)
+                self._pads[name] = error
             else:
                 self._pads[name] = self.rng.normal(0.0, width, self.trials) * self.moves(f"pad {name}")
         return self._pads[name]
@@ -80,11 +89,10 @@ class _Draws:
 
     def phasor(self, source: str) -> ComplexArray:
         """Return vectors of unit length and unknown phase; of no length where their source stands still."""
-        if not self.active(source):
-            return np.zeros(self.trials, np.complex128)
-        angle, length = 2.0 * np.pi * self.even(), self.moves(source)
-        turned = np.empty(self.trials, np.complex128)
-        turned.real, turned.imag = length * np.cos(angle), length * np.sin(angle)  # dearer as a complex exp
+        turned = np.zeros(self.trials, np.complex128)
+        for segment, strata in self._strata(source):
+            # Evenly round the circle, from an angle of their own: a sine and a cosine of each would cost five times it.
+            turned[segment] = _round_the_circle(strata.size)[strata] * np.exp(2j * np.pi * self.rng.uniform())
         return turned
 
     def reading(self, reading_db: float) -> ComplexArray:
@@ -96,6 +104,13 @@ class _Draws:
         both = self.rng.normal(0.0, spread, (self.trials, 2)) @ np.array([1.0, 1j])
         factor: ComplexArray = np.exp(both * self.moves("reading"))
         return factor
+
+
+@cache
+def _round_the_circle(count: int) -> ComplexArray:
+    """Return so many vectors of unit length at even angles."""
+    vectors: ComplexArray = readonly(np.exp(2j * np.pi * np.arange(count) / count), np.complex128)
+    return vectors
 
 
 class SweepCopier:

@@ -20,7 +20,7 @@ from benchtool.model import ComplexArray, FloatArray
 
 __all__ = ["LevelSearch", "Levels"]
 
-_EVERY: Final = 4
+_EVERY: Final = 6
 _EVERY_OF_PIECES: Final = 2
 """Of one fit every so many nodes are looked at; several side by side have fewer nodes each, and more are."""
 _DB: Final = 10.0 / float(np.log(10.0))

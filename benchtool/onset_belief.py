@@ -16,6 +16,7 @@ from types import MappingProxyType
 from typing import Final
 
 import numpy as np
+from numpy.typing import NDArray
 
 from benchtool.drive_table import DriveTable, PadDoubt
 from benchtool.limiting import LAWS, drops_and_slopes, drops_by_law
@@ -143,7 +144,7 @@ class Belief:
     """
 
     p1db: FloatArray
-    law: FloatArray
+    law: NDArray[np.intp]
     gain: FloatArray
     seen: bool
     bound_dbm: float

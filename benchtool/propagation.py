@@ -52,15 +52,21 @@ def coverage_interval(values: FloatArray, confidence: float, *, shortest: bool =
 
     Source: JCGM 101:2008, clauses 7.7.2 and 5.3.3 to 5.3.4.
     """
-    count = values.size
-    held = min(max(round(confidence * count), 1), count - 1) if count > 1 else 0
-    start = (count - held) // 2
+    first, last = _held(values.size, confidence)
     if shortest:
-        ordered = np.sort(values)
-        start = int(np.argmin(ordered[held:] - ordered[: count - held]))
+        ordered, held = np.sort(values), last - first
+        first = int(np.argmin(ordered[held:] - ordered[: values.size - held]))
+        last = first + held
     else:
-        ordered = np.partition(values, (start, min(start + held, count - 1)))
-    return float(ordered[start]), float(ordered[min(start + held, count - 1)])
+        ordered = np.partition(values, (first, last))
+    return float(ordered[first]), float(ordered[last])
+
+
+def _held(count: int, confidence: float) -> tuple[int, int]:
+    """Return the ranks between which a share `confidence` of so many trials lies, with as many left out either side."""
+    held = min(max(round(confidence * count), 1), count - 1) if count > 1 else 0
+    first = (count - held) // 2
+    return first, min(first + held, count - 1)
 
 
 def interval_about(value: float, values: FloatArray, confidence: float) -> tuple[float, float]:
@@ -139,8 +145,9 @@ def settled(values: FloatArray, confidence: float) -> bool:
     """
     if values.size < 3 * _BATCH or np.isnan(values).any():
         return False
-    batches = np.array_split(values, values.size // _BATCH)
-    ends = np.array([coverage_interval(batch, confidence) for batch in batches])
+    batches = values[: values.size - values.size % _BATCH].reshape(-1, _BATCH)
+    first, last = _held(_BATCH, confidence)
+    ends = np.partition(batches, (first, last), axis=1)[:, [first, last]]
     spread = np.std(ends, axis=0, ddof=1) / np.sqrt(len(batches))
     return bool(np.all(2.0 * spread <= _SETTLED * np.std(values, ddof=1) + 1e-300))
 

@@ -29,6 +29,8 @@ __all__ = ["FigureTrials", "figure_trials"]
 _BUDGET_TRIALS: Final = 250
 _BIAS_TRIALS: Final = 1000
 """Trials with noise alone: their median is the bias that is taken out, and must not wander."""
+_TOGETHER: Final = 1500
+"""Trials of a budget that are made in one go, where they take no more memory than others."""
 _MAY_BE_LOST: Final = 0.01
 _BLOCK_BYTES: Final = 48e6
 """Memory that the samples of one block of copies may take."""
@@ -92,17 +94,22 @@ def figure_trials(
         deciding=[key for key in deciding if key in known],
         size=size,
     )
-    alone = _alone(block, doubts.sources, size)
+    alone = _alone(block, doubts.sources, _TOGETHER if size == BLOCK else size)
+    sought = {key: figure for key, figure in figures.items() if figure.value is not None and key in raw}
+    departures = {source: _departures(sought, trial) for source, trial in alone.items()}
+    variances = {source: _variances(departure) for source, departure in departures.items()}
     finished: dict[str, Figure] = {}
     values: dict[str, FloatArray] = {}
     findings: list[Finding] = []
+    places = {key: place for place, key in enumerate(sought)}
     for key, figure in figures.items():
-        if figure.value is None or key not in raw:
+        if key not in places:
             finished[key] = figure
             continue
-        departures = {source: _departure(figure, trial[key]) for source, trial in alone.items()}
-        values[key] = _possible_values(figure, raw[key], _noise_bias(departures["noise"]))
-        finished[key] = _with_interval(figure, values[key], confidence, _shares(departures))
+        place = places[key]
+        values[key] = _possible_values(figure, raw[key], _noise_bias(departures["noise"][place]))
+        budget = _shares({source: float(variance[place]) for source, variance in variances.items()})
+        finished[key] = _with_interval(figure, values[key], confidence, budget)
         lost = float(np.mean(~np.isfinite(values[key])))
         if figure.bound is None and finished[key].bound is not None:
             findings.append(_lost_finding(measured.file, key, lost))
@@ -132,13 +139,21 @@ def _alone(
     }
 
 
+def _departures(figures: Mapping[str, Figure], trials: Mapping[str, FloatArray]) -> FloatArray:
+    """Return how far trials of figures are from their values, (figures, trials)."""
+    return np.array([_departure(figure, trials[key]) for key, figure in figures.items()])
+
+
 def _departure(figure: Figure, trial: FloatArray) -> FloatArray:
     """Return how far trials are from the value; a lost trial lies beyond every limit on the side where it went."""
     assert figure.value is not None
     departure = trial - figure.value
     if figure.id == "phase":
         departure = 180.0 - np.mod(180.0 - departure, 360.0)
-    return np.where(np.isnan(departure), _LOST_SIDE.get(figure.id, 1.0) * np.inf, departure)
+    lost = np.isnan(departure)
+    if np.any(lost):
+        departure[lost] = _LOST_SIDE.get(figure.id, 1.0) * np.inf
+    return np.asarray(departure)
 
 
 def _possible_values(figure: Figure, trial: FloatArray, noise_bias: float) -> FloatArray:
@@ -195,14 +210,18 @@ def _lost_finding(file: str, key: str, lost: float) -> Finding:
     )
 
 
-def _shares(departures: Mapping[str, FloatArray]) -> dict[str, float]:
+def _variances(departures: FloatArray) -> FloatArray:
+    """Return the variance of each row, (figures,); trials in which a figure was lost do not count."""
+    if np.all(np.isfinite(departures)):
+        return np.asarray(np.var(departures, axis=1))
+    finite = [row[np.isfinite(row)] for row in departures]
+    return np.array([float(np.var(row)) if row.size > 1 else 0.0 for row in finite])
+
+
+def _shares(variances: Mapping[str, float]) -> dict[str, float]:
     """Return the share of each source in the variance, summing to one, the largest first; empty without variance."""
-    variance = {}
-    for source, departure in departures.items():
-        finite = departure[np.isfinite(departure)]
-        variance[source] = float(np.var(finite)) if finite.size > 1 else 0.0
-    total = sum(variance.values())
+    total = sum(variances.values())
     if total <= 0.0:
         return {}
-    ordered = sorted(variance.items(), key=lambda item: -item[1])
+    ordered = sorted(variances.items(), key=lambda item: -item[1])
     return {source: part / total for source, part in ordered if part > 0.0}
