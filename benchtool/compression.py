@@ -54,7 +54,8 @@ class MeasuredSweep:
     @cached_property
     def passband(self) -> PassbandFigures:
         """Peak, edges and what follows from them, as this sweep shows them."""
-        return self.plan.passband.figures(self.result.sweep.s21)
+        plan, sweep = self.plan, self.result.sweep
+        return plan.seen if sweep is plan.sweep else plan.passband.figures(sweep.s21)
 
     @cached_property
     def signal_to_noise_db(self) -> float | None:
@@ -100,8 +101,7 @@ def _over_band(sweep: Sweep, plan: FigurePlan, nodes: FloatArray) -> FloatArray:
     curve, low, high = plan.passband.curve, float(nodes[0]), float(nodes[-1])
     if not curve.grid_hz[0] <= low <= high <= curve.grid_hz[-1]:
         curve = fit_curve(sweep.frequency_hz, sweep.s21, low, high, plan.noise.get("S21"))
-    level = np.maximum(curve.level_on_grid(sweep.s21), _NO_SIGNAL_DB)
-    return np.asarray(np.interp(nodes, curve.grid_hz, level))
+    return np.maximum(curve.level_at(sweep.s21, nodes), _NO_SIGNAL_DB)
 
 
 def _band(sweeps: Sequence[MeasuredSweep], reference: MeasuredSweep, at_hz: float) -> FloatArray:

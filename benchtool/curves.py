@@ -7,6 +7,7 @@ is a linear operator: on copies of the trace it is a matrix product. Which fits 
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cache, cached_property
 from typing import Final, Protocol, TypeAlias
@@ -87,10 +88,6 @@ class Fit:
         """Return the basis functions at frequencies (...,), (..., degree + 1)."""
         return np.asarray(legendre.legvander((frequency_hz - self.centre_hz) / self.scale_hz, self.degree))
 
-    def slope_basis(self, frequency_hz: FloatArray) -> FloatArray:
-        """Return the derivative of the basis with frequency, (..., degree + 1), per Hz."""
-        return np.asarray(self.basis(frequency_hz) @ _legendre_slopes(self.degree) / self.scale_hz)
-
 
 @cache
 def _legendre_slopes(degree: int) -> FloatArray:
@@ -108,13 +105,21 @@ class _Nodes:
     fit: Fit
     basis: FloatArray
     """(degree + 1, g)."""
-    slope_basis: FloatArray
-    turn: ComplexArray
+    frequency_hz: FloatArray
 
     @classmethod
     def of(cls, fit: Fit, frequency_hz: FloatArray) -> _Nodes:
-        turn = np.conj(rotation(frequency_hz, fit.delay_s))
-        return cls(fit, fit.basis(frequency_hz).T, fit.slope_basis(frequency_hz).T, turn)
+        return cls(fit, fit.basis(frequency_hz).T, frequency_hz)
+
+    @cached_property
+    def slope_basis(self) -> FloatArray:
+        """The derivative of the basis with frequency, (degree + 1, g), per Hz."""
+        return np.asarray(_legendre_slopes(self.fit.degree).T @ self.basis / self.fit.scale_hz)
+
+    @cached_property
+    def turn(self) -> ComplexArray:
+        """What puts the mean delay back, (g,)."""
+        return np.conj(rotation(self.frequency_hz, self.fit.delay_s))
 
     def evaluate(self, s: Trace) -> tuple[ComplexArray, FloatArray]:
         """Return S (its mean delay put back) and the group delay in s, both (..., g)."""
@@ -172,7 +177,15 @@ class Curve:
 
     def level_on_grid(self, s: Trace) -> FloatArray:
         """Return the level of S in dB on `grid_hz`, (..., g), at a fraction of the cost of :meth:`on_grid`."""
-        levels = [nodes.level_db(s) for nodes in self._grid_nodes]
+        return self._levels(self._grid_nodes, s)
+
+    def level_at(self, s: Trace, frequency_hz: FloatArray) -> FloatArray:
+        """Return the level of S in dB at rising frequencies (g,), (..., g), of a trace or copies of it."""
+        return self._levels(self._nodes(frequency_hz), s)
+
+    @staticmethod
+    def _levels(stretches: Sequence[_Nodes], s: Trace) -> FloatArray:
+        levels = [nodes.level_db(s) for nodes in stretches]
         return levels[0] if len(levels) == 1 else np.concatenate(levels, axis=-1)
 
     def at(self, s: Trace, frequency_hz: float) -> tuple[ComplexArray, FloatArray]:

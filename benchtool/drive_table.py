@@ -265,7 +265,7 @@ def _levels(sweep: MeasuredSweep, at_hz: FloatArray, *, alike: bool) -> tuple[Fl
     noise = np.sqrt(np.sum((weights * sigma[near]) ** 2, axis=1))
     if not alike:
         curve = fit_curve(f, s21, float(at_hz[0]), float(at_hz[-1]), sweep.plan.noise.get("S21"))
-        gain = np.interp(at_hz, curve.grid_hz, curve.level_on_grid(s21))
+        gain = curve.level_at(s21, at_hz)
         misfit = np.max([fit.misfit for fit in curve.fits])
         noise = np.hypot(noise, to_decibels * misfit / 10.0 ** (gain / 20.0))
     return np.asarray(gain), np.asarray(noise)

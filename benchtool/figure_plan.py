@@ -16,7 +16,7 @@ from benchtool.curves import Curve, Trace
 from benchtool.fitting import fit_curve
 from benchtool.model import Bound, ComplexArray, Figure, Finding, FloatArray, Kind, Sweep
 from benchtool.noise import NoiseModel, estimate_noise
-from benchtool.response import Passband
+from benchtool.response import Passband, PassbandFigures
 from benchtool.sheet import FIGURE_UNITS
 from benchtool.units import format_si, to_db
 
@@ -60,9 +60,13 @@ class FigurePlan:
     drives alone.
     """
 
+    sweep: Sweep
+    """The sweep that was planned on."""
     kind: Kind
     design_hz: float
     passband: Passband
+    seen: PassbandFigures
+    """Figures of that sweep."""
     design_curve: Curve
     noise: Mapping[str, NoiseModel | None]
     """Noise seen in each measured parameter."""

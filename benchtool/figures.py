@@ -78,7 +78,7 @@ def plan_figures(
             _add_target(build, passband, target, peak_hz)
         return build
 
-    return FigurePlan(kind, at, passband, design_curve, noise, collect)
+    return FigurePlan(sweep, kind, at, passband, peak, design_curve, noise, collect)
 
 
 def _add_transmission(
@@ -88,7 +88,7 @@ def _add_transmission(
     headline = "insertion_loss" if build.kind == "filter" else "gain"
     build.add(headline, _given(headline) if inside else None, parameters=at)
     # At the end of the window the true peak lies beyond it: the figures are limits.
-    low_end = not band.peak_inside and band.peak_range[0] == _peak_node(build, band)
+    low_end = float(figures.peak_frequency) <= band.search.low_hz
     peak_bound: Bound | None = None if band.peak_inside else ("at most" if low_end else "at least")
     build.add("peak_gain", _given("peak_gain"), None if band.peak_inside else "at least")
     build.add("peak_frequency", _given("peak_frequency"), peak_bound)
@@ -120,12 +120,6 @@ def _aperture(build: FigureBuilder, figures: PassbandFigures) -> float:
     phase_noise = 0.0 if noise is None else float(noise.sigma(np.array(level))) / level / np.sqrt(2.0)
     share = float(np.clip((1.5 * phase_noise) ** (1.0 / 3.0), 0.05, 0.25))
     return max(share * width, 2.0 * spacing)
-
-
-def _peak_node(build: FigureBuilder, band: Passband) -> int:
-    value, _ = band.curve.on_grid(build.sweep.s21)
-    start, stop = band.peak_range
-    return int(np.argmax(np.abs(value[start:stop]))) + start
 
 
 def _add_match(build: FigureBuilder, band: Passband, edges: PassbandFigures, at_hz: float, inside: bool) -> None:

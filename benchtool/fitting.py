@@ -33,6 +33,8 @@ _ACCEPTED_EXCESS: Final = 1.6
 """Residual variance over noise variance up to which a fit is taken to describe the trace."""
 _WORTH_SPLITTING: Final = 14
 _ROUNDING: Final = 1e-11
+_DEPENDENT: Final = 1e-10
+"""A direction that is new to this share of the largest only is none."""
 _GOOD_ENOUGH: Final = 2e-5
 """Misfit, as a share of the largest sample, below which no fit is split: 0.0002 dB."""
 _TINY: Final = 1e-150
@@ -74,7 +76,13 @@ def _scores(residual: FloatArray, samples: int, floor: float) -> FloatArray:
 def _solver(basis: FloatArray, weight: FloatArray) -> FloatArray:
     """Return the matrix that takes samples to the coefficients of their weighted least-squares polynomial."""
     scaled = weight / np.max(weight)
-    return np.asarray(np.linalg.pinv(basis * scaled[:, None], rcond=1e-14) * scaled)
+    weighted = basis * scaled[:, None]
+    axes, triangle = np.linalg.qr(weighted)
+    size = np.abs(np.diagonal(triangle))
+    if np.min(size) > _DEPENDENT * np.max(size):
+        return np.asarray(np.linalg.solve(triangle, axes.T) * scaled)
+    # Samples without weight may leave too few to tell the coefficients apart.
+    return np.asarray(np.linalg.pinv(weighted, rcond=1e-14) * scaled)
 
 
 @dataclass(frozen=True)

@@ -44,6 +44,7 @@ class LevelSearch:
         used = np.unique([*range(0, grid.size, every), grid.size - 1, first, last])
         self.nodes_hz = grid[used]
         self.first, self.last = int(np.searchsorted(used, first)), int(np.searchsorted(used, last))
+        self.low_hz, self.high_hz = float(grid[first]), float(grid[last])
         self.fits = curve.fits
         self.borders = np.array([fit.low_hz for fit in curve.fits[1:]])
         owner = np.searchsorted(self.borders, self.nodes_hz, side="right")
@@ -74,10 +75,13 @@ class Levels:
         At a limit, the level there.
         """
         search, nodes, node = self._search, self._search.nodes_hz, self._top
-        below, above = np.maximum(node - 1, search.first), np.minimum(node + 1, search.last)
-        low, at, high = nodes[below], nodes[node], nodes[above]
+        middle = np.minimum(np.maximum(node, search.first + 1), search.last - 1)
+        if search.last - search.first < 2:
+            level = _DB * np.log(self._power[self._rows, node])
+            return nodes[node].reshape(self._shape), level.reshape(self._shape)
+        low, at, high = nodes[middle - 1], nodes[middle], nodes[middle + 1]
         with np.errstate(divide="ignore", invalid="ignore"):
-            left, top, right = (np.log(self._power[self._rows, place]) for place in (below, node, above))
+            left, top, right = (np.log(self._power[self._rows, middle + step]) for step in (-1, 0, 1))
             # The vertex of the parabola through three nodes, and from there a step of Newton's.
             fall, rise = (top - left) / (at - low), (right - top) / (high - at)
             vertex = 0.5 * (low + at) + 0.5 * fall * (high - low) / (fall - rise)
@@ -88,8 +92,9 @@ class Levels:
             found = inside & (bend < 0.0) & (start + step >= low) & (start + step <= high)
             level += 0.5 * slope * step
         # Where no top is found between the nodes, it is at one.
-        found &= level >= top
-        at, level = np.where(found, start + step, at), np.where(found, level, top)
+        best = np.maximum(np.maximum(left, top), right)
+        found &= level >= best
+        at, level = np.where(found, start + step, nodes[node]), np.where(found, level, best)
         return at.reshape(self._shape), (_DB * level).reshape(self._shape)
 
     def falls_from_top(self, target_db: FloatArray, direction: int) -> FloatArray:

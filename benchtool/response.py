@@ -23,7 +23,7 @@ from numpy.typing import NDArray
 
 from benchtool.curves import Curve, Trace
 from benchtool.fitting import fit_curve
-from benchtool.level_search import LevelSearch
+from benchtool.level_search import Levels, LevelSearch
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import NoiseModel, moving_average, rotation, trend_delay
 from benchtool.units import HALF_POWER_DB, to_db
@@ -43,10 +43,20 @@ class PassbandFigures:
 
     peak_gain: FloatArray
     peak_frequency: FloatArray
-    lower_edge: FloatArray
-    upper_edge: FloatArray
     curve: Curve
     trace: Trace
+    levels: Levels
+    """The trace's; they serve what is worked out only when it is asked for."""
+
+    @cached_property
+    def lower_edge(self) -> FloatArray:
+        """Half-power point below the peak, Hz."""
+        return self.levels.falls_from_top(self.peak_gain - HALF_POWER_DB, -1)
+
+    @cached_property
+    def upper_edge(self) -> FloatArray:
+        """Half-power point above the peak, Hz."""
+        return self.levels.falls_from_top(self.peak_gain - HALF_POWER_DB, +1)
 
     @cached_property
     def _smooth(self) -> tuple[ComplexArray, FloatArray]:
@@ -97,8 +107,7 @@ class Passband:
 
     curve: Curve
     search: LevelSearch
-    peak_range: tuple[int, int]
-    """Slice of the curve's grid in which the peak is looked for."""
+    """Where on the curve the peak is looked for."""
     lower_inside: bool
     upper_inside: bool
     peak_inside: bool
@@ -114,8 +123,7 @@ class Passband:
         """Return the figures of a trace, or of copies of it."""
         levels = self.search.levels(s21)
         peak_frequency, peak_gain = levels.highest()
-        lower, upper = (levels.falls_from_top(peak_gain - HALF_POWER_DB, direction) for direction in (-1, 1))
-        return PassbandFigures(peak_gain, peak_frequency, lower, upper, self.curve, s21)
+        return PassbandFigures(peak_gain, peak_frequency, self.curve, s21, levels)
 
 
 def _gather(values: FloatArray, index: np.ndarray) -> FloatArray:
@@ -237,23 +245,15 @@ def plan_passband(
     low_end = min(max(low_hz - margin, float(frequency_hz[skirts[0]])), low_hz - 1.5 * step)
     high_end = max(min(high_hz + margin, float(frequency_hz[skirts[1]])), high_hz + 1.5 * step)
     curve = fit_curve(frequency_hz, s21, low_end, high_end, noise, points=_FEW_POINTS)
-    grid = curve.grid_hz
-    first, last = (window_hz[0], window_hz[1]) if window_hz else (grid[0], grid[-1])
-    a = int(np.searchsorted(grid, first, side="left"))
-    b = int(np.searchsorted(grid, last, side="right"))
-    if b <= a:
-        a, b = min(a, grid.size - 1), min(a, grid.size - 1) + 1
-    value, _ = curve.on_grid(s21)
-    top = int(np.argmax(np.abs(value[a:b]))) + a
-    peak_inside = grid[0] < grid[top] < grid[-1] and a < top < b - 1
+    search = LevelSearch(curve, *(window_hz or (-np.inf, np.inf)))
+    at_hz = float(search.levels(s21).highest()[0])
     humps = _humps(frequency_hz, level, (start, stop), (left, right), float(level[peak]))
     return Passband(
         curve,
-        LevelSearch(curve, float(grid[a]), float(grid[b - 1])),
-        (a, b),
+        search,
         lower_inside,
         upper_inside,
-        bool(peak_inside),
+        search.low_hz < at_hz < search.high_hz,
         inside,
         float(frequency_hz[0]),
         float(frequency_hz[-1]),
