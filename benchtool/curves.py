@@ -18,13 +18,13 @@ from numpy.polynomial import legendre
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import rotation
 
-__all__ = ["Copies", "Curve", "Fit", "Trace"]
+__all__ = ["Copies", "Curve", "Fit", "Trace", "times"]
 
 _ROWS_AT_A_TIME: Final = 128
 """Copies worked on together: arrays larger than a processor's cache cost several times as much to fill."""
 
 
-def _times(data: ComplexArray, matrix: FloatArray) -> ComplexArray:
+def times(data: ComplexArray, matrix: FloatArray) -> ComplexArray:
     """Return complex data (..., m) times a real matrix (m, k): two real products cost half of one complex product."""
     product = np.empty((*data.shape[:-1], matrix.shape[1]), np.complex128)
     product.real = data.real @ matrix
@@ -82,7 +82,7 @@ class Fit:
 
     def project(self, values: ComplexArray) -> ComplexArray:
         """Return the coefficients, (..., degree + 1), of values in the form that is fitted, (..., stop - start)."""
-        return _times(values, self.solve.T)
+        return times(values, self.solve.T)
 
     def basis(self, frequency_hz: FloatArray) -> FloatArray:
         """Return the basis functions at frequencies (...,), (..., degree + 1)."""
@@ -124,8 +124,8 @@ class _Nodes:
     def evaluate(self, s: Trace) -> tuple[ComplexArray, FloatArray]:
         """Return S (its mean delay put back) and the group delay in s, both (..., g)."""
         coefficients = self.fit.coefficients(s)
-        polynomial = _times(coefficients, self.basis)
-        slope = _times(coefficients, self.slope_basis)
+        polynomial = times(coefficients, self.basis)
+        slope = times(coefficients, self.slope_basis)
         with np.errstate(divide="ignore", invalid="ignore"):
             angle_slope = np.imag(slope / polynomial) / (2 * np.pi)
             value = 1.0 / polynomial if self.fit.inverse else polynomial

@@ -21,7 +21,7 @@ from typing import Final
 import numpy as np
 from numpy.polynomial import legendre
 
-from benchtool.curves import Curve, Fit
+from benchtool.curves import Curve, Fit, times
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import NOISE_FREE, NoiseModel, line_delay, moving_average, rotation, trend_delay
 
@@ -68,8 +68,11 @@ def _widen(frequency_hz: FloatArray, low_hz: float, high_hz: float, points: int)
 
 
 def _scores(residual: FloatArray, samples: int, floor: float) -> FloatArray:
-    """Return the corrected Akaike criterion of complex fits of degree 0, 1, …; both parts of a sample count."""
-    observed, free = 2 * samples, 2 * (np.arange(residual.size) + 1) + 1
+    """Return the corrected Akaike criterion of complex fits of degree 0, 1, …, (..., degrees).
+
+    Both parts of a sample count.
+    """
+    observed, free = 2 * samples, 2 * (np.arange(residual.shape[-1]) + 1) + 1
     return np.asarray(observed * np.log(residual + floor) + 2 * free + 2 * free * (free + 1) / (observed - free - 1))
 
 
@@ -107,22 +110,22 @@ def _best_form(
     magnitude = np.abs(trace)
     floor = max((_ROUNDING * float(np.max(magnitude / sigma))) ** 2, 1e-300)
     best: _Form | None = None
-    turns = [(delay, trace * rotation(f, delay)) for delay in dict.fromkeys((0.0, line_delay_s, trend_delay(f, trace)))]
+    # A resonance must keep its own delay (1/S is a straight line only then), a cable must lose it: try each.
+    delays = list(dict.fromkeys((0.0, line_delay_s, trend_delay(f, trace))))
+    turned = np.array([trace * rotation(f, delay) for delay in delays])
     for inverse in (True, False) if inverse_allowed else (False,):
         weight = magnitude**2 / sigma if inverse else 1.0 / sigma
         # One orthogonal basis serves every degree: the residual falls by the power of each new direction.
         axes, _ = np.linalg.qr(full * (weight / np.max(weight))[:, None])
-        # A resonance must keep its own delay (1/S is a straight line only then), a cable must lose it: try each.
-        for delay, turned in turns:
-            target = weight / turned if inverse else weight * turned
-            along = axes.T @ target
-            left = target - axes @ along
-            tail = np.abs(along) ** 2
-            rest = float(np.sum(np.abs(left) ** 2)) + np.append(np.cumsum(tail[::-1])[-2::-1], 0.0)
-            scores = _scores(rest / f.size, f.size, floor)
-            degree = int(np.argmin(scores))
-            if best is None or scores[degree] < best.score:
-                best = _Form(float(scores[degree]), inverse, delay, degree)
+        target = weight / turned if inverse else weight * turned
+        along = times(target, axes)
+        left = np.sum(np.abs(target - times(along, axes.T)) ** 2, axis=1, keepdims=True)
+        beyond = np.cumsum(np.abs(along[:, :0:-1]) ** 2, axis=1)[:, ::-1]
+        scores = _scores(np.append(left + beyond, left, axis=1) / f.size, f.size, floor)
+        place, degree = np.unravel_index(int(np.argmin(scores)), scores.shape)
+        score = float(scores[place, degree])
+        if best is None or score < best.score:
+            best = _Form(score, inverse, delays[int(place)], int(degree))
     assert best is not None
     return best
 

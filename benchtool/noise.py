@@ -38,7 +38,7 @@ _NEIGHBOURS: Final = 31
 _CLEARLY_LESS: Final = 0.6
 """A rival estimate replaces the first one only when it is below this share of it, so that picking adds no bias."""
 _ROUNDS: Final = 30
-_STILL: Final = 1e-10
+_STILL: Final = 1e-6
 """Share of the additive variance below which a round that moved no more was the last."""
 _SINGULAR: Final = 1e-12
 """Determinant, over the product of its diagonal, below which power varies too little to tell the two parts apart."""
