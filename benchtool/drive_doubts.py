@@ -15,6 +15,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Final
 
 import numpy as np
@@ -76,6 +77,13 @@ class MismatchDoubt:
 
 def parabola(f: FloatArray, at_hz: FloatArray) -> tuple[NDArray[np.intp], FloatArray]:
     """Return the samples nearest each frequency, (j, m), and the weights that give a parabola's value there, (j, m)."""
+    return _parabola(np.ascontiguousarray(f).tobytes(), np.ascontiguousarray(at_hz).tobytes())
+
+
+@lru_cache(maxsize=12)
+def _parabola(frequencies: bytes, wanted: bytes) -> tuple[NDArray[np.intp], FloatArray]:
+    """Return the same, kept by the frequencies: the sweeps of a bench mostly share them."""
+    f, at_hz = np.frombuffer(frequencies, np.float64), np.frombuffer(wanted, np.float64)
     count = min(2 * HALF_FIT + 1, f.size)
     middle = np.argmin(np.abs(f - at_hz[:, None]), axis=1)
     first = np.clip(middle - HALF_FIT, 0, f.size - count)
@@ -83,7 +91,7 @@ def parabola(f: FloatArray, at_hz: FloatArray) -> tuple[NDArray[np.intp], FloatA
     x = f[near] - at_hz[:, None]
     x = x / np.maximum(np.max(np.abs(x), axis=1, keepdims=True), 1e-300)
     powers = x[..., None] ** np.arange(min(3, count))
-    return near, np.asarray(np.linalg.pinv(powers)[:, 0])
+    return readonly(near, np.intp), readonly(np.linalg.pinv(powers)[:, 0], np.float64)
 
 
 def _smoothed(f: FloatArray, trace: ComplexArray, at_hz: FloatArray) -> ComplexArray:

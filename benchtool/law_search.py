@@ -57,7 +57,8 @@ _LAWS: Final = ((Law("tanh"), 0.1), (Law("cubic"), 0.1), (None, 0.8))
 _GRIDS: Final = ((16, 5), (12, 6), (12, 7))
 """Places of the 1 dB point, and values of Rapp's p, that each look takes in."""
 _NEWTON_STEPS: Final = 6
-_STILL_DB: Final = 1e-4
+_STILL_DB: Final = 0.01
+"""A step of Newton's method smaller than this is the last: what is left is the square of it."""
 _MATTERS: Final = 12.0
 _HOPELESS: Final = 30.0
 """Logarithm of how much less likely than the best a law may be and still be looked at more closely."""
@@ -175,6 +176,7 @@ class _LawRange:
         self._below, self._above = 0.5 * (low - high), 0.5 * (high - low)
         self.found: list[Weighed] = []
         self.log_best, self.between = -np.inf, 0.0
+        self._score = np.zeros((0, 0))
 
     def grid(self, places: int, shapes: int) -> tuple[FloatArray, FloatArray]:
         """Return 1 dB points and logarithms of p, (n,) each, the latter running fastest."""
@@ -205,11 +207,13 @@ class _LawRange:
             np.maximum(score, grid - best, out=score)
             if best > self.log_best:
                 self.log_best, self.between = best, _between(grid)
-        if self.found:
-            self._close_in(score)
+        self._score = score
 
-    def _close_in(self, score: FloatArray) -> None:
-        """Keep what matters of the grid by its logarithms less their best, and learn the ridge."""
+    def close_in(self) -> None:
+        """Keep what matters of the last grid, and learn the ridge."""
+        score = self._score
+        if not self.found:
+            return
         step = self._offset[1] - self._offset[0]
         row, lift = _tops(score)
         top = self._p1db[0] + row * step
@@ -261,6 +265,8 @@ class _LevelSearch:
         """Weigh a grid of so many 1 dB points, and values of p, for each law that is still live."""
         if not self.live:
             return
+        for law in self.live:
+            law.close_in()
         grids = [law.grid(places, shapes) for law in self.live]
         ends = np.cumsum([place.size for place, _ in grids])
         parts = [slice(int(end) - place.size, int(end)) for end, (place, _) in zip(ends, grids, strict=True)]

@@ -299,11 +299,13 @@ def _worth(bench: _Bench, line: Line, likely: Sequence[Rival]) -> float:
         variance += (rectangular_u(width) if is_limit else width) ** 2
     floor = 0.1
     worth = 0.0
-    for a, b in combinations(likely, 2):
-        apart = _foretold(bench, line, a) - _foretold(bench, line, b)
-        doubt = variance + _foretold_u(bench, line, a) ** 2 + _foretold_u(bench, line, b) ** 2
-        share = max(a.probability, floor) * max(b.probability, floor)
-        worth += share * (1.0 - float(np.exp(-(apart**2) / (8.0 * doubt))))
+    foretold = [
+        (max(rival.probability, floor), _foretold(bench, line, rival), _foretold_u(bench, line, rival))
+        for rival in likely
+    ]
+    for (one, gain, u), (other, other_gain, other_u) in combinations(foretold, 2):
+        doubt = variance + u**2 + other_u**2
+        worth += one * other * (1.0 - float(np.exp(-((gain - other_gain) ** 2) / (8.0 * doubt))))
     return worth
 
 
