@@ -97,56 +97,74 @@ class Levels:
         at, level = np.where(found, start + step, nodes[node]), np.where(found, level, best)
         return at.reshape(self._shape), (_DB * level).reshape(self._shape)
 
-    def falls_from_top(self, target_db: FloatArray, direction: int) -> FloatArray:
-        """Return where the level first falls below `target_db` (...,), going from the highest node in `direction`.
+    def edges(self, target_db: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Return where the level first falls below `target_db` (...,), going down and going up from the highest node.
 
         NaN where it stays above to the end of the curve.
         """
-        return self._falls(target_db, self._top, direction)
+        below, above = (self._first_below(target_db, self._top, direction) for direction in (-1, 1))
+        inner, outer = (np.stack(pair) for pair in zip(below, above, strict=True))
+        lower, upper = self._crossing(target_db, inner, outer)
+        return lower.reshape(self._shape), upper.reshape(self._shape)
 
     def falls(self, target_db: FloatArray, direction: int) -> FloatArray:
-        """Return where the level first falls below `target_db` (...,), from one end of the curve to the other."""
+        """Return where the level first falls below `target_db` (...,), from one end of the curve to the other.
+
+        NaN where it nowhere does.
+        """
         end = 0 if direction > 0 else self._power.shape[1] - 1
-        return self._falls(target_db, np.full(len(self._power), end), direction)
+        inner, outer = self._first_below(target_db, np.full(len(self._power), end), direction)
+        return self._crossing(target_db, inner, outer).reshape(self._shape)
 
     @cached_property
     def _top(self) -> NDArray[np.intp]:
         search = self._search
         return np.asarray(search.first + np.argmax(self._power[:, search.first : search.last + 1], axis=1), np.intp)
 
-    def _falls(self, target_db: FloatArray, start: NDArray[np.intp], direction: int) -> FloatArray:
-        nodes, target = self._search.nodes_hz, np.reshape(target_db, -1) / _DB
+    def _first_below(
+        self, target_db: FloatArray, start: NDArray[np.intp], direction: int
+    ) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
+        """Return the last node above a level and the first below, (n,) each; twice the same where there is none."""
+        nodes, target = self._search.nodes_hz, np.exp(np.reshape(target_db, -1) / _DB)
         # Only the side that some copy looks at is gone through.
         first, last = (int(np.min(start)), nodes.size) if direction > 0 else (0, int(np.max(start)) + 1)
         places = np.arange(first, last)
         beyond = places > start[:, None] if direction > 0 else places < start[:, None]
-        below = beyond & (self._power[:, first:last] < np.exp(target)[:, None])
-        found = below.any(axis=1)
+        below = beyond & (self._power[:, first:last] < target[:, None])
         outer = first + np.argmax(below, axis=1) if direction > 0 else last - 1 - np.argmax(below[:, ::-1], axis=1)
-        outer = np.where(found, outer, nodes.size - 1 if direction > 0 else 0)
-        inner = np.minimum(np.maximum(outer - direction, 0), nodes.size - 1)
-        low, high = (nodes[inner], nodes[outer]) if direction > 0 else (nodes[outer], nodes[inner])
+        found = below[self._rows, outer - first]
+        return np.where(found, outer - direction, start), np.where(found, outer, start)
+
+    def _crossing(self, target_db: FloatArray, inner: NDArray[np.intp], outer: NDArray[np.intp]) -> FloatArray:
+        """Return where the level passes a target between two nodes, (..., n); NaN where they are one."""
+        nodes, target = self._search.nodes_hz, np.reshape(target_db, -1) / _DB
+        from_hz, to_hz = nodes[inner], nodes[outer]
+        low, high = np.minimum(from_hz, to_hz), np.maximum(from_hz, to_hz)
         with np.errstate(divide="ignore", invalid="ignore"):
             above, under = (np.log(self._power[self._rows, place]) - target for place in (inner, outer))
-            at = nodes[inner] + (nodes[outer] - nodes[inner]) * above / (above - under)
+            at = from_hz + (to_hz - from_hz) * above / (above - under)
             level, slope = self._logarithm(at, 1)
             at = np.minimum(np.maximum(at - (level - target) / slope, low), high)
             # Already so near that the slope will do for another step.
             (level,) = self._logarithm(at, 0)
             at = np.minimum(np.maximum(at - (level - target) / slope, low), high)
-        return np.asarray(np.where(found, at, np.nan)).reshape(self._shape)
+        return np.asarray(np.where(inner == outer, np.nan, at))
 
     def _logarithm(self, at_hz: FloatArray, order: int) -> list[FloatArray]:
-        """Return the logarithm of each copy's power at a frequency of its own, and its derivatives up to `order`."""
+        """Return the logarithm of each copy's power at a frequency of its own, and its derivatives up to `order`.
+
+        All of the shape of `at_hz`, (n,) or (m, n).
+        """
         if len(self._pieces) == 1:
-            return self._pieces[0].logarithm(at_hz, self._rows, order)
-        owner = np.searchsorted(self._search.borders, at_hz, side="right")
-        found = np.empty((order + 1, at_hz.size))
+            return self._pieces[0].logarithm(at_hz, slice(None), order)
+        at, rows = at_hz.ravel(), np.broadcast_to(self._rows, at_hz.shape).ravel()
+        owner = np.searchsorted(self._search.borders, at, side="right")
+        found = np.empty((order + 1, at.size))
         for place, piece in enumerate(self._pieces):
             mine = np.flatnonzero(owner == place)
             if mine.size:
-                found[:, mine] = piece.logarithm(at_hz[mine], mine, order)
-        return list(found)
+                found[:, mine] = piece.logarithm(at[mine], rows[mine], order)
+        return list(found.reshape(order + 1, *at_hz.shape))
 
 
 class _Polynomials:
@@ -159,12 +177,17 @@ class _Polynomials:
         np.matmul(_powers(fit.degree), coefficients.real.T, out=self._powers[:, 0])
         np.matmul(_powers(fit.degree), coefficients.imag.T, out=self._powers[:, 1])
 
-    def logarithm(self, at_hz: FloatArray, rows: NDArray[np.intp], order: int) -> list[FloatArray]:
-        """Return the logarithm of the power of S of some copies at a frequency each, and derivatives up to `order`."""
-        fit = self._fit
-        powers = self._powers if rows.size == self._powers.shape[2] else self._powers[:, :, rows]
+    def logarithm(self, at_hz: FloatArray, rows: NDArray[np.intp] | slice, order: int) -> list[FloatArray]:
+        """Return the logarithm of the power of S of some copies at a frequency each, and derivatives up to `order`.
+
+        Frequencies are (n,) or, several for each copy, (m, n).
+        """
+        fit, powers = self._fit, self._powers[:, :, rows]
+        if at_hz.ndim > 1:
+            powers = powers[:, :, None]
         way = (at_hz - fit.centre_hz) / fit.scale_hz
-        terms = [powers[-1].copy(), *(np.zeros_like(powers[-1]) for _ in range(order))]
+        terms = [np.zeros((2, *at_hz.shape)) for _ in range(order + 1)]
+        terms[0] += powers[-1]
         for power in powers[-2::-1]:
             for higher, lower in zip(terms[:0:-1], terms[-2::-1], strict=True):
                 higher *= way

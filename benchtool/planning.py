@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from functools import cached_property
 from itertools import combinations
 from typing import Final
 
@@ -20,6 +21,7 @@ from benchtool.doubts import pad_doubt_db
 from benchtool.drive_results import NextSweep, Purpose
 from benchtool.drive_table import DriveTable
 from benchtool.limiting import Law
+from benchtool.model import FloatArray
 from benchtool.onset import SAFE_DROP_DB
 from benchtool.pad_stock import IN_EFFECT_DB, STEP_UP_DB, Line, in_effect_taken, port2_limit_dbm, possible_lines
 from benchtool.pads import PadBank, change_of_line
@@ -61,6 +63,11 @@ class _Bench:
     @property
     def table(self) -> DriveTable:
         return self.study.table
+
+    @cached_property
+    def drives(self) -> FloatArray:
+        """Drive of each sweep as its nodes have it on average, dBm, (k,)."""
+        return np.asarray(np.mean(self.table.drive_dbm, axis=1))
 
 
 def plan_next(
@@ -192,7 +199,7 @@ def _lift_signal(bench: _Bench) -> NextSweep | None:
         return None
     noisy = int(np.argmax(table.buried))
     safe = bench.study.onset.safe_drive_dbm.low
-    drives = np.mean(table.drive_dbm, axis=1)
+    drives = bench.drives
     lines = [
         line
         for line in bench.candidates
@@ -218,8 +225,7 @@ def _relieve_receiver(bench: _Bench) -> NextSweep | None:
         return None
     level = np.max(table.drive_dbm + table.gain_db, axis=1) - table.output_loss_db
     worst = int(np.argmax(level))
-    drives = np.mean(table.drive_dbm, axis=1)
-    relieved = (np.abs(drives - drives[worst]) <= IN_EFFECT_DB) & (level <= level[worst] - _RELIEVED_DB)
+    relieved = (np.abs(bench.drives - bench.drives[worst]) <= IN_EFFECT_DB) & (level <= level[worst] - _RELIEVED_DB)
     if verdict.code == "receiver-overload" and verdict.confidence >= _SURE and np.any(relieved):
         return None
     strongest = bench.entries[worst]
@@ -254,11 +260,12 @@ def _separate(bench: _Bench) -> NextSweep | None:
     if verdict.code == "pad-value-suspect":
         likely = likely[:1] + [rival for rival in verdict.rivals if rival.cause == "clean"]
     lines = [line for line in bench.candidates if line.drive <= float(np.max(bench.table.drive_dbm)) + 0.5]
-    swept = np.mean(bench.table.drive_dbm, axis=1)
 
     def cost(line: Line) -> float:
         # What two sweeps tell differs by less than can be known; then the one at a drive that was swept is surer.
-        return 0.001 * min(10.0, float(np.min(np.abs(swept - line.drive)))) - round(_worth(bench, line, likely), 2)
+        return 0.001 * min(10.0, float(np.min(np.abs(bench.drives - line.drive)))) - round(
+            _worth(bench, line, likely), 2
+        )
 
     best = _best([line for line in lines if not _taken(bench, line)], cost)
     if best is None or _worth(bench, best, likely) < _WORTH * sum(rival.probability for rival in likely):
@@ -299,10 +306,7 @@ def _worth(bench: _Bench, line: Line, likely: Sequence[Rival]) -> float:
         variance += (rectangular_u(width) if is_limit else width) ** 2
     floor = 0.1
     worth = 0.0
-    foretold = [
-        (max(rival.probability, floor), _foretold(bench, line, rival), _foretold_u(bench, line, rival))
-        for rival in likely
-    ]
+    foretold = [(max(r.probability, floor), _foretold(bench, line, r), _foretold_u(bench, line, r)) for r in likely]
     for (one, gain, u), (other, other_gain, other_u) in combinations(foretold, 2):
         doubt = variance + u**2 + other_u**2
         worth += one * other * (1.0 - float(np.exp(-((gain - other_gain) ** 2) / (8.0 * doubt))))
@@ -320,7 +324,7 @@ def _foretold_u(bench: _Bench, line: Line, rival: Rival) -> float:
 def _foretold(bench: _Bench, line: Line, rival: Rival) -> float:
     """Return the corrected gain at the design frequency that a rival expects of a line, dB."""
     table = bench.table
-    read, drive = table.design_gain_db, np.mean(table.drive_dbm, axis=1)
+    read, drive = table.design_gain_db, bench.drives
     value = rival.value or 0.0
     if rival.cause == "clean":
         return float(np.mean(read))
@@ -341,7 +345,7 @@ def _foretold(bench: _Bench, line: Line, rival: Rival) -> float:
 
 def _reference_drive(bench: _Bench) -> float:
     k = bench.table.files.index(bench.study.onset.reference.file)
-    return float(np.mean(bench.table.drive_dbm[k]))
+    return float(bench.drives[k])
 
 
 def _prove_reference(bench: _Bench) -> NextSweep | None:
@@ -374,7 +378,7 @@ def _bracket(bench: _Bench) -> NextSweep | None:
     """Propose a drive near the 1 dB point, where it is known only widely or as a bound."""
     onset = bench.study.onset
     p1db = onset.input_p1db_dbm
-    drives = np.mean(bench.table.drive_dbm, axis=1)
+    drives = bench.drives
     if p1db.value is None:
         return None
     if p1db.bound is None and p1db.low is not None and p1db.high is not None:

@@ -27,7 +27,7 @@ __all__ = [
     "settled",
 ]
 
-BLOCK: Final = 1000
+BLOCK: Final = 2000
 """Trials drawn at a time: enough to make the calls cheap, few enough to stay in a processor's cache."""
 _BATCH: Final = 250
 """Trials whose interval counts as one look at the ends, when it is asked whether they have settled."""

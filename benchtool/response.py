@@ -49,14 +49,18 @@ class PassbandFigures:
     """The trace's; they serve what is worked out only when it is asked for."""
 
     @cached_property
+    def _edges(self) -> tuple[FloatArray, FloatArray]:
+        return self.levels.edges(self.peak_gain - HALF_POWER_DB)
+
+    @property
     def lower_edge(self) -> FloatArray:
         """Half-power point below the peak, Hz."""
-        return self.levels.falls_from_top(self.peak_gain - HALF_POWER_DB, -1)
+        return self._edges[0]
 
-    @cached_property
+    @property
     def upper_edge(self) -> FloatArray:
         """Half-power point above the peak, Hz."""
-        return self.levels.falls_from_top(self.peak_gain - HALF_POWER_DB, +1)
+        return self._edges[1]
 
     @cached_property
     def _smooth(self) -> tuple[ComplexArray, FloatArray]:

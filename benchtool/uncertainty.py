@@ -29,7 +29,7 @@ __all__ = ["FigureTrials", "figure_trials"]
 _BUDGET_TRIALS: Final = 250
 _BIAS_TRIALS: Final = 1000
 """Trials with noise alone: their median is the bias that is taken out, and must not wander."""
-_TOGETHER: Final = 1500
+_TOGETHER: Final = 2500
 """Trials of a budget that are made in one go, where they take no more memory than others."""
 _MAY_BE_LOST: Final = 0.01
 _BLOCK_BYTES: Final = 48e6
