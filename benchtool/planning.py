@@ -263,9 +263,8 @@ def _separate(bench: _Bench) -> NextSweep | None:
 
     def cost(line: Line) -> float:
         # What two sweeps tell differs by less than can be known; then the one at a drive that was swept is surer.
-        return 0.001 * min(10.0, float(np.min(np.abs(bench.drives - line.drive)))) - round(
-            _worth(bench, line, likely), 2
-        )
+        step = float(np.min(np.abs(bench.drives - line.drive)))
+        return 0.001 * min(10.0, step) - round(_worth(bench, line, likely), 2)
 
     best = _best([line for line in lines if not _taken(bench, line)], cost)
     if best is None or _worth(bench, best, likely) < _WORTH * sum(rival.probability for rival in likely):
@@ -304,8 +303,7 @@ def _worth(bench: _Bench, line: Line, likely: Sequence[Rival]) -> float:
     for pad in weights:
         width, is_limit = pad_doubt_db(pad, bench.bank)
         variance += (rectangular_u(width) if is_limit else width) ** 2
-    floor = 0.1
-    worth = 0.0
+    floor, worth = 0.1, 0.0
     foretold = [(max(r.probability, floor), _foretold(bench, line, r), _foretold_u(bench, line, r)) for r in likely]
     for (one, gain, u), (other, other_gain, other_u) in combinations(foretold, 2):
         doubt = variance + u**2 + other_u**2
