@@ -107,7 +107,8 @@ class FigurePlan:
             traces: Traces = {f"S{i + 1}{j + 1}": s[..., i, j, :] for i in range(2) for j in range(2)}
         else:
             traces = s
-        found = self._passband_figures(traces["S21"])
+        band = self.seen if s is self.sweep.s else self.passband.figures(traces["S21"])
+        found = self._passband_figures(band)
         for key, extractor in self.extractors.items():
             if extractor is not None and key not in found:
                 found[key] = extractor(self, traces, found)
@@ -135,15 +136,14 @@ class FigurePlan:
             )
         return figures
 
-    def _passband_figures(self, s21: Trace) -> dict[str, FloatArray]:
+    def _passband_figures(self, found: PassbandFigures) -> dict[str, FloatArray]:
         band = self.passband
-        found = band.figures(s21)
         lower = found.lower_edge if band.lower_inside else np.full_like(found.peak_gain, band.start_hz)
         upper = found.upper_edge if band.upper_inside else np.full_like(found.peak_gain, band.stop_hz)
         with np.errstate(divide="ignore", invalid="ignore"):
             centre = np.sqrt(lower * upper)
             loaded_q = centre / (upper - lower)
-        gain, delay = self.design_curve.at(s21, self.design_hz)
+        gain, delay = self.design_curve.at(found.trace, self.design_hz)
         return {
             "gain": to_db(gain),
             "insertion_loss": -to_db(gain),

@@ -19,9 +19,8 @@ from itertools import pairwise
 from typing import Final
 
 import numpy as np
-from numpy.polynomial import legendre
 
-from benchtool.curves import Curve, Fit, times
+from benchtool.curves import Curve, Fit, legendre_basis, times
 from benchtool.model import ComplexArray, FloatArray
 from benchtool.noise import NOISE_FREE, NoiseModel, line_delay, moving_average, rotation, trend_delay
 
@@ -141,7 +140,7 @@ def _fit(frequency_hz: FloatArray, s: ComplexArray, low_hz: float, high_hz: floa
     sigma = noise.sigma(magnitude) if noisy else np.ones_like(magnitude)
     smallest = _INVERSE_NEEDS_SNR * float(np.max(sigma)) if noisy else 1e-9 * float(np.max(magnitude))
     level = float(np.min(moving_average(magnitude, 5))) if noisy else float(np.min(magnitude))
-    full = np.asarray(legendre.legvander((f - centre) / scale, max(min(MAX_DEGREE, f.size - 3), 0)), np.float64)
+    full = legendre_basis((f - centre) / scale, max(min(MAX_DEGREE, f.size - 3), 0))
     form = _best_form(f, trace, full, sigma, level > max(smallest, _TINY), context.line_delay_s)
     turn = rotation(f, form.delay_s)
     target = 1.0 / (trace * turn) if form.inverse else trace * turn

@@ -8,14 +8,13 @@ line on a skirt: from there one step or two, kept between the neighbouring nodes
 from __future__ import annotations
 
 from collections.abc import Sequence
-from functools import cache, cached_property
+from functools import cached_property
 from typing import Final
 
 import numpy as np
-from numpy.polynomial import legendre
 from numpy.typing import NDArray
 
-from benchtool.curves import Curve, Fit, Trace
+from benchtool.curves import Curve, Fit, Trace, legendre_powers
 from benchtool.model import ComplexArray, FloatArray
 
 __all__ = ["LevelSearch", "Levels"]
@@ -174,8 +173,8 @@ class _Polynomials:
         self._fit = fit
         # Powers before copies, so that Horner's scheme runs along rows, and in real numbers, as the frequencies are.
         self._powers = np.empty((fit.degree + 1, 2, len(coefficients)))
-        np.matmul(_powers(fit.degree), coefficients.real.T, out=self._powers[:, 0])
-        np.matmul(_powers(fit.degree), coefficients.imag.T, out=self._powers[:, 1])
+        np.matmul(legendre_powers(fit.degree), coefficients.real.T, out=self._powers[:, 0])
+        np.matmul(legendre_powers(fit.degree), coefficients.imag.T, out=self._powers[:, 1])
 
     def logarithm(self, at_hz: FloatArray, rows: NDArray[np.intp] | slice, order: int) -> list[FloatArray]:
         """Return the logarithm of the power of S of some copies at a frequency each, and derivatives up to `order`.
@@ -218,12 +217,3 @@ def _power(fit: Fit, coefficients: ComplexArray, basis: FloatArray) -> FloatArra
         with np.errstate(divide="ignore"):
             np.reciprocal(power, out=power)
     return power
-
-
-@cache
-def _powers(degree: int) -> FloatArray:
-    """Return the Legendre polynomials up to `degree` in powers of their argument, each a column, (degree + 1)²."""
-    found = np.zeros((degree + 1, degree + 1))
-    for column in range(degree + 1):
-        found[: column + 1, column] = legendre.leg2poly(np.eye(degree + 1)[column])[: column + 1]
-    return found

@@ -7,7 +7,7 @@ rivals times how far apart they say it will read, in units of its doubt (one les
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from functools import cached_property
 from itertools import combinations
 from typing import Final
@@ -271,7 +271,7 @@ def _separate(bench: _Bench) -> NextSweep | None:
         return None
     foremost = {rival.cause: rival for rival in reversed(likely)}
     shown = "; ".join(
-        f"{quantity(_foretold(bench, best, rival), 'dB')} if {_named(rival)}" for rival in foremost.values()
+        f"{quantity(_foretold(bench, best, rival)[0], 'dB')} if {_named(rival)}" for rival in foremost.values()
     )
     return _as_proposal(bench, best, "separate-causes", f"which cause it is, by the gain it reads: {shown}")
 
@@ -304,41 +304,37 @@ def _worth(bench: _Bench, line: Line, likely: Sequence[Rival]) -> float:
         width, is_limit = pad_doubt_db(pad, bench.bank)
         variance += (rectangular_u(width) if is_limit else width) ** 2
     floor, worth = 0.1, 0.0
-    foretold = [(max(r.probability, floor), _foretold(bench, line, r), _foretold_u(bench, line, r)) for r in likely]
+    foretold = [(max(rival.probability, floor), *_foretold(bench, line, rival)) for rival in likely]
     for (one, gain, u), (other, other_gain, other_u) in combinations(foretold, 2):
         doubt = variance + u**2 + other_u**2
         worth += one * other * (1.0 - float(np.exp(-((gain - other_gain) ** 2) / (8.0 * doubt))))
     return worth
 
 
-def _foretold_u(bench: _Bench, line: Line, rival: Rival) -> float:
-    """Return the standard uncertainty of a foretold gain for the 1 dB point, or the pad, not being known better, dB."""
-    if rival.value is None or rival.u is None:
-        return 0.0
-    ends = [_foretold(bench, line, replace(rival, value=rival.value + sign * rival.u)) for sign in (-1.0, 1.0)]
-    return abs(ends[1] - ends[0]) / 2.0
+def _foretold(bench: _Bench, line: Line, rival: Rival) -> tuple[float, float]:
+    """Return the corrected gain at the design frequency that a rival expects of a line, dB, and its uncertainty.
 
-
-def _foretold(bench: _Bench, line: Line, rival: Rival) -> float:
-    """Return the corrected gain at the design frequency that a rival expects of a line, dB."""
-    table = bench.table
-    read, drive = table.design_gain_db, bench.drives
-    value = rival.value or 0.0
+    That is for the 1 dB point, or the pad, not being known better.
+    """
+    table, read = bench.table, bench.table.design_gain_db
+    value, u = rival.value or 0.0, rival.u or 0.0
     if rival.cause == "clean":
-        return float(np.mean(read))
+        return float(np.mean(read)), 0.0
     if rival.cause == "not-repeating":
         kept = [k for k, file in enumerate(table.files) if file != rival.about]
-        return float(np.mean(read[kept]))
+        return float(np.mean(read[kept])), 0.0
     if rival.cause == "pad-value":
         pad = next(pad for pad in table.pads if pad.name == rival.about)
-        return float(np.mean(read - pad.reads * value)) - _added(bench, line).get(pad.name, 0) * value
-    # The sweep whose level is nearest stands for the gain there, so that only the step from it follows the guessed law.
+        through = float(np.mean(pad.reads)) + _added(bench, line).get(pad.name, 0)
+        return float(np.mean(read)) - through * value, abs(through) * u
     lost = np.append(table.output_loss_db, line.output - line.port2) * (rival.cause == "receiver-overload")
     lift = 0.0 if rival.cause == "input-limited" else read[0]
-    past = np.append(drive, line.drive) + lift - lost - value
-    nearest = int(np.argmin(np.abs(past[:-1] - past[-1])))
-    drop = _GUESS.drop_past_p1db(past)
-    return float(read[nearest] + drop[nearest] - drop[-1])
+    level = np.append(bench.drives, line.drive) + lift - lost
+    # The sweep whose level is nearest stands for the gain there, so that only the step from it follows the guessed law.
+    nearest = int(np.argmin(np.abs(level[:-1] - level[-1])))
+    drop = _GUESS.drop_past_p1db(level[[nearest, -1]] - np.array([[value], [value - u], [value + u]]))
+    gain, low, high = read[nearest] + drop[:, 0] - drop[:, 1]
+    return float(gain), abs(float(high - low)) / 2.0
 
 
 def _reference_drive(bench: _Bench) -> float:

@@ -98,6 +98,7 @@ def figure_trials(
     sought = {key: figure for key, figure in figures.items() if figure.value is not None and key in raw}
     departures = {source: _departures(sought, trial) for source, trial in alone.items()}
     variances = {source: _variances(departure) for source, departure in departures.items()}
+    biases = _noise_biases(departures["noise"])
     finished: dict[str, Figure] = {}
     values: dict[str, FloatArray] = {}
     findings: list[Finding] = []
@@ -107,7 +108,7 @@ def figure_trials(
             finished[key] = figure
             continue
         place = places[key]
-        values[key] = _possible_values(figure, raw[key], _noise_bias(departures["noise"][place]))
+        values[key] = _possible_values(figure, raw[key], float(biases[place]))
         budget = _shares({source: float(variance[place]) for source, variance in variances.items()})
         finished[key] = _with_interval(figure, values[key], confidence, budget)
         lost = float(np.mean(~np.isfinite(values[key])))
@@ -170,14 +171,18 @@ def _possible_values(figure: Figure, trial: FloatArray, noise_bias: float) -> Fl
     return np.asarray(figure.value + _departure(figure, trial) - 2.0 * noise_bias)
 
 
-def _noise_bias(departure: FloatArray) -> float:
-    """Return the bias that noise gives a figure: 0 where the trials do not show one beyond their own scatter."""
-    finite = departure[np.isfinite(departure)]
-    if finite.size < 0.9 * departure.size:
-        return 0.0
-    bias, spread = float(np.median(finite)), float(np.std(finite))
+def _noise_biases(departures: FloatArray) -> FloatArray:
+    """Return the bias that noise gives each figure: 0 where the trials do not show one beyond their own scatter."""
+    finite = np.isfinite(departures)
+    if np.all(finite):
+        bias, spread = np.median(departures, axis=1), np.std(departures, axis=1)
+    else:
+        kept = [row[own] if own.any() else np.zeros(1) for row, own in zip(departures, finite, strict=True)]
+        bias, spread = np.array([[np.median(row), np.std(row)] for row in kept]).T
+    count = np.count_nonzero(finite, axis=1)
     # The median of n trials scatters by 1.25 σ/√n. More than σ is no bias: two humps vie for the peak.
-    return bias if 2.5 * spread / np.sqrt(finite.size) < abs(bias) < _PLAUSIBLE_BIAS * spread else 0.0
+    shown = (count >= 0.9 * departures.shape[1]) & (2.5 * spread < np.abs(bias) * np.sqrt(count))
+    return np.where(shown & (np.abs(bias) < _PLAUSIBLE_BIAS * spread), bias, 0.0)
 
 
 def _with_interval(figure: Figure, values: FloatArray, confidence: float, budget: Mapping[str, float]) -> Figure:
