@@ -5,18 +5,17 @@ Distributions are those of :mod:`benchtool.doubts`; how copies come to the figur
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
-from functools import cache
 from typing import Final, TypeAlias
 
 import numpy as np
-from numpy.typing import NDArray
 
 from benchtool.copies import TraceCopies, TraceModel
 from benchtool.doubts import Joint, SweepDoubts, pad_doubt_db
+from benchtool.even_draws import EvenDraws
 from benchtool.figures import FigurePlan
-from benchtool.model import ComplexArray, FloatArray, Sweep, readonly
+from benchtool.model import ComplexArray, FloatArray, Sweep
 from benchtool.noise import NOISE_FREE
 from benchtool.pads import PadBank
 from benchtool.units import from_db
@@ -33,51 +32,36 @@ class _Draws:
     """Draws of the quantities that bear on all of a sweep, made on demand and kept, (trials,) each."""
 
     def __init__(self, rng: np.random.Generator, segments: Sequence[Segment], bank: PadBank) -> None:
-        self.rng = rng
         self.bank = bank
         self._sources = [only for only, _ in segments]
         self._counts = [count for _, count in segments]
+        self._even = EvenDraws(rng, self._counts)
         self.trials = sum(self._counts)
         self._pads: dict[str, FloatArray] = {}
-        self._moves: dict[str, FloatArray] = {}
+
+    def _lengths(self, source: str) -> list[float]:
+        """Return one for each segment in which a source is drawn, zero for those in which it stands still."""
+        return [float(only in (None, source)) for only in self._sources]
 
     def moves(self, source: str) -> FloatArray:
-        """Return one for each trial in which a source is drawn, zero for those in which it stands still."""
-        if source not in self._moves:
-            moving = [float(only in (None, source)) for only in self._sources]
-            self._moves[source] = np.repeat(moving, self._counts)
-        return self._moves[source]
+        """Return the same for each trial."""
+        return np.repeat(self._lengths(source), self._counts)
 
     def active(self, source: str) -> bool:
         """Whether a source is drawn in any trial."""
         return any(only in (None, source) for only in self._sources)
 
-    def _strata(self, source: str) -> Iterator[tuple[slice, NDArray[np.int64]]]:
-        """Yield each segment in which a source is drawn, with the places of as many equal strata in random order.
-
-        One draw from each stratum gives a budget of few trials the spread of its source right. M. D. McKay,
-        R. J. Beckman, W. J. Conover, Technometrics 21(2), 1979, 239-245 (Latin hypercube sampling).
-        """
-        start = 0
-        for only, count in zip(self._sources, self._counts, strict=True):
-            if only in (None, source):
-                yield slice(start, start + count), self.rng.permutation(count)
-            start += count
-
     def pad_db(self, name: str) -> FloatArray:
         """Return the error of a pad's loss, dB: the same for every sweep."""
         if name not in self._pads:
             width, is_limit = pad_doubt_db(name, self.bank)
-            if not self.active(f"pad {name}"):
+            source = f"pad {name}"
+            if not self.active(source):
                 self._pads[name] = np.zeros(self.trials)
             elif is_limit:
-                error = np.zeros(self.trials)
-                for segment, strata in self._strata(f"pad {name}"):
-                    share = (strata + self.rng.uniform(size=strata.size)) / strata.size
-                    error[segment] = width * (2.0 * share - 1.0)
-                self._pads[name] = error
+                self._pads[name] = width * (2.0 * self._even.uniform() - 1.0) * self.moves(source)
             else:
-                self._pads[name] = self.rng.normal(0.0, width, self.trials) * self.moves(f"pad {name}")
+                self._pads[name] = width * self._even.normal(self._lengths(source)).real
         return self._pads[name]
 
     def pads_factor(self, weights: Mapping[str, int]) -> FloatArray:
@@ -89,11 +73,9 @@ class _Draws:
 
     def phasor(self, source: str) -> ComplexArray:
         """Return vectors of unit length and unknown phase; of no length where their source stands still."""
-        turned = np.zeros(self.trials, np.complex128)
-        for segment, strata in self._strata(source):
-            # Evenly round the circle, from an angle of their own: a sine and a cosine of each would cost five times it.
-            turned[segment] = _round_the_circle(strata.size)[strata] * np.exp(2j * np.pi * self.rng.uniform())
-        return turned
+        if not self.active(source):
+            return np.zeros(self.trials, np.complex128)
+        return self._even.phasors(self._lengths(source))
 
     def reading(self, reading_db: float) -> ComplexArray:
         """Return the factor of a reading's error."""
@@ -101,16 +83,8 @@ class _Draws:
             return np.ones(self.trials, np.complex128)
         # The same share in magnitude and in phase: 0.05 dB is 0.58 %, hence 0.33°.
         spread = np.log(10.0) / 20.0 * reading_db
-        both = self.rng.normal(0.0, spread, (self.trials, 2)) @ np.array([1.0, 1j])
-        factor: ComplexArray = np.exp(both * self.moves("reading"))
+        factor: ComplexArray = np.exp(spread * self._even.normal(self._lengths("reading")))
         return factor
-
-
-@cache
-def _round_the_circle(count: int) -> ComplexArray:
-    """Return so many vectors of unit length at even angles."""
-    vectors: ComplexArray = readonly(np.exp(2j * np.pi * np.arange(count) / count), np.complex128)
-    return vectors
 
 
 class SweepCopier:

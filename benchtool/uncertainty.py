@@ -21,15 +21,15 @@ from benchtool.doubts import SweepDoubts
 from benchtool.draws import Segment, SweepCopier
 from benchtool.model import Bound, Figure, Finding, FloatArray
 from benchtool.pads import PadBank
-from benchtool.propagation import BLOCK, interval_about, run_blocks
+from benchtool.propagation import BATCH, BLOCK, interval_about, run_blocks
 from benchtool.units import from_db, to_db
 
 __all__ = ["FigureTrials", "figure_trials"]
 
-_BUDGET_TRIALS: Final = 250
-_BIAS_TRIALS: Final = 1000
+_BUDGET_TRIALS: Final = 256
+_BIAS_TRIALS: Final = 1024
 """Trials with noise alone: their median is the bias that is taken out, and must not wander."""
-_TOGETHER: Final = 2500
+_TOGETHER: Final = 2560
 """Trials of a budget that are made in one go, where they take no more memory than others."""
 _MAY_BE_LOST: Final = 0.01
 _BLOCK_BYTES: Final = 48e6
@@ -88,7 +88,7 @@ def figure_trials(
 
     size = _block_size(copier.samples)
     raw = run_blocks(
-        lambda count: block([(None, count)]),
+        lambda count: block([(None, min(BATCH, left)) for left in range(count, 0, -BATCH)]),
         confidence,
         trials=trials,
         deciding=[key for key in deciding if key in known],

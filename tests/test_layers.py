@@ -51,6 +51,7 @@ LAYERS = [
     "propagation",
     "doubts",
     "copies",
+    "even_draws",
     "draws",
     "digits",
     "compression",
