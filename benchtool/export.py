@@ -4,13 +4,13 @@ from __future__ import annotations
 
 import csv
 import io
-import json
 import math
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any, Final, Literal
 
 import numpy as np
+from pydantic_core import to_json
 
 from benchtool import __version__
 from benchtool.analysis import correct_sweep, read_all
@@ -216,7 +216,7 @@ def results_json(bench: BenchResult, made: Mapping[str, Any] | None = None) -> b
         "made": {"version": bench.version, "at": bench.made_at, **(made or {})},
         "devices": [_device(device) for device in bench.devices],
     }
-    return (json.dumps(tree, indent=1, ensure_ascii=False, allow_nan=False) + "\n").encode()
+    return to_json(tree, indent=1, inf_nan_mode="null") + b"\n"
 
 
 _COLUMNS: Final = (

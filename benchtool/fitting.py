@@ -89,12 +89,13 @@ def _solver(basis: FloatArray, weight: FloatArray) -> FloatArray:
 
 @dataclass(frozen=True)
 class _Form:
-    """A way to fit a stretch, and its score; the smallest score wins."""
+    """A way to fit a stretch, and its score; the smallest score wins. `smooth` is the magnitude of S that it leaves."""
 
     score: float
     inverse: bool
     delay_s: float
     degree: int
+    smooth: FloatArray
 
 
 def _best_form(
@@ -105,7 +106,10 @@ def _best_form(
     inverse_allowed: bool,
     line_delay_s: float,
 ) -> _Form:
-    """Return the form, delay and degree with the smallest criterion; `full` is the basis of the highest degree."""
+    """Return the form and delay with the smallest criterion, and one degree more than it asks for.
+
+    `full` is the basis of the highest degree.
+    """
     magnitude = np.abs(trace)
     floor = max((_ROUNDING * float(np.max(magnitude / sigma))) ** 2, 1e-300)
     best: _Form | None = None
@@ -121,10 +125,14 @@ def _best_form(
         left = np.sum(np.abs(target - times(along, axes.T)) ** 2, axis=1, keepdims=True)
         beyond = np.cumsum(np.abs(along[:, :0:-1]) ** 2, axis=1)[:, ::-1]
         scores = _scores(np.append(left + beyond, left, axis=1) / f.size, f.size, floor)
-        place, degree = np.unravel_index(int(np.argmin(scores)), scores.shape)
+        place, degree = divmod(int(np.argmin(scores)), scores.shape[1])
         score = float(scores[place, degree])
         if best is None or score < best.score:
-            best = _Form(score, inverse, delays[int(place)], int(degree))
+            degree = min(degree + 1, full.shape[1] - 1)
+            fitted = np.abs(times(along[place, : degree + 1], axes[:, : degree + 1].T)) / weight
+            with np.errstate(divide="ignore"):
+                smooth = 1.0 / fitted if inverse else fitted
+            best = _Form(score, inverse, delays[place], degree, smooth)
     assert best is not None
     return best
 
@@ -139,24 +147,23 @@ def _fit(frequency_hz: FloatArray, s: ComplexArray, low_hz: float, high_hz: floa
     noisy = noise.additive > 0.0 or noise.proportional > 0.0
     sigma = noise.sigma(magnitude) if noisy else np.ones_like(magnitude)
     smallest = _INVERSE_NEEDS_SNR * float(np.max(sigma)) if noisy else 1e-9 * float(np.max(magnitude))
-    level = float(np.min(moving_average(magnitude, 5))) if noisy else float(np.min(magnitude))
+    # A sample that is exactly zero has no inverse, whatever its neighbours.
+    level = float(np.min(moving_average(magnitude, 5))) if noisy and np.all(magnitude) else float(np.min(magnitude))
     full = legendre_basis((f - centre) / scale, max(min(MAX_DEGREE, f.size - 3), 0))
     form = _best_form(f, trace, full, sigma, level > max(smallest, _TINY), context.line_delay_s)
     turn = rotation(f, form.delay_s)
     target = 1.0 / (trace * turn) if form.inverse else trace * turn
-    degree = min(form.degree + 1, full.shape[1] - 1)
-    basis = np.asarray(full[:, : degree + 1])
+    basis = np.asarray(full[:, : form.degree + 1])
     # The weights come from the smooth curve, not from the noisy samples, or they would pull it: once is enough.
-    smooth = magnitude
-    for _ in range(2):
-        spread = noise.sigma(smooth) if noisy else np.ones_like(smooth)
-        solve = _solver(basis, smooth**2 / spread if form.inverse else 1.0 / spread)
-        fitted = target @ solve.T @ basis.T
-        fitted = 1.0 / fitted if form.inverse else fitted
-        smooth = np.maximum(np.abs(fitted), 1e-6 * np.max(magnitude))
+    smooth = np.maximum(form.smooth, 1e-6 * np.max(magnitude))
+    spread = noise.sigma(smooth) if noisy else np.ones_like(smooth)
+    solve = _solver(basis, smooth**2 / spread if form.inverse else 1.0 / spread)
+    fitted = times(times(target, solve.T), basis.T)
+    fitted = 1.0 / fitted if form.inverse else fitted
+    smooth = np.maximum(np.abs(fitted), 1e-6 * np.max(magnitude))
     allowed = np.maximum(np.hypot(noise.sigma(smooth), _GOOD_ENOUGH * np.max(magnitude)), _TINY)
     error = np.abs(fitted - trace * turn) ** 2
-    freedom = max(f.size - degree - 1, 1)
+    freedom = max(f.size - form.degree - 1, 1)
     # A trace of zeros allows no error and has none.
     relative = np.divide(error, allowed**2, out=np.zeros_like(error), where=allowed > 0.0)
     excess = float(np.sum(relative)) / freedom

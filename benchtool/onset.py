@@ -46,7 +46,7 @@ SAFE_DROP_DB: Final = 0.1
 _CLOSE_DB: Final = 6.0
 """Drives either side of the 1 dB point that are no further apart bracket it closely."""
 _CURVE_POINTS: Final = 61
-_CURVE_DRAWS: Final = 500
+_CURVE_DRAWS: Final = 250
 _EDGE_DB: Final = 2.0
 """An interval that comes this near the end of the grid has no end of its own."""
 _SAME_DRIVE_DB: Final = 0.01

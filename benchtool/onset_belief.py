@@ -38,7 +38,8 @@ __all__ = [
 BELOW_DB: Final = 15.0
 ABOVE_DB: Final = 25.0
 """How far below the lowest and above the highest drive the 1 dB point is looked for."""
-_GRID: Final = 101
+_GRIDS: Final = (61, 101)
+"""Places of the 1 dB point that the first look takes in, and the second at what can matter of it."""
 _DRAWS: Final = 4000
 """Drawn evenly along the grid, so that quantiles wander far less than those of as many independent draws."""
 _SEEN: Final = 4.5
@@ -159,22 +160,22 @@ def believe(table: DriveTable, allow: Allowances, confidence: float, rng: np.ran
     clean = float(log_likelihood(table, table.design_gain_db, nothing, nothing, allow)[0][0])
     scan: list[tuple[FloatArray, FloatArray]] = []
     best = clean
-    for _ in range(2):
-        grid = np.linspace(low, high, _GRID)
+    for places in _GRIDS:
+        grid = np.linspace(low, high, places)
         drop, slope = _drops(table, grid)
         found, small_signal, variance = log_likelihood(table, table.design_gain_db, drop, slope, allow)
         best = max(best, float(np.max(found)))
         if not scan:
-            scan.append((grid, np.logaddexp.reduce(found.reshape(_GRID, len(LAWS)) + shares, axis=1)))
+            scan.append((grid, np.logaddexp.reduce(found.reshape(places, len(LAWS)) + shares, axis=1)))
         if allow.at_output is not None:
             level = np.repeat(grid, len(LAWS)) + small_signal
             place_dbm, u = allow.at_output
             found = found - 0.5 * ((level - place_dbm) / np.hypot(u, _MEMORYLESS_DB)) ** 2
-        belief = found.reshape(_GRID, len(LAWS)) + shares
+        belief = found.reshape(places, len(LAWS)) + shares
         along = np.logaddexp.reduce(belief, axis=1)
         # The second pass looks closer at the part of the grid that can matter.
         matters = np.flatnonzero(along > np.max(along) - 12.0)
-        low, high = grid[max(matters[0] - 1, 0)], grid[min(matters[-1] + 1, _GRID - 1)]
+        low, high = grid[max(matters[0] - 1, 0)], grid[min(matters[-1] + 1, places - 1)]
     weight = np.exp(belief - np.max(belief)).ravel()
     cumulative = np.cumsum(weight)
     even = (np.arange(_DRAWS) + rng.uniform(size=_DRAWS)) / _DRAWS

@@ -47,7 +47,7 @@ def test_edges_are_the_roots_of_the_curve(measured):
 
     assert_allclose(lower, brentq(short, F0 - 0.9e6, F0, xtol=1e-6), rtol=0, atol=1e-6 * B)
     assert_allclose(upper, brentq(short, F0, F0 + 0.9e6, xtol=1e-6), rtol=0, atol=1e-6 * B)
-    assert_allclose(level(float(at)), top, rtol=0, atol=1e-9)
+    assert_allclose(level(float(at)), top, rtol=0, atol=1e-7)
 
 
 def test_peak_is_the_highest_point_of_the_curve(measured):
