@@ -17,7 +17,6 @@ from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
-from numpy.typing import NDArray
 
 from benchtool.model import FloatArray
 
@@ -31,8 +30,8 @@ _GUARD: Final = 1e-9
 class NormalEquations:
     """Readings against the freedoms of every sweep, with g_j eliminated, for G copies.
 
-    `gram` (G, m, m) and `pull` (G, m) with m = k·c, the freedoms of a sweep side by side; `chi2` (G,) the misfit before
-    any freedom is used; `log_normal` (G,) the logarithm of what the noise alone contributes to the evidence.
+    `gram` (G, m, m) and `pull` (G, m) with m = c·k, each freedom of all sweeps side by side; `chi2` (G,) the misfit
+    before any freedom is used; `log_normal` (G,) the logarithm of what the noise alone contributes to the evidence.
     """
 
     gram: FloatArray
@@ -40,28 +39,31 @@ class NormalEquations:
     chi2: FloatArray
     log_normal: FloatArray
 
-    def only(self, freedoms: NDArray[np.intp]) -> NormalEquations:
-        """Return the equations of some of the freedoms."""
-        return NormalEquations(
-            self.gram[:, freedoms[:, None], freedoms], self.pull[:, freedoms], self.chi2, self.log_normal
-        )
+    def log_evidence(self, prior: FloatArray, *fewer: int) -> list[tuple[FloatArray, FloatArray]]:
+        """Return log evidence and misfit that is left, (G,) each, for a prior precision (m, m), which is in blocks.
 
-    def log_evidence(self, prior: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Return the log evidence and the misfit that is left, (G,) each, for a prior precision (m, m)."""
+        And then again with only so many of the first freedoms, for each of `fewer`: the factor of all has theirs in it.
+        """
         copies, m = self.pull.shape
         bordered = np.empty((copies, m + 1, m + 1))
         bordered[:, :m, :m] = self.gram + prior
         bordered[:, m, :m] = self.pull
         bordered[:, m, m] = self.chi2 + _GUARD
-        diagonal = np.diagonal(np.linalg.cholesky(bordered), axis1=1, axis2=2)
-        chi2 = diagonal[:, m] ** 2 - _GUARD
-        occam = 0.5 * float(np.linalg.slogdet(prior)[1]) - np.sum(np.log(diagonal[:, :m]), axis=1)
-        return self.log_normal + occam - 0.5 * chi2, chi2
+        factor = np.linalg.cholesky(bordered)
+        log_diagonal = np.log(np.diagonal(factor, axis1=1, axis2=2)[:, :m])
+        last = factor[:, m] ** 2
+        found = []
+        for size in (m, *fewer):
+            chi2 = np.sum(last[:, size:], axis=1) - _GUARD
+            occam = 0.5 * float(np.linalg.slogdet(prior[:size, :size])[1]) - np.sum(log_diagonal[:, :size], axis=1)
+            found.append((self.log_normal + occam - 0.5 * chi2, chi2))
+        return found
 
-    def integrated(self, freedoms: NDArray[np.intp], prior: FloatArray) -> Integrated:
-        """Return the first copy with some freedoms integrated over, whose prior precision is (m', m')."""
-        factor = np.linalg.cholesky(self.gram[0][np.ix_(freedoms, freedoms)] + prior)
-        bordered = np.column_stack([self.gram[0][freedoms], self.pull[0, freedoms]])
+    def integrated(self, prior: FloatArray) -> Integrated:
+        """Return the first copy with its first freedoms integrated over, those that have a prior precision (m', m')."""
+        size = len(prior)
+        factor = np.linalg.cholesky(self.gram[0, :size, :size] + prior)
+        bordered = np.column_stack([self.gram[0, :size], self.pull[0, :size]])
         taken = np.linalg.solve(factor, bordered)
         left = np.append(self.pull[0], self.chi2[0]) - taken.T @ taken[:, -1]
         occam = 0.5 * float(np.linalg.slogdet(prior)[1]) - float(np.sum(np.log(np.diagonal(factor))))
@@ -108,21 +110,18 @@ def normal_equations(weight: FloatArray, slope: FloatArray, left: FloatArray, co
     weight : (G, k, j) one over the variance of each reading
     slope : (G, k, j) how far a reading moves with the gain g_j of its node
     left : (G, k, j) what is to be explained
-    columns : (G, k, c, j), or (1, k, c, j) where all copies share them: what one unit of each freedom adds
+    columns : (G, c, k, j), or (1, c, k, j) where all copies share them: what one unit of each freedom adds
     """
     copies, sweeps, nodes = left.shape
-    c = columns.shape[2]
     moves = weight * slope
     root = 1.0 / np.sqrt(np.sum(moves * slope, axis=1))
-    weighted = weight[:, :, None] * columns
-    shared = ((moves * root[:, None])[:, :, None] * columns).reshape(copies, sweeps * c, nodes)
+    weighted = weight[:, None] * columns
+    shared = ((moves * root[:, None])[:, None] * columns).reshape(copies, -1, nodes)
     own = np.sum(moves * left, axis=1) * root
     gram = -(shared @ np.swapaxes(shared, 1, 2))
-    blocks = weighted @ np.swapaxes(columns, 2, 3)
     for k in range(sweeps):
-        mine = slice(k * c, (k + 1) * c)
-        gram[:, mine, mine] += blocks[:, k]
-    pull = (weighted @ left[..., None]).reshape(copies, -1) - (shared @ own[..., None])[..., 0]
+        gram[:, k::sweeps, k::sweeps] += weighted[:, :, k] @ np.swapaxes(columns[:, :, k], 1, 2)
+    pull = np.sum(weighted * left[:, None], axis=3).reshape(copies, -1) - (shared @ own[..., None])[..., 0]
     chi2 = np.sum(weight * left**2, axis=(1, 2)) - np.sum(own**2, axis=1)
     # The part of the normalisation that g_j takes is left at its value without a law: a saturated device, whose
     # readings say nothing of g_j, must not be the more likely for it.
@@ -131,9 +130,10 @@ def normal_equations(weight: FloatArray, slope: FloatArray, left: FloatArray, co
 
 
 def prior_precision(precisions: Sequence[FloatArray]) -> FloatArray:
-    """Return the prior precision (k·c, k·c) of c freedoms a sweep; the precision (k, k) of each is between sweeps."""
-    sweeps, c = precisions[0].shape[0], len(precisions)
-    whole = np.zeros((sweeps, c, sweeps, c))
+    """Return the prior precision (c·k, c·k) of c freedoms a sweep; the precision (k, k) of each is between sweeps."""
+    sweeps = len(precisions[0])
+    whole = np.zeros((sweeps * len(precisions),) * 2)
     for index, precision in enumerate(precisions):
-        whole[:, index, :, index] = precision
-    return whole.reshape(sweeps * c, sweeps * c)
+        mine = slice(index * sweeps, (index + 1) * sweeps)
+        whole[mine, mine] = precision
+    return whole

@@ -257,9 +257,9 @@ class _LevelSearch:
         self._patterns = doubts.patterns
         law_out, detuning = (np.eye(table.sweeps) / spread**2 for spread in (_LAW_DOUBT, _DETUNING))
         plain = [*doubts.precisions, law_out]
-        self._priors = {False: prior_precision(plain)}
-        if any(way.detunes for way in self._ways):
-            self._priors[True] = prior_precision([*plain, detuning])
+        self._detunes = any(way.detunes for way in self._ways)
+        self._prior = prior_precision([*plain, detuning] if self._detunes else plain)
+        self._plain = len(plain) * table.sweeps
 
     def look(self, places: int, shapes: int) -> None:
         """Weigh a grid of so many 1 dB points, and values of p, for each law that is still live."""
@@ -274,13 +274,11 @@ class _LevelSearch:
         left, slope, drop = self._fit_gain(p1db, log_p, parts)
         seen = np.max(drop, axis=(1, 2)) >= _LEAST_DROP_DB
         seen &= (p1db >= self._reach[0]) & (p1db <= self._reach[1])
-        evidence = {
-            detunes: equations.log_evidence(self._priors[detunes])
-            for detunes, equations in self._equations(left, slope, drop).items()
-        }
+        # With all freedoms, and with those that every way has.
+        whole, plain = self._equations(left, slope, drop).log_evidence(self._prior, self._plain)
         weighed: list[tuple[Cause, FloatArray, FloatArray, FloatArray]] = []
         for way in self._ways:
-            log, chi2 = evidence[way.detunes]
+            log, chi2 = whole if way.detunes else plain
             level = p1db + way.shift_db
             prior = _log_level_prior(self.table, way.cause, level) + np.log(way.share * PRIOR[way.cause])
             weighed.append((way.cause, np.where(seen, log + prior, -np.inf), level, chi2))
@@ -288,21 +286,16 @@ class _LevelSearch:
             belief = float(np.log(law.share))
             law.take([(cause, log[part] + belief, level[part], chi2[part]) for cause, log, level, chi2 in weighed])
 
-    def _equations(self, left: FloatArray, slope: FloatArray, drop: FloatArray) -> dict[bool, NormalEquations]:
-        """Return the equations with the doubts and how far the law may be out and, where asked for, with detuning."""
-        copies, sweeps, nodes = drop.shape
+    def _equations(self, left: FloatArray, slope: FloatArray, drop: FloatArray) -> NormalEquations:
+        """Return the equations with the doubts, how far the law may be out and, where a way has it, detuning."""
         c = len(self._patterns)
-        columns = np.empty((copies, sweeps, c + len(self._priors), nodes))
-        columns[:, :, :c] = self._patterns
-        columns[:, :, c] = drop
-        if True in self._priors:
-            columns[:, :, c + 1] = np.max(drop, axis=2)[..., None] * self.table.slope_db
+        columns = np.empty((len(drop), c + 1 + self._detunes, *drop.shape[1:]))
+        columns[:, :c] = self._patterns[:, None]
+        columns[:, c] = drop
+        if self._detunes:
+            columns[:, c + 1] = np.max(drop, axis=2)[..., None] * self.table.slope_db
         weight = 1.0 / (self.table.noise_db**2 + (_LAW_ROUGHNESS * drop) ** 2)
-        whole = normal_equations(weight, slope, left, columns)
-        if True not in self._priors:
-            return {False: whole}
-        plain = np.arange(sweeps * (c + 2)).reshape(sweeps, c + 2)[:, : c + 1].ravel()
-        return {False: whole.only(plain), True: whole}
+        return normal_equations(weight, slope, left, columns)
 
     def _fit_gain(
         self, p1db: FloatArray, log_p: FloatArray, parts: Sequence[slice]
@@ -336,9 +329,13 @@ class _LevelSearch:
             move = np.clip(move / np.sum(moves * slope, axis=1, keepdims=True), -5.0, 5.0)
             own = own + move
             if np.max(np.abs(move)) < _STILL_DB:
+                # So little that the drop follows in a straight line.
+                drop += rate * move
                 break
-        drop, rate = drop_of(base + own)
-        return gain - own + drop, np.clip(1.0 - rate, 0.05, 1.0), drop
+        else:
+            drop, rate = drop_of(base + own)
+            slope = np.clip(1.0 - rate, 0.05, 1.0)
+        return gain - own + drop, slope, drop
 
 
 def _summed(cause: Cause, log: FloatArray, p1db: FloatArray, chi2: FloatArray, cells: FloatArray) -> Weighed:

@@ -108,7 +108,7 @@ class _Lawless:
         self._place = {"flat": 0, "slope": len(patterns), "bend": len(patterns) + 1}
         gain, weight = table.gain_db[None], 1.0 / table.noise_db[None] ** 2
         left = gain - np.sum(weight * gain, axis=1, keepdims=True) / np.sum(weight, axis=1, keepdims=True)
-        every = np.broadcast_to(columns, (1, table.sweeps, *columns.shape))
+        every = np.repeat(columns[None, :, None], table.sweeps, axis=2)
         self._equations = normal_equations(weight, np.ones_like(gain), left, every)
         self._size = len(columns)
         self._settled: dict[str, Integrated] = {}
@@ -118,18 +118,17 @@ class _Lawless:
         if pad not in self._settled:
             doubts = self._doubts.precisions
             flat = flat_precision(self.table, pad) if pad else doubts[0]
-            places = np.arange(self.table.sweeps * self._size).reshape(-1, self._size)[:, : len(doubts)]
-            self._settled[pad] = self._equations.integrated(places.ravel(), prior_precision([flat, *doubts[1:]]))
+            self._settled[pad] = self._equations.integrated(prior_precision([flat, *doubts[1:]]))
         return self._settled[pad]
 
     def weigh(self, cause: Cause, about: str, extras: Sequence[_Extra], share: float = 1.0) -> Weighed:
         """Return one explanation; the first of its extras is what it estimates."""
-        columns = np.zeros((self.table.sweeps, self._size, len(extras)))
+        columns = np.zeros((self._size, self.table.sweeps, len(extras)))
         for index, extra in enumerate(extras):
-            columns[:, self._place[extra.along], index] = extra.reach
+            columns[self._place[extra.along], :, index] = extra.reach
         doubts = self._but_for(next((extra.pad for extra in extras if extra.pad), ""))
         spread = np.array([extra.u for extra in extras])
-        wanted = columns.reshape(self.table.sweeps * self._size, len(extras))
+        wanted = columns.reshape(self._size * self.table.sweeps, len(extras))
         log, chi2, mean, covariance = doubts.with_extras(wanted, spread)
         value, u = (float(mean[0]), float(np.sqrt(covariance[0, 0]))) if extras else (None, None)
         return Weighed(cause, about, log + float(np.log(PRIOR[cause] * share)), value, u, chi2)

@@ -18,17 +18,17 @@ def readings():
     rng = np.random.default_rng(5)
     weight = 1.0 / rng.uniform(0.05, 0.3, (1, SWEEPS, NODES)) ** 2
     left = rng.normal(0.0, 0.4, (1, SWEEPS, NODES))
-    columns = rng.normal(0.0, 1.0, (1, SWEEPS, FREEDOMS, NODES))
+    columns = rng.normal(0.0, 1.0, (1, FREEDOMS, SWEEPS, NODES))
     root = rng.normal(0.0, 0.5, (FREEDOMS, SWEEPS, SWEEPS))
     precisions = [np.linalg.inv(each @ each.T + 0.05 * np.eye(SWEEPS)) for each in root]
     return weight, left, columns, precisions
 
 
 def design(columns):
-    """The matrix (k·j, k·c) from freedoms to readings, written out in full."""
-    matrix = np.zeros((SWEEPS, NODES, SWEEPS, FREEDOMS))
+    """The matrix (k·j, c·k) from freedoms to readings, written out in full."""
+    matrix = np.zeros((SWEEPS, NODES, FREEDOMS, SWEEPS))
     for k in range(SWEEPS):
-        matrix[k, :, k] = columns[0, k].T
+        matrix[k, :, :, k] = columns[0, :, k].T
     return matrix.reshape(SWEEPS * NODES, -1)
 
 
@@ -37,7 +37,7 @@ def test_evidence_is_the_density_of_what_the_gains_of_the_nodes_leave(readings):
     # normal; scipy.stats.multivariate_normal is the reference.
     weight, left, columns, precisions = readings
     equations = normal_equations(weight, np.ones_like(left), left, columns)
-    found, _ = equations.log_evidence(prior_precision(precisions))
+    ((found, _),) = equations.log_evidence(prior_precision(precisions))
     matrix, gains = design(columns), np.tile(np.eye(NODES), (SWEEPS, 1))
     prior = np.linalg.inv(prior_precision(precisions))
     covariance = np.diag(1.0 / weight.ravel()) + matrix @ prior @ matrix.T
@@ -51,7 +51,7 @@ def test_evidence_is_the_density_of_what_the_gains_of_the_nodes_leave(readings):
 def test_misfit_is_that_of_generalised_least_squares(readings):
     weight, left, columns, precisions = readings
     slope = np.linspace(0.2, 1.0, left.size).reshape(left.shape)
-    _, chi2 = normal_equations(weight, slope, left, columns).log_evidence(prior_precision(precisions))
+    ((_, chi2),) = normal_equations(weight, slope, left, columns).log_evidence(prior_precision(precisions))
     matrix = design(columns)
     prior = np.linalg.inv(prior_precision(precisions))
     inverse = np.linalg.inv(np.diag(1.0 / weight.ravel()) + matrix @ prior @ matrix.T)
@@ -68,30 +68,37 @@ def test_a_gain_common_to_all_sweeps_changes_nothing(readings):
     shifted = left + np.array([3.0, -2.0, 0.5, 7.0])
     before = normal_equations(weight, one, left, columns).log_evidence(prior)
     after = normal_equations(weight, one, shifted, columns).log_evidence(prior)
-    assert_allclose(after[0], before[0], rtol=1e-7, atol=0)
+    assert_allclose(after[0][0], before[0][0], rtol=1e-7, atol=0)
+
+
+def test_fewer_freedoms_are_the_equations_without_the_others(readings):
+    weight, left, columns, precisions = readings
+    one = np.ones_like(left)
+    _, (log, chi2) = normal_equations(weight, one, left, columns).log_evidence(prior_precision(precisions), SWEEPS)
+    first = normal_equations(weight, one, left, columns[:, :1]).log_evidence(prior_precision(precisions[:1]))[0]
+    assert_allclose([log[0], chi2[0]], [first[0][0], first[1][0]], rtol=1e-9, atol=0)
 
 
 def test_doubts_first_and_extras_after_are_all_freedoms_at_once(readings):
     # The evidence is one integral, whichever part of it is taken first; the whole is checked against scipy above.
     weight, left, columns, precisions = readings
     one, shift = np.ones_like(left), np.linspace(-1.0, 1.0, NODES)
-    more = np.concatenate([columns, np.broadcast_to(shift, (1, SWEEPS, 1, NODES))], axis=2)
+    more = np.concatenate([columns, np.broadcast_to(shift, (1, 1, SWEEPS, NODES))], axis=1)
     reach, u = np.array([[0.5, 0.0], [0.0, 1.0], [2.0, -1.0]]), np.array([0.7, 2.0])
-    doubts = np.arange(SWEEPS * (FREEDOMS + 1)).reshape(SWEEPS, -1)[:, :FREEDOMS].ravel()
-    extras = np.zeros((SWEEPS, FREEDOMS + 1, 2))
-    extras[:, FREEDOMS] = reach
+    doubts, every = FREEDOMS * SWEEPS, (FREEDOMS + 1) * SWEEPS
+    extras = np.concatenate([np.zeros((doubts, 2)), reach])
     prior = prior_precision(precisions)
     equations = normal_equations(weight, one, left, more)
-    log, chi2, mean, covariance = equations.integrated(doubts, prior).with_extras(extras.reshape(-1, 2), u)
-    combined = np.column_stack([np.eye(SWEEPS * (FREEDOMS + 1))[:, doubts], extras.reshape(-1, 2)])
-    whole = np.zeros((doubts.size + 2, doubts.size + 2))
+    log, chi2, mean, covariance = equations.integrated(prior).with_extras(extras, u)
+    combined = np.column_stack([np.eye(every)[:, :doubts], extras])
+    whole = np.zeros((doubts + 2, doubts + 2))
     whole[:-2, :-2], whole[-2:, -2:] = prior, np.diag(u**-2.0)
     at_once = replace(equations, gram=combined.T @ equations.gram @ combined, pull=equations.pull @ combined)
-    expected_log, expected_chi2 = at_once.log_evidence(whole)
+    ((expected_log, expected_chi2),) = at_once.log_evidence(whole)
     assert_allclose([log, chi2], [expected_log[0], expected_chi2[0]], rtol=1e-9, atol=0)
     spread = np.linalg.inv(at_once.gram[0] + whole)
     assert_allclose(covariance, spread[-2:, -2:], rtol=1e-9, atol=0)
     assert_allclose(mean, (spread @ at_once.pull[0])[-2:], rtol=1e-9, atol=0)
-    alone = equations.integrated(doubts, prior).with_extras(np.zeros((whole.shape[0] + 1, 0)), np.zeros(0))
-    expected_log, expected_chi2 = equations.only(doubts).log_evidence(prior)
+    alone = equations.integrated(prior).with_extras(np.zeros((every, 0)), np.zeros(0))
+    ((expected_log, expected_chi2),) = normal_equations(weight, one, left, columns).log_evidence(prior)
     assert_allclose(alone[:2], [expected_log[0], expected_chi2[0]], rtol=1e-9, atol=0)
