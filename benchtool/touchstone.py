@@ -10,7 +10,9 @@ from __future__ import annotations
 import hashlib
 import math
 import stat
+from collections.abc import Callable
 from pathlib import Path
+from threading import Thread
 from typing import Final, cast
 
 import numpy as np
@@ -28,6 +30,7 @@ from benchtool.touchstone_writing import format_sweep
 __all__ = ["format_sweep", "parse_sweep", "read_sweep"]
 
 _PORTS: Final = 2
+_WORTH_A_THREAD: Final = 256 * 1024
 _LARGEST_BYTES: Final = 64 * 1024**2
 """Some 400,000 rows of long numbers; what is larger is not a sweep, and is refused before it can fill the memory."""
 
@@ -57,6 +60,7 @@ def parse_sweep(data: bytes, *, name: str, path: Path | None = None, strict: boo
     """
     place = name if path is None else str(path)
     reading = Reading(place, name, strict=strict)
+    sha256 = _hashing(data)
     table = _read_table(data, Path(place).suffix, reading)
     s = _scattering(table, reading)
     for parameter in table.missing:
@@ -72,10 +76,25 @@ def parse_sweep(data: bytes, *, name: str, path: Path | None = None, strict: boo
         measured=measured,
         reference_ohm=table.option.reference_ohm,
         path=path,
-        sha256=hashlib.sha256(data).hexdigest(),
+        sha256=sha256(),
         findings=(*reading.findings, *findings),
         noise=_noise_block(table.noise),
     )
+
+
+def _hashing(data: bytes) -> Callable[[], str]:
+    """Return what gives the SHA-256 of a file; of a large one it is worked out beside the reading."""
+    if len(data) < _WORTH_A_THREAD:
+        return lambda: hashlib.sha256(data).hexdigest()
+    found: list[str] = []
+    worker = Thread(target=lambda: found.append(hashlib.sha256(data).hexdigest()), daemon=True)
+    worker.start()
+
+    def wait() -> str:
+        worker.join()
+        return found[0]
+
+    return wait
 
 
 def _read_bytes(path: Path) -> bytes:
