@@ -61,7 +61,7 @@ def parse_sweep(data: bytes, *, name: str, path: Path | None = None, strict: boo
     place = name if path is None else str(path)
     reading = Reading(place, name, strict=strict)
     sha256 = _hashing(data)
-    table = _read_table(data, Path(place).suffix, reading)
+    table = _read_table(data, (Path(place) if path is None else path).suffix, reading)
     s = _scattering(table, reading)
     for parameter in table.missing:
         s[int(parameter[1]) - 1, int(parameter[2]) - 1] = 0.0
@@ -183,8 +183,8 @@ def _scattering(table: SweepTable, reading: Reading) -> ComplexArray:
                 *(four if table.normalised else normalise(kind, four, table.option.reference_ohm))
             )
     s = np.array([[n11, n12], [n21, n22]])
-    finite = np.isfinite(s).all(axis=(0, 1))
-    if not finite.all():
+    if not np.isfinite(s).all():
+        finite = np.isfinite(s).all(axis=(0, 1))
         found = f"the {kind} parameters of this row have no finite S parameters"
         remedy = "check the kind and format in the option line, or delete the row"
         raise reading.fault(found, remedy, line=table.line(int(np.argmin(finite))))

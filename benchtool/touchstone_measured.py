@@ -56,8 +56,9 @@ def measured_parameters(
     zero = {parameter for parameter, column in columns.items() if not column.any()} - missing
     fixed = _fixed_placeholders(s12, s22) if zero.isdisjoint(("S11", "S21")) else set()
     absent = zero | fixed | missing
-    same_transfer = "S21" not in absent and np.array_equal(s12, s21)
-    same_match = len(s11) > 1 and "S11" not in absent and np.array_equal(s22, s11)
+    # One row tells most files: the whole is compared where that is the same.
+    same_transfer = "S21" not in absent and s12[0] == s21[0] and np.array_equal(s12, s21)
+    same_match = len(s11) > 1 and "S11" not in absent and s22[0] == s11[0] and np.array_equal(s22, s11)
     gain = same_transfer and bool((np.abs(s21) > _GAIN).any())
     if absent == zero == {"S11", "S22"} and same_transfer and not gain and not _shows_noise(s21):
         zero, absent, same_match = set(), set(), True
@@ -132,7 +133,8 @@ def doubtful_values(table: SweepTable, s: ComplexArray, name: str) -> list[Findi
     Whether a passive device shows gain is not known here.
     """
     findings = []
-    if table.option.format == "MA" and (negative := (table.pairs[:, 0::2] < 0).any(axis=1)).any():
+    if table.option.format == "MA" and table.pairs[:, 0::2].min() < 0:
+        negative = (table.pairs[:, 0::2] < 0).any(axis=1)
         found = f"a magnitude is negative in line {table.line(int(np.argmax(negative)))}, as only decibels are"
         findings.append(_impossible(name, found, "if the numbers are decibels, write DB in the option line"))
     usual = np.abs(s.view(np.float64)).max() <= 1.0  # a part: a test that costs less than four magnitudes

@@ -39,6 +39,8 @@ _AS_JSON: Final = bytes(
     for code in range(256)
 )
 """Blanks become commas; what is part of no number becomes a letter that no number can hold."""
+_TAKEN_BY_JSON: Final = (b",", b"\t", b"t", b"f", b"n", b"N", b"I")
+"""Bytes of what a JSON parser takes and is no number between blanks: true, false, null, NaN, Infinity, a comma."""
 _MARK: Final = re.compile(r"[+-]?(?:nan|inf|infinity)|[1-]\.#(?:inf|ind|qnan)\w*|-+|\*+|ovl|ovld|overload|n/?a", re.I)
 """What stands where an analyzer has no number to give."""
 _NOT_FINITE: Final = re.compile(r"[+-]?(?:nan|inf|infinity)", re.IGNORECASE)
@@ -70,7 +72,12 @@ def _parse_chunk(chunk: str, columns: int) -> FloatArray | None:
     """
     if "!" in chunk:
         chunk = _COMMENT.sub("", chunk)
-    data = chunk.encode("ascii", "replace").translate(_AS_JSON)
+    data = chunk.encode("ascii", "replace")
+    if not any(taken in data for taken in _TAKEN_BY_JSON):
+        rows = _parse_json(data.replace(b" ", b",").strip(b",\n"), columns)
+        if rows is not None:
+            return rows
+    data = data.translate(_AS_JSON)
     rows = _parse_json(data.strip(b",\n"), columns)
     if rows is None and b"x" not in data:
         data = _squeeze(data)
