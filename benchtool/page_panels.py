@@ -3,7 +3,8 @@
 Where two drives or more are known compression is what the session was swept for: gain against drive stands first,
 beside it the map of compression where there are three drives, and the delay, because a limiting stage shows there
 too. Match stands among them where it can be shown. With one drive match and group delay share the row, and what was
-not measured is said in words in its place.
+not measured is said in words in its place. Phase joins the row where it matters
+(:mod:`benchtool.page_phase`) and there is room.
 """
 
 from __future__ import annotations
@@ -22,6 +23,7 @@ from benchtool.page_map import draw_map, map_shown
 from benchtool.page_marks import drive_marks
 from benchtool.page_panel import NOTE_PT, Panel
 from benchtool.page_paper import BLUE, GREEN, INK, WIDTH_PT, ZONE, Dash, Paper
+from benchtool.page_phase import draw_phase, phase_matters
 from benchtool.page_scales import View, decibels_of, frame, near_band, widened
 from benchtool.page_traces import Trace
 from benchtool.phase import group_delay_curve
@@ -179,13 +181,18 @@ def _row(paper: Paper, device: DeviceResult, looks: Sequence[Trace], view: View)
     delay: _Draw = partial(_draw_delay, paper, device, near)
     match: _Draw = partial(_draw_match, paper, device, near)
     marks, shown = drive_marks(device, looks), map_shown(device)
+    phase: list[tuple[float, _Draw]] = (
+        [(1.0, partial(draw_phase, paper, device, near))] if phase_matters(device) else []
+    )
     if not marks:
-        return [(1.0, delay), (1.0, match)]
+        return [*phase, (1.0, delay), (1.0, match)]
     row: list[tuple[float, _Draw]] = [(1.0, partial(draw_drive, paper, device, marks))]
     if shown is not None:
         row.append((1.0, partial(draw_map, paper, device, shown, view)))
     if _return_losses(device, near)[0]:
         row.append((0.8 if shown else 1.0, match))
+    if len(row) < 2:
+        row += phase
     return [*row, (0.8 if len(row) > 2 else 1.0, delay)]
 
 

@@ -95,10 +95,13 @@ def widened(values: Iterable[float], margin: float = 0.08, least: float = 1.0) -
     return low - extra, high + extra
 
 
-def ticks(axis: Axis, limits: Sequence[float], most: int) -> None:
-    """Put at most `most` labelled ticks on an axis, with no more decimals than the step needs."""
+def ticks(axis: Axis, limits: Sequence[float], most: int, steps: Sequence[float] = (1, 2, 2.5, 5, 10)) -> None:
+    """Put at most `most` labelled ticks on an axis, with no more decimals than the step needs.
+
+    `steps` are what a step may be, times any power of ten.
+    """
     low, high = limits
-    values = [v for v in MaxNLocator(most, steps=[1, 2, 2.5, 5, 10]).tick_values(low, high) if low <= v <= high]
+    values = [v for v in MaxNLocator(most, steps=list(steps)).tick_values(low, high) if low <= v <= high]
     step = values[1] - values[0] if len(values) > 1 else abs(high - low) or 1.0
     decimals = max(0, -math.floor(math.log10(step) + 1e-9))
     if round(step, decimals) != 0 and abs(round(step, decimals) - step) > 1e-6 * step:

@@ -269,6 +269,26 @@ def full_filter() -> DeviceResult:
     )  # fmt: skip
 
 
+def phase_network() -> DeviceResult:
+    """A network that turns by 90° at its design frequency, given as a phase that is whole circles away."""
+    sweep = make_sweep("network.s2p", -8.6)
+    sweep = replace(sweep, s=sweep.s * 1j)
+    figures = figures_of(-8.6, intervals=True)
+    phase = float(np.degrees(np.angle(np.interp(F0_HZ, sweep.frequency_hz, sweep.s21))))
+    figures["phase"] = replace(figures["phase"], value=phase)
+    over = {"over_hz": (21.3e6, 21.5e6)}
+    figures["phase_linearity over 21.3-21.5 MHz"] = Figure("phase_linearity", 0.4, "deg", parameters=over)
+    targets = (
+        TargetResult("phase", "phase", "deg", 440.0, 460.0, "met", 0.99),
+        TargetResult("phase_linearity over 21.3-21.5 MHz", "phase_linearity", "deg", None, 2.0, "met", 0.99),
+    )
+    result = make_result(sweep, make_path(-8.0, [], [], -8.6))
+    return DeviceResult(
+        "quadrature network", "network", F0_HZ, True, None, "network.s2p", (result,), figures, targets, None, (),
+        Summary("met", "Both targets are met.", "Nothing: file this page."),
+    )  # fmt: skip
+
+
 def nothing_known() -> DeviceResult:
     sweep = make_sweep("quick.s2p", 12.0)
     sweep = replace(sweep, measured=("S21",), sha256="")
@@ -500,6 +520,7 @@ CASES: dict[str, Callable[[], DeviceResult]] = {
     "three_drives_intervals": lambda: three_drives(intervals=True),
     "one_path": one_path,
     "full_filter": full_filter,
+    "phase_network": phase_network,
     "nothing_known": nothing_known,
     "many_findings": many_findings,
     "twelve_targets": twelve_targets,

@@ -88,6 +88,7 @@ LAYERS = [
     "page_marks",
     "page_drive",
     "page_map",
+    "page_phase",
     "page_panels",
     "page_table",
     "page_notes",
