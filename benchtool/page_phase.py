@@ -68,7 +68,7 @@ def _about_phase(device: DeviceResult) -> list[TargetResult]:
 
 
 def _turned(device: DeviceResult) -> FloatArray:
-    """Return the unwrapped phase of the reference sweep, turned by whole circles to run through the figure, or by zero."""
+    """Return the unwrapped phase of the reference sweep, turned by whole circles to the figure, or to zero."""
     sweep, figure = device.reference.sweep, _known(device) or 0.0
     phase = unwrapped_phase(sweep.frequency_hz, sweep.s21)
     here = float(np.interp(device.design_hz, sweep.frequency_hz, phase))
