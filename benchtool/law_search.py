@@ -54,7 +54,7 @@ practice, no source)."""
 _LEAST_U_DB: Final = 0.005
 _LAWS: Final = ((Law("tanh"), 0.1), (Law("cubic"), 0.1), (None, 0.8))
 """Laws with their shares of belief; None is Rapp's, over every p."""
-_GRIDS: Final = ((16, 5), (12, 6), (12, 7))
+_GRIDS: Final = ((16, 5), (13, 7), (14, 9))
 """Places of the 1 dB point, and values of Rapp's p, that each look takes in."""
 _NEWTON_STEPS: Final = 6
 _STILL_DB: Final = 0.01
@@ -215,9 +215,9 @@ class _LawRange:
         if not self.found:
             return
         step = self._offset[1] - self._offset[0]
-        row, lift = _tops(score)
+        row, lift, slack = _tops(score)
         top = self._p1db[0] + row * step
-        matters = np.flatnonzero(lift > -_MATTERS)
+        matters = np.flatnonzero(lift + slack > -_MATTERS)
         seen = np.flatnonzero(np.isfinite(lift))
         self._ridge = self._shape[seen], top[seen]
         near = score[:, matters] > -_MATTERS
@@ -349,8 +349,12 @@ def _summed(cause: Cause, log: FloatArray, p1db: FloatArray, chi2: FloatArray, c
     return Weighed(cause, "", best + float(np.log(total)), value, u, float(chi2[int(np.argmax(log))]))
 
 
-def _tops(score: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Return row and height of the highest point of each column, by the parabola through three nodes."""
+def _tops(score: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return row and height of the highest point of each column, by the parabola through three nodes, and its slack.
+
+    Where nodes lie far apart the column is no parabola: the top may stand higher by as much as one may rise at the most
+    between two nodes, an eighth of the second difference.
+    """
     row, columns = np.argmax(score, axis=0), np.arange(score.shape[1])
     middle = np.clip(row, 1, len(score) - 2)
     early, top, late = (score[middle + k, columns] for k in (-1, 0, 1))
@@ -359,7 +363,8 @@ def _tops(score: FloatArray) -> tuple[FloatArray, FloatArray]:
         shift = -slope / bend
         inside = (middle == row) & (bend < 0.0) & np.isfinite(bend)
         height = top + 0.5 * slope * shift
-    return np.where(inside, row + shift, row), np.where(inside, height, score[row, columns])
+    slack = np.where(inside, -0.125 * bend, 0.0)
+    return np.where(inside, row + shift, row), np.where(inside, height, score[row, columns]), slack
 
 
 def _between(grid: FloatArray) -> float:
