@@ -358,6 +358,15 @@ def test_bound_falls_with_doubt():
     assert unsure < sure - 1.0
 
 
+def test_bound_moves_as_smoothly_as_the_doubt():
+    # Not in steps of the grid that 1 dB points are looked for on, which is a decibel wide.
+    doubts = np.linspace(0.10, 0.11, 6)
+    bounds = [estimate_onset(table((-38.0, -28.0), u=u), "s0.s2p").input_p1db_dbm.value for u in doubts]
+    steps = -np.diff(bounds)
+    assert np.all(steps > 0.0)
+    assert np.max(steps) < 3.0 * np.min(steps)
+
+
 def test_suspect_pad_leaves_the_onset_open():
     two = (-38.0, -18.0)
     seen = table(two, offsets=[0.0, -2.0], pads=(pad("a20", 20.0, [-1, 0], [-1, 0]),))

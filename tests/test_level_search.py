@@ -58,6 +58,17 @@ def test_peak_is_the_highest_point_of_the_curve(measured):
     assert_allclose(top, dense, rtol=0, atol=1e-6)
 
 
+def test_edges_of_a_steep_filter_are_the_roots_too():
+    zeros, poles, gain = signal.cheb1ap(7, 1.0)
+    f = np.linspace(20.9e6, 21.9e6, 1601)
+    s21 = signal.freqs_zpk(zeros, poles, gain, 2.0 * (f - F0) / B)[1]
+    curve = fit_curve(f, s21, F0 - 0.36e6, F0 + 0.36e6, NOISE_FREE)
+    _, upper = LevelSearch(curve).levels(s21).edges(np.array(-HALF_POWER_DB))
+    level = level_of(curve, s21)
+    root = brentq(lambda at: level(at) + HALF_POWER_DB, F0 + 0.5 * B, F0 + 0.36e6, xtol=1e-6)
+    assert_allclose(upper, root, rtol=0, atol=1e-7 * B)
+
+
 def test_peak_of_a_resonance_between_the_nodes():
     s21 = butterworth(1, 21.4123e6)
     curve = fit_curve(F, s21, F0 - 0.45e6, F0 + 0.45e6, NOISE_FREE)

@@ -242,3 +242,15 @@ def test_measured_resonator_against_scikit_rf(window):
     near = np.abs(network.f - float(found.peak_frequency)) < 0.03 * float(found.peak_frequency)
     fit = skrf.qfactor.Qfactor(network[near].s21, "transmission").fit()
     assert_allclose(found.loaded_q, fit.Q_L, rtol=0.02, atol=0)
+
+
+def test_one_sample_of_exactly_nothing_spoils_no_fit():
+    f = np.linspace(20e6, 22.8e6, 401)
+    rng = np.random.default_rng(4)
+    s21 = single_tuned(f, 21.4e6, 35.0, 10.0) + 0.01 * (rng.normal(size=401) + 1j * rng.normal(size=401))
+    lost = s21.copy()
+    lost[205] = 0.0
+    _, whole = measure(f, s21, noise=estimate_noise(f, s21))
+    _, found = measure(f, lost, noise=estimate_noise(f, lost))
+    assert_allclose(found.bandwidth, whole.bandwidth, rtol=0.2, atol=0)
+    assert_allclose(found.peak_gain, whole.peak_gain, rtol=0, atol=1.0)

@@ -331,6 +331,19 @@ def test_what_is_a_value_elsewhere_is_no_number_among_long_ones(odd):
         parse_sweep(f"# Hz S RI\n{good}40.0 {bad}\n".encode(), name="x.s2p")
 
 
+@pytest.mark.parametrize("word", ["null", "true", "false", "NaN", "Infinity", "[1]", '"1"', "{}", ","])
+@pytest.mark.parametrize("place", range(20))
+def test_no_word_of_json_joins_or_fills_rows(word, place):
+    # Two rows on one line with a word between, or in place of a number: never a sweep, whatever reads the numbers.
+    rows = [f"{1 + k} 0.1 0 0.2 0 0.3 0 0.4 0" for k in range(4)]
+    words = f"{rows[0]} {rows[1]}".split()
+    words.insert(place, word)
+    for changed in (words, [*words[:place], *words[place + 1 :][1:]]):
+        text = "# MHz S RI R 50\n" + "\n".join([" ".join(changed), *rows[2:]]) + "\n"
+        with pytest.raises(SweepFileError):
+            parse_sweep(text.encode(), name="x.s2p")
+
+
 @pytest.mark.parametrize("file", ["a.s1p", "a.S3P", "a.s4p", "a.s12p"])
 def test_rows_of_another_number_of_ports_are_told_by_the_name(file):
     with pytest.raises(SweepFileError, match=f"by its name \\({Path(file).suffix}\\) this file has "):
