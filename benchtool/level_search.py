@@ -2,7 +2,8 @@
 
 Levels are looked at on some of the curve's nodes. Between these the curve is a known polynomial, so the place itself is
 found by Newton's method on the logarithm of its power, which is close to a parabola near a resonance and to a straight
-line on a skirt: from there one step or two, kept between the neighbouring nodes, find it to a billionth of the band.
+line on a skirt: from there a step or two, kept between the neighbouring nodes, find it to a millionth of the band or
+better.
 """
 
 from __future__ import annotations
@@ -22,6 +23,7 @@ __all__ = ["LevelSearch", "Levels"]
 _EVERY: Final = 6
 _EVERY_OF_PIECES: Final = 2
 """Of one fit every so many nodes are looked at; several side by side have fewer nodes each, and more are."""
+_STEPS: Final = 2
 _DB: Final = 10.0 / float(np.log(10.0))
 """Decibels for each unit of the natural logarithm of power."""
 
@@ -142,11 +144,9 @@ class Levels:
         with np.errstate(divide="ignore", invalid="ignore"):
             above, under = (np.log(self._power[self._rows, place]) - target for place in (inner, outer))
             at = from_hz + (to_hz - from_hz) * above / (above - under)
-            level, slope = self._logarithm(at, 1)
-            at = np.minimum(np.maximum(at - (level - target) / slope, low), high)
-            # Already so near that the slope will do for another step.
-            (level,) = self._logarithm(at, 0)
-            at = np.minimum(np.maximum(at - (level - target) / slope, low), high)
+            for _ in range(_STEPS):
+                level, slope = self._logarithm(at, 1)
+                at = np.minimum(np.maximum(at - (level - target) / slope, low), high)
         return np.asarray(np.where(inner == outer, np.nan, at))
 
     def _logarithm(self, at_hz: FloatArray, order: int) -> list[FloatArray]:
