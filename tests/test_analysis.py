@@ -7,6 +7,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 from numpy.testing import assert_allclose
+from scipy import signal
 
 from benchtool.analysis import analyse
 from benchtool.errors import BenchtoolError, FaultsError, SheetError, SweepFileError
@@ -327,3 +328,22 @@ def test_stability_is_refused_where_s12_was_not_measured(tmp_path):
     assert device.figures["stability_mu"].value is None
     assert device.targets[0].verdict == "undecided"
     assert any(f.code == "one-path" and "stability_mu" in f.message for f in device.findings)
+
+
+def test_what_noise_adds_to_a_peak_is_taken_out(tmp_path):
+    # The highest point of a noisy flat top reads high, and trials that add noise again read it higher still, by about
+    # as much: left in, the middle of the interval would lie half a standard uncertainty above the value.
+    zeros, poles, gain = signal.buttap(4)
+    clean = 10.0 * signal.freqs_zpk(zeros, poles, gain, 2.0 * (FREQUENCY - 21.4e6) / 1.2e6)[1]
+    sheet = (
+        "[analyzer]\nsource_dbm = -10.0\nreading_db = 0.0\nport_match_db = 80\ndirectivity_db = 80\n"
+        '[[device]]\nname = "d"\nkind = "filter"\ndesign_frequency = "21.4 MHz"\n[[device.sweep]]\nfile = "x.s2p"\n'
+    )
+    above = []
+    for seed in range(12):
+        rng = np.random.default_rng(seed)
+        noise = 0.3 / np.sqrt(2.0) * (rng.normal(size=401) + 1j * rng.normal(size=401))
+        made = bench(tmp_path / str(seed), {"x.s2p": (FREQUENCY, clean + noise)}, sheet)
+        peak = analyse(made).devices[0].figures["peak_gain"]
+        above.append((0.5 * (peak.low + peak.high) - peak.value) / peak.standard_uncertainty)
+    assert np.mean(above) < 0.25

@@ -186,6 +186,28 @@ def test_gain_foretold_at_a_drive_already_swept_is_what_was_read_there():
     assert compared >= 2
 
 
+def test_gain_foretold_for_a_pad_that_is_off_is_what_its_true_loss_makes_of_it():
+    # The device's gain is what the sweeps read with the pad's true loss taken out; a line through the pad reads it low
+    # by what the pad loses beyond its stated value, for that is what the sheet takes out.
+    through, past = 0, 0
+    for seed in range(80):
+        made, study, plan = planned(seed, "pad")
+        for sweep in plan:
+            said = re.search(r"([\d.]+) dB if pad (\w+) is off", sweep.settles)
+            if said is None:
+                continue
+            name, table = said[2], study.table
+            off = next(r.value for r in study.verdict.rivals if r.cause == "pad-value" and r.about == name)
+            pad = next(pad for pad in table.pads if pad.name == name)
+            true_gain = np.mean(table.design_gain_db - pad.reads * off)
+            calibrated = (*made.sheet.calibration.input_pads, *made.sheet.calibration.output_pads)
+            added = (*sweep.input_pads, *sweep.output_pads).count(name) - calibrated.count(name)
+            assert_allclose(float(said[1]), true_gain - added * off, rtol=0, atol=0.006)  # dB, as printed
+            through, past = through + (added != 0), past + (added == 0)
+    assert through >= 1
+    assert past >= 1
+
+
 def test_sure_pad_is_measured_by_itself_and_nothing_else_is_told_apart():
     made, study, plan = first_with("pad", "pad-value-suspect")
     assert study.verdict.confidence >= 0.95
