@@ -54,7 +54,7 @@ practice, no source)."""
 _LEAST_U_DB: Final = 0.005
 _LAWS: Final = ((Law("tanh"), 0.1), (Law("cubic"), 0.1), (None, 0.8))
 """Laws with their shares of belief; None is Rapp's, over every p."""
-_GRIDS: Final = ((16, 5), (13, 7), (14, 9))
+_GRIDS: Final = ((16, 5), (15, 7), (14, 9))
 """Places of the 1 dB point, and values of Rapp's p, that each look takes in."""
 _NEWTON_STEPS: Final = 6
 _STILL_DB: Final = 0.01
@@ -118,9 +118,9 @@ def weigh_limiting(table: DriveTable, doubts: Doubts) -> list[Weighed]:
     alike = bool(np.ptp(table.output_loss_db) == 0.0)
     sought: list[tuple[Cause, ...]] = [causes[::2], causes[1:2]] if alike else [(cause,) for cause in causes]
     searches = [_LevelSearch(table, doubts, some) for some in sought]
-    for places, shapes in _GRIDS:
+    for number, (places, shapes) in enumerate(_GRIDS):
         for search in searches:
-            search.look(places, shapes)
+            search.look(places, shapes, first=number == 0)
         top = max(law.log_best for search in searches for law in search.laws)
         for search in searches:
             search.live = [law for law in search.live if law.log_best + law.between > top - _HOPELESS]
@@ -218,8 +218,7 @@ class _LawRange:
         row, lift, slack = _tops(score)
         top = self._p1db[0] + row * step
         matters = np.flatnonzero(lift + slack > -_MATTERS)
-        seen = np.flatnonzero(np.isfinite(lift))
-        self._ridge = self._shape[seen], top[seen]
+        self._ridge = self._shape[matters], top[matters]
         near = score[:, matters] > -_MATTERS
         # At least the node of the top itself, and a step beyond what matters either way.
         near[np.rint(row[matters]).astype(np.intp), np.arange(matters.size)] = True
@@ -261,8 +260,12 @@ class _LevelSearch:
         self._prior = prior_precision([*plain, detuning] if self._detunes else plain)
         self._plain = len(plain) * table.sweeps
 
-    def look(self, places: int, shapes: int) -> None:
-        """Weigh a grid of so many 1 dB points, and values of p, for each law that is still live."""
+    def look(self, places: int, shapes: int, *, first: bool = False) -> None:
+        """Weigh a grid of so many 1 dB points, and values of p, for each law that is still live.
+
+        The nodes of the first look lie further apart than a hard knee is wide. There each stands for all of its cell: how
+        far the drop changes within it counts as noise, or all nodes might miss what lies between them.
+        """
         if not self.live:
             return
         for law in self.live:
@@ -271,11 +274,12 @@ class _LevelSearch:
         ends = np.cumsum([place.size for place, _ in grids])
         parts = [slice(int(end) - place.size, int(end)) for end, (place, _) in zip(ends, grids, strict=True)]
         p1db, log_p = (np.concatenate(column) for column in zip(*grids, strict=True))
-        left, slope, drop = self._fit_gain(p1db, log_p, parts)
+        blur = (self._reach[1] - self._reach[0]) / (places - 1) / np.sqrt(12.0) if first else 0.0
+        left, slope, rate, drop = self._fit_gain(p1db, log_p, parts)
         seen = np.max(drop, axis=(1, 2)) >= _LEAST_DROP_DB
         seen &= (p1db >= self._reach[0]) & (p1db <= self._reach[1])
         # With all freedoms, and with those that every way has.
-        whole, plain = self._equations(left, slope, drop).log_evidence(self._prior, self._plain)
+        whole, plain = self._equations(left, slope, drop, blur * rate).log_evidence(self._prior, self._plain)
         weighed: list[tuple[Cause, FloatArray, FloatArray, FloatArray]] = []
         for way in self._ways:
             log, chi2 = whole if way.detunes else plain
@@ -286,7 +290,9 @@ class _LevelSearch:
             belief = float(np.log(law.share))
             law.take([(cause, log[part] + belief, level[part], chi2[part]) for cause, log, level, chi2 in weighed])
 
-    def _equations(self, left: FloatArray, slope: FloatArray, drop: FloatArray) -> NormalEquations:
+    def _equations(
+        self, left: FloatArray, slope: FloatArray, drop: FloatArray, blur_db: FloatArray
+    ) -> NormalEquations:
         """Return the equations with the doubts, how far the law may be out and, where a way has it, detuning."""
         c = len(self._patterns)
         columns = np.empty((len(drop), c + 1 + self._detunes, *drop.shape[1:]))
@@ -294,13 +300,16 @@ class _LevelSearch:
         columns[:, c] = drop
         if self._detunes:
             columns[:, c + 1] = np.max(drop, axis=2)[..., None] * self.table.slope_db
-        weight = 1.0 / (self.table.noise_db**2 + (_LAW_ROUGHNESS * drop) ** 2)
+        weight = 1.0 / (self.table.noise_db**2 + (_LAW_ROUGHNESS * drop) ** 2 + blur_db**2)
         return normal_equations(weight, slope, left, columns)
 
     def _fit_gain(
         self, p1db: FloatArray, log_p: FloatArray, parts: Sequence[slice]
-    ) -> tuple[FloatArray, FloatArray, FloatArray]:
-        """Return what is left of the gain after the drop, its slope with g_j, and the drop, (G, k, j) each."""
+    ) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+        """Return what is left of the gain after the drop, its slope with g_j, the drop's rate with level, and the drop.
+
+        All (G, k, j).
+        """
         p = np.exp(log_p)[:, None, None]
 
         def drop_of(excess: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -316,10 +325,10 @@ class _LevelSearch:
         base = self._offset[None] - p1db[:, None, None]
         if not self._follows_gain:
             # The level is the same at every node but for a tilt of the source, and does not depend on g_j.
-            drop, _ = drop_of(base)
+            drop, rate = drop_of(base)
             raised = gain + drop
             own = np.sum(weight * raised, axis=1, keepdims=True) / np.sum(weight, axis=1, keepdims=True)
-            return raised - own, np.ones_like(drop), drop
+            return raised - own, np.ones_like(drop), rate, drop
         own = np.repeat(np.max(gain, axis=1, keepdims=True), p1db.size, axis=0)
         for _ in range(_NEWTON_STEPS):
             drop, rate = drop_of(base + own)
@@ -335,7 +344,7 @@ class _LevelSearch:
         else:
             drop, rate = drop_of(base + own)
             slope = np.clip(1.0 - rate, 0.05, 1.0)
-        return gain - own + drop, slope, drop
+        return gain - own + drop, slope, rate, drop
 
 
 def _summed(cause: Cause, log: FloatArray, p1db: FloatArray, chi2: FloatArray, cells: FloatArray) -> Weighed:

@@ -89,6 +89,18 @@ def test_output_limited(law):
     assert finding.code == "output-limited" and "s3.s2p" in finding.message
 
 
+@pytest.mark.parametrize("law", [Law("rapp", 3.0), Law("rapp", 5.0), Law("cubic")])
+@pytest.mark.parametrize("drives", [(-56.0, -52.0, -50.0), (-54.0, -53.0, -52.0, -51.0, -50.0), (-60.0, -55.0, -50.0)])
+@pytest.mark.parametrize("depth", [0.0, 0.5, 1.0, 2.0, 3.0, 4.0])
+def test_a_hard_knee_is_not_passed_over(law, drives, depth):
+    # Narrower than the first nodes of a search lie apart: wherever it falls between them, it is found.
+    p1db = drives[-1] + 30.0 - depth
+    verdict = find_cause(table(drives, limited(drives, p1db, law, "output"), limit=60.0))
+    rival = next(rival for rival in verdict.rivals if rival.cause == "output-limited")
+    assert verdict.probabilities["output-limited"] > 0.9
+    assert_allclose(rival.value, p1db, rtol=0, atol=0.5)  # dBm at the output
+
+
 @pytest.mark.parametrize("law", [Law("rapp", 1.2), Law("tanh"), Law("cubic")])
 def test_input_limited_with_four_drives(law):
     seen = table(DRIVES, limited(DRIVES, -28.0, law, "input"), pads=LADDER)
