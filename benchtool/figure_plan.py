@@ -204,9 +204,14 @@ class FigureBuilder:
         )
         return True
 
+    def trace(self, parameter: str) -> ComplexArray:
+        """Return one scattering parameter of the sweep, (n,)."""
+        trace: ComplexArray = self.sweep.s[int(parameter[1]) - 1, int(parameter[2]) - 1]
+        return trace
+
     def curve(self, parameter: str, low_hz: float, high_hz: float) -> Curve:
         """Return the smooth curve of one scattering parameter, for an extractor to use."""
-        trace = self.sweep.s[int(parameter[1]) - 1, int(parameter[2]) - 1]
+        trace = self.trace(parameter)
         curve = fit_curve(self.sweep.frequency_hz, trace, low_hz, high_hz, self.noise.get(parameter))
         self.uses(parameter, curve)
         return curve

@@ -135,7 +135,7 @@ def _add_match(build: FigureBuilder, band: Passband, edges: PassbandFigures, at_
         if low == high and not inside:
             build.add(figure, None, parameters=where)
         elif low < high:
-            build.add(figure, _worst(build.curve(name, low, high), name), parameters=where)
+            build.add(figure, _worst(build, build.curve(name, low, high), name), parameters=where)
         else:
             build.add(figure, _at_point(build, name, at_hz), parameters=where)
     if "S12" in build.sweep.measured:
@@ -146,8 +146,8 @@ def _add_match(build: FigureBuilder, band: Passband, edges: PassbandFigures, at_
             build.add(figure, _stability(build, figure, at_hz) if inside else None, parameters={"at_hz": at_hz})
 
 
-def _worst(curve: Curve, parameter: str) -> Extractor:
-    search = LevelSearch(curve)
+def _worst(build: FigureBuilder, curve: Curve, parameter: str) -> Extractor:
+    search = LevelSearch(curve, build.trace(parameter))
     return lambda _plan, traces, _found: worst_return_loss(search, traces[parameter])
 
 

@@ -263,7 +263,7 @@ class _LevelSearch:
     def look(self, places: int, shapes: int, *, first: bool = False) -> None:
         """Weigh a grid of so many 1 dB points, and values of p, for each law that is still live.
 
-        The nodes of the first look lie further apart than a hard knee is wide. There each stands for all of its cell: how
+        The nodes of the first look lie further apart than a hard knee is wide. There each stands for its cell: how
         far the drop changes within it counts as noise, or all nodes might miss what lies between them.
         """
         if not self.live:
@@ -290,9 +290,7 @@ class _LevelSearch:
             belief = float(np.log(law.share))
             law.take([(cause, log[part] + belief, level[part], chi2[part]) for cause, log, level, chi2 in weighed])
 
-    def _equations(
-        self, left: FloatArray, slope: FloatArray, drop: FloatArray, blur_db: FloatArray
-    ) -> NormalEquations:
+    def _equations(self, left: FloatArray, slope: FloatArray, drop: FloatArray, blur_db: FloatArray) -> NormalEquations:
         """Return the equations with the doubts, how far the law may be out and, where a way has it, detuning."""
         c = len(self._patterns)
         columns = np.empty((len(drop), c + 1 + self._detunes, *drop.shape[1:]))

@@ -21,8 +21,10 @@ from benchtool.model import ComplexArray, FloatArray
 __all__ = ["LevelSearch", "Levels"]
 
 _EVERY: Final = 6
-_EVERY_OF_PIECES: Final = 2
-"""Of one fit every so many nodes are looked at; several side by side have fewer nodes each, and more are."""
+"""Of one fit with one hump every so many nodes are looked at; of several fits, or humps that vie, all."""
+_FEW_NODES: Final = 12
+_VYING: Final = 10.0**-0.3
+"""Share of the highest power from which another hump may be the highest of a copy: half of it."""
 _STEPS: Final = 2
 _DB: Final = 10.0 / float(np.log(10.0))
 """Decibels for each unit of the natural logarithm of power."""
@@ -34,22 +36,27 @@ class LevelSearch:
     Parameters
     ----------
     curve : the smooth curve of the trace
+    s : (n,) the trace as measured
     low_hz, high_hz : the highest level is sought between these, where the curve has nodes there
     """
 
-    def __init__(self, curve: Curve, low_hz: float = -np.inf, high_hz: float = np.inf) -> None:
+    def __init__(self, curve: Curve, s: ComplexArray, low_hz: float = -np.inf, high_hz: float = np.inf) -> None:
         grid = curve.grid_hz
         first = min(int(np.searchsorted(grid, low_hz, side="left")), grid.size - 1)
         last = max(int(np.searchsorted(grid, high_hz, side="right")) - 1, first)
-        every = _EVERY if len(curve.fits) == 1 else _EVERY_OF_PIECES
-        used = np.unique([*range(0, grid.size, every), grid.size - 1, first, last])
-        self.nodes_hz = grid[used]
-        self.first, self.last = int(np.searchsorted(used, first)), int(np.searchsorted(used, last))
         self.low_hz, self.high_hz = float(grid[first]), float(grid[last])
         self.fits = curve.fits
         self.borders = np.array([fit.low_hz for fit in curve.fits[1:]])
+        self._look_at(grid, first, last, _EVERY)
+        if len(curve.fits) > 1 or last - first < _FEW_NODES or self.levels(s).vying():
+            self._look_at(grid, first, last, 1)
+
+    def _look_at(self, grid: FloatArray, first: int, last: int, every: int) -> None:
+        used = np.unique([*range(0, grid.size, every), grid.size - 1, first, last])
+        self.nodes_hz = grid[used]
+        self.first, self.last = int(np.searchsorted(used, first)), int(np.searchsorted(used, last))
         owner = np.searchsorted(self.borders, self.nodes_hz, side="right")
-        self._bases = [fit.basis(self.nodes_hz[owner == place]).T for place, fit in enumerate(curve.fits)]
+        self._bases = [fit.basis(self.nodes_hz[owner == place]).T for place, fit in enumerate(self.fits)]
 
     def levels(self, s: Trace) -> Levels:
         """Return the levels of a trace, (n,), or of copies of it, (..., n)."""
@@ -83,20 +90,26 @@ class Levels:
         low, at, high = nodes[middle - 1], nodes[middle], nodes[middle + 1]
         with np.errstate(divide="ignore", invalid="ignore"):
             left, top, right = (np.log(self._power[self._rows, middle + step]) for step in (-1, 0, 1))
-            # The vertex of the parabola through three nodes, and from there a step of Newton's.
+            # The vertex of the parabola through three nodes, and from there Newton's method.
             fall, rise = (top - left) / (at - low), (right - top) / (high - at)
-            vertex = 0.5 * (low + at) + 0.5 * fall * (high - low) / (fall - rise)
-            inside = (fall > rise) & (vertex > low) & (vertex < high)
-            start = np.where(inside, vertex, at)
-            level, slope, bend = self._logarithm(start, 2)
-            step = -slope / bend
-            found = inside & (bend < 0.0) & (start + step >= low) & (start + step <= high)
-            level += 0.5 * slope * step
+            at = 0.5 * (low + at) + 0.5 * fall * (high - low) / (fall - rise)
+            found = (fall > rise) & (at > low) & (at < high)
+            at = np.where(found, at, nodes[node])
+            for _ in range(_STEPS):
+                _, slope, bend = self._logarithm(at, 2)
+                at = np.where(bend < 0.0, np.minimum(np.maximum(at - slope / bend, low), high), at)
+            (level,) = self._logarithm(at, 0)
         # Where no top is found between the nodes, it is at one.
         best = np.maximum(np.maximum(left, top), right)
         found &= level >= best
-        at, level = np.where(found, start + step, nodes[node]), np.where(found, level, best)
+        at, level = np.where(found, at, nodes[node]), np.where(found, level, best)
         return at.reshape(self._shape), (_DB * level).reshape(self._shape)
+
+    def vying(self) -> bool:
+        """Whether humps between the limits of the search vie for the highest level of a single trace."""
+        power = self._power[0, self._search.first : self._search.last + 1]
+        humps = (power[1:-1] >= power[:-2]) & (power[1:-1] > power[2:]) & (power[1:-1] > _VYING * np.max(power))
+        return bool(np.count_nonzero(humps) > 1)
 
     def edges(self, target_db: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Return where the level first falls below `target_db` (...,), going down and going up from the highest node.

@@ -249,7 +249,7 @@ def plan_passband(
     low_end = min(max(low_hz - margin, float(frequency_hz[skirts[0]])), low_hz - 1.5 * step)
     high_end = max(min(high_hz + margin, float(frequency_hz[skirts[1]])), high_hz + 1.5 * step)
     curve = fit_curve(frequency_hz, s21, low_end, high_end, noise, points=_FEW_POINTS)
-    search = LevelSearch(curve, *(window_hz or (-np.inf, np.inf)))
+    search = LevelSearch(curve, s21, *(window_hz or (-np.inf, np.inf)))
     at_hz = float(search.levels(s21).highest()[0])
     humps = _humps(frequency_hz, level, (start, stop), (left, right), float(level[peak]))
     return Passband(
@@ -285,17 +285,14 @@ class LevelWidth:
     below_db: float
     lower: Curve
     upper: Curve
-
-    @cached_property
-    def _searches(self) -> tuple[LevelSearch, LevelSearch]:
-        return LevelSearch(self.lower), LevelSearch(self.upper)
+    searches: tuple[LevelSearch, LevelSearch]
 
     def width(self, s21: Trace, peak_gain_db: FloatArray) -> FloatArray:
         """Return the width in Hz, (...,), of a trace or copies of it; NaN where an edge is lost."""
         target = peak_gain_db - self.below_db
         lower, upper = (
             search.levels(s21).falls(target, direction)
-            for search, direction in zip(self._searches, (-1, 1), strict=True)
+            for search, direction in zip(self.searches, (-1, 1), strict=True)
         )
         return upper - lower
 
@@ -319,4 +316,5 @@ def plan_level_width(
             return None
         reach = _SMOOTHING * abs(coarse - centre)
         curves.append(fit_curve(frequency_hz, s21, coarse - reach, coarse + reach, noise))
-    return LevelWidth(below_db, *curves)
+    lower, upper = curves
+    return LevelWidth(below_db, lower, upper, (LevelSearch(lower, s21), LevelSearch(upper, s21)))
