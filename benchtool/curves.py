@@ -181,7 +181,7 @@ class Curve:
 
     fits: tuple[Fit, ...]
     grid_hz: FloatArray
-    """(g,) rising, dense enough that a parabola through three neighbours is exact for every purpose here."""
+    """(g,) rising, dense enough that a parabola through three neighbours serves what is not sought on the fits."""
 
     @property
     def span_hz(self) -> float:

@@ -77,7 +77,8 @@ class MismatchDoubt:
 
 def parabola(f: FloatArray, at_hz: FloatArray) -> tuple[NDArray[np.intp], FloatArray]:
     """Return the samples nearest each frequency, (j, m), and the weights that give a parabola's value there, (j, m)."""
-    return _parabola(np.ascontiguousarray(f).tobytes(), np.ascontiguousarray(at_hz).tobytes())
+    every, wanted = (np.ascontiguousarray(each, np.float64).tobytes() for each in (f, at_hz))
+    return _parabola(every, wanted)
 
 
 @lru_cache(maxsize=12)

@@ -186,7 +186,7 @@ class _LawRange:
         return self._p1db.ravel(), np.tile(self._shape, places)
 
     def take(self, ways: Sequence[tuple[Cause, FloatArray, FloatArray, FloatArray]]) -> None:
-        """Take the log weight, level and misfit of each cause's ways on the grid, (n,) each, and close in."""
+        """Take the log weight, level and misfit of each cause's ways on the grid, (n,) each."""
         places, shapes = self._p1db.shape
         # The trapezoidal rule: what lies at the ends of p has half a cell.
         share = np.full(places, self._offset[1] - self._offset[0])

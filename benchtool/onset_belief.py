@@ -38,8 +38,9 @@ __all__ = [
 BELOW_DB: Final = 15.0
 ABOVE_DB: Final = 25.0
 """How far below the lowest and above the highest drive the 1 dB point is looked for."""
-_GRIDS: Final = (61, 101)
+_GRIDS: Final = (81, 101)
 """Places of the 1 dB point that the first look takes in, and the second at what can matter of it."""
+_BOUND_STEPS: Final = 4
 _DRAWS: Final = 4000
 """Drawn evenly along the grid, so that quantiles wander far less than those of as many independent draws."""
 _SEEN: Final = 4.5
@@ -196,7 +197,13 @@ def _last_below(grid: FloatArray, values: FloatArray, limit: float) -> float:
     last = int(below[-1])
     if last == grid.size - 1:
         return float(grid[-1])
-    way = (limit - values[last]) / (values[last + 1] - values[last])
+    step = float(values[last + 1] - values[last])
+    # The parabola through the next node too: the likelihood bends there, and a chord would cross the limit late.
+    bend = float(values[last + 2] - values[last + 1]) - step if last + 2 < grid.size else 0.0
+    way = (limit - float(values[last])) / step
+    for _ in range(_BOUND_STEPS):
+        off = float(values[last]) + way * step + 0.5 * way * (way - 1.0) * bend - limit
+        way = min(max(way - off / (step + (way - 0.5) * bend), 0.0), 1.0)
     return float(grid[last] + way * (grid[last + 1] - grid[last]))
 
 

@@ -39,8 +39,9 @@ _AS_JSON: Final = bytes(
     for code in range(256)
 )
 """Blanks become commas; what is part of no number becomes a letter that no number can hold."""
-_TAKEN_BY_JSON: Final = (b",", b"\t", b"t", b"f", b"n", b"N", b"I")
-"""Bytes of what a JSON parser takes and is no number between blanks: true, false, null, NaN, Infinity, a comma."""
+_TAKEN_BY_JSON: Final = (b",", b"\t", b"\r", b"t", b"f", b"n", b"N", b"I")
+"""Bytes of what a JSON parser takes, and packing as numbers too, and is none between blanks: true, false, null, NaN,
+Infinity, a comma, a blank of another kind. Text, lists and objects do not pass for numbers."""
 _MARK: Final = re.compile(r"[+-]?(?:nan|inf|infinity)|[1-]\.#(?:inf|ind|qnan)\w*|-+|\*+|ovl|ovld|overload|n/?a", re.I)
 """What stands where an analyzer has no number to give."""
 _NOT_FINITE: Final = re.compile(r"[+-]?(?:nan|inf|infinity)", re.IGNORECASE)

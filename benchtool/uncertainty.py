@@ -53,8 +53,12 @@ class FigureTrials:
 
 
 def _block_size(samples: int) -> int:
-    """Return how many trials to draw at a time, when each takes so many samples drawn one by one."""
-    return int(max(16, min(BLOCK, _BLOCK_BYTES / (4 * 16 * max(samples, 1)))))
+    """Return how many trials to draw at a time, when each takes so many samples drawn one by one.
+
+    Whole batches where there is room for one, so that each has a lattice of its own.
+    """
+    size = int(max(16, min(BLOCK, _BLOCK_BYTES / (4 * 16 * max(samples, 1)))))
+    return size - size % BATCH if size > BATCH else size
 
 
 def figure_trials(

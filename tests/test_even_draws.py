@@ -56,16 +56,18 @@ def test_components_are_odd_so_that_any_power_of_two_is_covered_evenly():
     assert len(set(VECTOR)) == len(VECTOR)
 
 
-def test_no_two_dimensions_are_the_same_or_mirrored():
-    some = draws(3, [4096])
-    every = np.array([some.uniform() for _ in range(len(VECTOR) + 2)])
+@pytest.mark.parametrize("count", [BATCH, 4096])
+def test_no_two_dimensions_are_the_same_or_mirrored(count):
+    some = draws(3, [count])
+    every = np.array([some.uniform() for _ in range(len(VECTOR) + 3)])
     for far in (1, 2):
-        # Neither the difference nor the sum of two dimensions may be stuck: both run through the whole circle.
+        # Neither the difference nor the sum of two dimensions may be stuck, nor twice it: they run through the circle.
         for other in (1.0, -1.0):
             turned = np.exp(2j * np.pi * far * (every[:, None] + other * every[None]))
             stuck = np.abs(np.mean(turned, axis=2))
             np.fill_diagonal(stuck, 0.0)
-            assert np.max(stuck) < 0.2
+            # The dimensions beyond the vector are independent: a mean of so many directions is seldom above 4/√n.
+            assert np.max(stuck) < 4.0 / np.sqrt(count)
 
 
 def test_segments_are_independent():
