@@ -15,6 +15,7 @@ from functools import cached_property
 from itertools import combinations_with_replacement
 
 import numpy as np
+from numpy.typing import NDArray
 
 from benchtool.curves import Fit
 from benchtool.model import ComplexArray, FloatArray
@@ -117,14 +118,14 @@ class TraceCopies:
     ) -> None:
         self._model, self._scale, self._sizes, self._added = model, scale, sizes, added
         self._found: dict[Fit, ComplexArray] = {}
-        self._noise: dict[str, ComplexArray] = {}
+        self._noise: dict[str, tuple[NDArray[np.intp], NDArray[np.complex64]]] = {}
         for source, moving in moves.items():
             if source in model.noises:
-                every = model.used.size
+                every, rows = model.used.size, np.flatnonzero(moving)
                 count = every if model.by_samples else min(every, sum(fit.degree + 1 for fit in model.fits))
                 # Seven digits are plenty for noise, and are drawn in half the time.
-                pairs = rng.standard_normal((scale.size, count, 2), np.float32)
-                self._noise[source] = pairs.view(np.complex64)[..., 0] * (np.sqrt(0.5) * moving[:, None])
+                pairs = rng.standard_normal((rows.size, count, 2), np.float32)
+                self._noise[source] = rows, np.asarray(pairs.view(np.complex64)[..., 0] * np.float32(np.sqrt(0.5)))
 
     def coefficients(self, fit: Fit) -> ComplexArray:
         """Return the Legendre coefficients of a fit to the copies, (copies, degree + 1)."""
@@ -137,9 +138,9 @@ class TraceCopies:
             first = int(np.searchsorted(self._model.used, fit.start))
             return fit.coefficients_of_samples(self._samples[:, first : first + fit.stop - fit.start])
         found: ComplexArray = self._weights(fit.inverse) @ self._model.basis(fit)
-        for source, draws in self._noise.items():
+        for source, (rows, draws) in self._noise.items():
             noise = draws @ self._model.noise_bases(source)[fit]
-            found += noise * self._scale[:, None] ** -2 if fit.inverse else noise
+            found[rows] += noise * self._scale[rows, None] ** -2 if fit.inverse else noise
         return found
 
     def _weights(self, inverse: bool) -> ComplexArray:
@@ -157,6 +158,6 @@ class TraceCopies:
         samples: ComplexArray = self._scale[:, None] * model.trace[model.used]
         for size, term in zip(self._added, model.terms, strict=True):
             samples += size[:, None] * term[model.used]
-        for source, draws in self._noise.items():
-            samples += draws * model.noises[source][model.used]
+        for source, (rows, draws) in self._noise.items():
+            samples[rows] += draws * model.noises[source][model.used]
         return samples

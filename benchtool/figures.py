@@ -58,9 +58,9 @@ def plan_figures(
     ------
     ValueError : the window holds no sample.
     """
-    f, noise = sweep.frequency_hz, SweepNoise(sweep)
-    passband = plan_passband(f, sweep.s21, window_hz, noise["S21"])
-    peak = passband.figures(sweep.s21)
+    f, s21, noise = sweep.frequency_hz, sweep.s21, SweepNoise(sweep)
+    passband = plan_passband(f, s21, window_hz, noise["S21"])
+    peak = passband.figures(s21)
     peak_hz = float(peak.peak_frequency)
     at = design_hz if design_hz is not None else peak_hz
     design_curve, grid = passband.curve, passband.curve.grid_hz

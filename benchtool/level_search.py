@@ -48,8 +48,11 @@ class LevelSearch:
         self.fits = curve.fits
         self.borders = np.array([fit.low_hz for fit in curve.fits[1:]])
         self._look_at(grid, first, last, _EVERY)
-        if len(curve.fits) > 1 or last - first < _FEW_NODES or self.levels(s).vying():
+        seen = self._levels(s)
+        if len(curve.fits) > 1 or last - first < _FEW_NODES or seen.vying():
             self._look_at(grid, first, last, 1)
+            seen = self._levels(s)
+        self._trace, self._seen = s, seen
 
     def _look_at(self, grid: FloatArray, first: int, last: int, every: int) -> None:
         used = np.unique([*range(0, grid.size, every), grid.size - 1, first, last])
@@ -60,6 +63,9 @@ class LevelSearch:
 
     def levels(self, s: Trace) -> Levels:
         """Return the levels of a trace, (n,), or of copies of it, (..., n)."""
+        return self._seen if s is self._trace else self._levels(s)
+
+    def _levels(self, s: Trace) -> Levels:
         coefficients = [fit.coefficients(s) for fit in self.fits]
         rows = [each.reshape(-1, each.shape[-1]) for each in coefficients]
         powers = [_power(fit, own, basis) for fit, own, basis in zip(self.fits, rows, self._bases, strict=True)]
@@ -82,6 +88,10 @@ class Levels:
 
         At a limit, the level there.
         """
+        return self._highest
+
+    @cached_property
+    def _highest(self) -> tuple[FloatArray, FloatArray]:
         search, nodes, node = self._search, self._search.nodes_hz, self._top
         middle = np.minimum(np.maximum(node, search.first + 1), search.last - 1)
         if search.last - search.first < 2:

@@ -38,7 +38,7 @@ __all__ = [
 BELOW_DB: Final = 15.0
 ABOVE_DB: Final = 25.0
 """How far below the lowest and above the highest drive the 1 dB point is looked for."""
-_GRIDS: Final = (81, 101)
+_GRIDS: Final = (81, 81)
 """Places of the 1 dB point that the first look takes in, and the second at what can matter of it."""
 _BOUND_STEPS: Final = 4
 _DRAWS: Final = 4000
