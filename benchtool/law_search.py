@@ -365,7 +365,7 @@ def _tops(score: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
     row, columns = np.argmax(score, axis=0), np.arange(score.shape[1])
     middle = np.clip(row, 1, len(score) - 2)
     early, top, late = (score[middle + k, columns] for k in (-1, 0, 1))
-    with np.errstate(invalid="ignore"):
+    with np.errstate(divide="ignore", invalid="ignore"):
         slope, bend = 0.5 * (late - early), early - 2.0 * top + late
         shift = -slope / bend
         inside = (middle == row) & (bend < 0.0) & np.isfinite(bend)
