@@ -26,10 +26,11 @@ from benchtool.units import from_db, to_db
 
 __all__ = ["FigureTrials", "figure_trials"]
 
-_BUDGET_TRIALS: Final = 256
+_BUDGET_TRIALS: Final = 128
+"""Trials with one source alone: spread evenly, they know its share of a variance to a hundredth or two."""
 _BIAS_TRIALS: Final = 1024
 """Trials with noise alone: their median is the bias that is taken out, and must not wander."""
-_TOGETHER: Final = 2560
+_TOGETHER: Final = 2048
 """Trials of a budget that are made in one go, where they take no more memory than others."""
 _MAY_BE_LOST: Final = 0.01
 _BLOCK_BYTES: Final = 48e6
