@@ -16,7 +16,7 @@ import numpy as np
 from benchtool.digits import level_text
 from benchtool.figures import FigurePlan
 from benchtool.fitting import fit_curve
-from benchtool.model import Compression, CompressionPoint, FloatArray, Sweep, SweepResult
+from benchtool.model import Compression, CompressionPoint, FloatArray, SweepResult
 from benchtool.response import PassbandFigures
 from benchtool.units import to_db, wrap_degrees
 
@@ -96,12 +96,24 @@ def _level_db(value: complex) -> float:
     return float(max(to_db(value), _NO_SIGNAL_DB))
 
 
-def _over_band(sweep: Sweep, plan: FigurePlan, nodes: FloatArray) -> FloatArray:
-    """Return the level of S21 of a sweep at the nodes in dB, (g,), from its own smooth curve."""
-    curve, low, high = plan.passband.curve, float(nodes[0]), float(nodes[-1])
+def _read_at(sweep: MeasuredSweep, nodes: FloatArray, *places_hz: float) -> tuple[FloatArray, list[complex]]:
+    """Return the level of S21 of a sweep at the nodes in dB, (g,), and S21 at some places, from its smooth curve.
+
+    NaN at a place outside the sweep.
+    """
+    plan, trace = sweep.plan, sweep.result.sweep
+    f, curve = trace.frequency_hz, plan.passband.curve
+    inside = [float(f[0]) <= place <= float(f[-1]) for place in places_hz]
+    wanted = np.array([*nodes, *(at if has else nodes[0] for at, has in zip(places_hz, inside, strict=True))])
+    order = np.argsort(wanted, kind="stable")
+    low, high = float(wanted[order[0]]), float(wanted[order[-1]])
     if not curve.grid_hz[0] <= low <= high <= curve.grid_hz[-1]:
-        curve = fit_curve(sweep.frequency_hz, sweep.s21, low, high, plan.noise.get("S21"))
-    return np.maximum(curve.level_at(sweep.s21, nodes), _NO_SIGNAL_DB)
+        curve = fit_curve(f, trace.s21, low, high, plan.noise.get("S21"))
+    values = np.empty(wanted.size, np.complex128)
+    values[order] = curve.values_at(trace.s21, wanted[order])
+    with np.errstate(divide="ignore"):
+        level = np.maximum(to_db(values[: nodes.size]), _NO_SIGNAL_DB)
+    return level, [complex(v) if has else complex("nan") for v, has in zip(values[nodes.size :], inside, strict=True)]
 
 
 def _band(sweeps: Sequence[MeasuredSweep], reference: MeasuredSweep, at_hz: float) -> FloatArray:
@@ -127,13 +139,14 @@ def compare_drives(
         return None
     nodes = _band(sweeps, reference, at_hz)
     peak_hz = float(reference.passband.peak_frequency)
-    base = _over_band(reference.result.sweep, reference.plan, nodes)
-    base_at, base_peak = _at(reference, at_hz), _at(reference, peak_hz)
+    base, (base_at, base_peak) = _read_at(reference, nodes, at_hz, peak_hz)
     points = []
     for sweep in sweeps:
         path = sweep.result.path
-        here, peak = _at(sweep, at_hz), _at(sweep, peak_hz)
-        change = base - _over_band(sweep.result.sweep, sweep.plan, nodes)
+        level, (here, peak) = (
+            (base, (base_at, base_peak)) if sweep is reference else _read_at(sweep, nodes, at_hz, peak_hz)
+        )
+        change = base - level
         worst = int(np.argmax(change))
         drop = _level_db(base_at) - _level_db(here)
         elsewhere = float(change[worst]) > drop + _CLEARLY_WORSE_DB
@@ -154,16 +167,3 @@ def compare_drives(
         )
     points.sort(key=lambda point: (point.drive_dbm is None, point.drive_dbm or 0.0, -point.gain_db))
     return Compression(at_hz, peak_hz, reference.file, reason, tuple(points))
-
-
-def _at(sweep: MeasuredSweep, at_hz: float) -> complex:
-    """Return S21 of a sweep at one frequency from its smooth curve; NaN outside the sweep."""
-    plan, trace = sweep.plan, sweep.result.sweep
-    f = trace.frequency_hz
-    if not f[0] <= at_hz <= f[-1]:
-        return complex("nan")
-    grid = plan.passband.curve.grid_hz
-    if grid[0] <= at_hz <= grid[-1]:
-        return complex(plan.passband.curve.at(trace.s21, at_hz)[0])
-    width = 0.05 * float(f[-1] - f[0])
-    return complex(fit_curve(f, trace.s21, at_hz - width, at_hz + width, plan.noise.get("S21")).at(trace.s21, at_hz)[0])

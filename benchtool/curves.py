@@ -200,6 +200,10 @@ class Curve:
         """Return the level of S in dB at rising frequencies (g,), (..., g), of a trace or copies of it."""
         return self._levels(self._nodes(frequency_hz), s)
 
+    def values_at(self, s: Trace, frequency_hz: FloatArray) -> ComplexArray:
+        """Return S at rising frequencies (g,), (..., g), of a trace or copies of it."""
+        return _side_by_side([nodes.evaluate(s) for nodes in self._nodes(frequency_hz)])[0]
+
     @staticmethod
     def _levels(stretches: Sequence[_Nodes], s: Trace) -> FloatArray:
         levels = [nodes.level_db(s) for nodes in stretches]

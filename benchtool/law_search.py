@@ -54,7 +54,7 @@ practice, no source)."""
 _LEAST_U_DB: Final = 0.005
 _LAWS: Final = ((Law("tanh"), 0.1), (Law("cubic"), 0.1), (None, 0.8))
 """Laws with their shares of belief; None is Rapp's, over every p."""
-_GRIDS: Final = ((16, 5), (15, 7), (14, 9))
+_GRIDS: Final = ((16, 5), (13, 7), (14, 9))
 """Places of the 1 dB point, and values of Rapp's p, that each look takes in."""
 _NEWTON_STEPS: Final = 6
 _STILL_DB: Final = 0.01

@@ -128,16 +128,16 @@ def _local_variance(frequency_hz: FloatArray, s: ComplexArray) -> FloatArray:
     floor = 1e-12 * float(np.max(power))
     inverse = np.conj(s) / np.maximum(power, floor)
     frequencies = np.ascontiguousarray(frequency_hz, np.float64).tobytes()
+    both, scales = np.array([s, inverse]), (1.0, power**2)
     best: FloatArray | None = None
     for order in _ORDERS:
         if s.size < order + 3:
             break
-        weights = _difference_weights(frequencies, order)
-        half = order // 2
-        for trace, scale in ((s, np.ones_like(power)), (inverse, power)):
-            windows = np.lib.stride_tricks.sliding_window_view(trace, order + 1)
-            residual: FloatArray = np.abs(np.einsum("ij,ij->i", windows, weights)) ** 2
-            padded: FloatArray = extended(residual, half) * scale**2
+        windows = np.lib.stride_tricks.sliding_window_view(both, order + 1, axis=1)
+        left = np.einsum("kij,ij->ki", windows, _difference_weights(frequencies, order))
+        residuals = left.real**2 + left.imag**2
+        for residual, scale in zip(residuals, scales, strict=True):
+            padded: FloatArray = extended(residual, order // 2) * scale
             variance = moving_average(padded, min(_NEIGHBOURS, s.size))
             best = variance if best is None else np.where(variance < _CLEARLY_LESS * best, variance, best)
     assert best is not None
