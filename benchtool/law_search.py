@@ -13,7 +13,7 @@ from typing import Final, Literal, TypeAlias
 
 import numpy as np
 
-from benchtool.drive_table import DriveTable
+from benchtool.drive_table import DriveTable, MismatchDoubt
 from benchtool.evidence import NormalEquations, normal_equations, prior_precision
 from benchtool.limiting import HARDEST_P, SOFTEST_P, Law, rapp_drop_and_slope
 from benchtool.model import FloatArray
@@ -52,6 +52,8 @@ _RECEIVER_UNSTATED: Final = (0.0, 7.0)
 """The 1 dB point in dBm of a low-cost receiver of which nothing is stated: mean and standard deviation (common
 practice, no source)."""
 _LEAST_U_DB: Final = 0.005
+_SMALL_DB: Final = 0.015
+"""A form of mismatch that reaches no further than this, less than the doubt of a node, counts as flat."""
 _LAWS: Final = ((Law("tanh"), 0.1), (Law("cubic"), 0.1), (None, 0.8))
 """Laws with their shares of belief; None is Rapp's, over every p."""
 _GRIDS: Final = ((16, 5), (13, 7), (14, 9))
@@ -77,14 +79,22 @@ class Weighed:
 
 
 def flat_precision(table: DriveTable, but_for: str = "") -> FloatArray:
-    """Return the precision (k, k) of the flat doubts of the sweeps: readings, and pads but for one."""
+    """Return the precision (k, k) of the flat doubts of the sweeps: readings, pads but for one, small mismatch."""
     covariance = np.diag(table.reading_u_db**2 + _LEAST_U_DB**2)
+    for form in table.mismatch:
+        if _is_small(form):
+            covariance = covariance + form.between * np.mean(form.pattern**2)
     for pad in table.pads:
         if pad.name == but_for:
             continue
         reads = pad.reads - pad.reads[0]
         covariance = covariance + pad.u_db**2 * np.outer(reads, reads)
     return np.asarray(np.linalg.inv(covariance))
+
+
+def _is_small(form: MismatchDoubt) -> bool:
+    """Whether a form of mismatch reaches so little far that its pattern over the nodes could not be told."""
+    return bool(np.max(np.abs(form.between)) * np.max(form.pattern**2) < _SMALL_DB**2)
 
 
 @dataclass(frozen=True, eq=False)
@@ -101,9 +111,9 @@ class Doubts:
         """Return the doubts of a drive table."""
         patterns, precisions = [np.ones(table.frequency_hz.size)], [flat_precision(table)]
         for form in table.mismatch:
-            between = form.between
             # What equal lines have in common goes with the gain of the device, which is free.
-            if np.max(np.abs(between)) > _LEAST_U_DB**2:
+            between = form.between
+            if not _is_small(form):
                 patterns.append(form.pattern)
                 precisions.append(
                     np.asarray(np.linalg.inv(between + _LEAST_U_DB**2 * np.eye(table.sweeps)), np.float64)
