@@ -48,7 +48,12 @@ def made_at() -> str:
 
 
 def analyse(
-    sheet: BenchSheet, progress: Progress | None = None, *, strict: bool = False, trials: int | None = None
+    sheet: BenchSheet,
+    progress: Progress | None = None,
+    *,
+    strict: bool = False,
+    trials: int | None = None,
+    sweeps: Mapping[Path, Sweep] | None = None,
 ) -> BenchResult:
     """Return everything that can be worked out from a bench sheet and its sweeps.
 
@@ -58,13 +63,14 @@ def analyse(
     progress : called with each device's name when that device is done
     strict : refuse every sweep file that does not follow the standard to the letter
     trials : how many the intervals rest on; None runs until they have settled
+    sweeps : from :func:`read_all`, where they were read already
 
     Raises
     ------
     BenchtoolError : a sweep or pad cannot be read or used; all faulty files are named at once.
     """
     bank = PadBank.of(sheet)
-    sweeps = read_all(sheet, strict)
+    sweeps = read_all(sheet, strict) if sweeps is None else sweeps
     devices = []
     for number, device in enumerate(sheet.devices, start=1):
         devices.append(analyse_device(sheet, device, number, bank, sweeps, trials))

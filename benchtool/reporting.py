@@ -11,6 +11,7 @@ import os
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
+from types import MappingProxyType
 from typing import TYPE_CHECKING, Any, Final
 
 from benchtool import __version__
@@ -56,10 +57,11 @@ class Report:
     options: ReportOptions
 
 
-def input_hashes(sheet: BenchSheet) -> dict[str, str]:
+def input_hashes(sheet: BenchSheet, read: Mapping[Path, Sweep] = MappingProxyType({})) -> dict[str, str]:
     """Return the SHA-256 of every file that a sheet rests on, by its name relative to the sheet.
 
-    A file that cannot be read has an empty one: it is for the analysis to say what is wrong with it.
+    A file that cannot be read has an empty one: it is for the analysis to say what is wrong with it. Of those that were
+    `read` already it is the one that was found then.
     """
     files = [pad.file for pad in sheet.pads.values() if pad.file is not None]
     for device in sheet.devices:
@@ -67,7 +69,8 @@ def input_hashes(sheet: BenchSheet) -> dict[str, str]:
             files += [file for file in (entry.file, entry.reversed) if file is not None]
     hashes = {sheet.path.name: sheet.sha256} if sheet.path is not None else {}
     for file in dict.fromkeys(files):
-        hashes[Path(os.path.relpath(file, sheet.folder.absolute())).as_posix()] = _sha256(file)
+        name = Path(os.path.relpath(file, sheet.folder.absolute())).as_posix()
+        hashes[name] = read[file].sha256 if file in read else _sha256(file)
     return hashes
 
 
@@ -91,14 +94,16 @@ def measure(
     ------
     BenchtoolError : a sweep or pad cannot be read or used.
     """
-    # Taken first: whatever changes while the bench is measured is then seen as changed the next time.
-    inputs = input_hashes(sheet)
+    # Of the very bytes that were read, or taken before: what changes meanwhile is seen as changed the next time.
     if jobs > 1 and len(sheet.devices) > _ALONE:
+        inputs = input_hashes(sheet)
         result, pages = _measure_in_processes(sheet, options, jobs, progress)
     else:
-        from benchtool.analysis import analyse
+        from benchtool.analysis import analyse, read_all
 
-        result = analyse(sheet, progress, strict=options.strict, trials=options.trials)
+        sweeps = read_all(sheet, options.strict)
+        inputs = input_hashes(sheet, sweeps)
+        result = analyse(sheet, progress, trials=options.trials, sweeps=sweeps)
         pages = tuple(_pages(result)) if options.pages else ()
     return Report(result, pages, inputs, options)
 
