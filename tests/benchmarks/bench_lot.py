@@ -7,7 +7,8 @@
 * Peak memory while the lot is measured: of the largest process, and of all of them together (resident, so that pages
   that processes share count once for each).
 
-Ratios are of times taken in turn in one run, the best of several, since machines are noisy. All commands find their
+Ratios are of times taken in turn in one run, the best of several, since machines are noisy; of the lot also those of
+each turn, with the reading that was timed beside it. All commands find their
 modules compiled, as an installation leaves them, in a folder of this run's own.
 Run: python tests/benchmarks/bench_lot.py [DEVICES]
 """
@@ -135,16 +136,21 @@ def measure_lots(environment, lot, devices):
         for file in files:
             skrf.Network(str(file))
 
-    best, reading, memory = float("inf"), float("inf"), None
+    turns, memory = [], None
+    read()
     for _ in range(TURNS):
-        reading = min(reading, seconds(read))
-        start = time.perf_counter()
+        # Reading before and after, so that a machine that slows down for a while slows both.
+        before, start = seconds(read), time.perf_counter()
         memory = measure_lot(environment, lot, "--again")
-        best = min(best, time.perf_counter() - start)
+        taken = time.perf_counter() - start
+        turns.append((taken, 0.5 * (before + seconds(read))))
+    ratios = sorted(taken / beside for taken, beside in turns)
+    best, reading = (min(column) for column in zip(*turns, strict=True))
     unchanged = min(seconds(lambda: measure_lot(environment, lot)) for _ in range(TURNS))
     cores = len(os.sched_getaffinity(0))
     print(f"\nlot of {devices} devices x 3 sweeps of 401 points, default trials, numbers only, {cores} processors")
     print(f"  {best:.2f} s; scikit-rf only reading the {len(files)} files {reading:.2f} s; ratio {best / reading:.1f}")
+    print(f"  ratio turn by turn {ratios[0]:.1f} to {ratios[-1]:.1f}, in the middle {ratios[len(ratios) // 2]:.1f}")
     print(f"  {1e3 * best * cores / devices:.0f} ms of processor for each device, starting included")
     print(f"  again, nothing changed: {unchanged:.2f} s; ratio {unchanged / reading:.2f}")
     print(f"  peak memory: {memory.largest:.0f} MiB the largest process, {memory.together:.0f} MiB all together")
