@@ -42,7 +42,7 @@ class EvenDraws:
     """
 
     def __init__(self, rng: np.random.Generator, counts: Sequence[int]) -> None:
-        self._rng, self._counts = rng, list(counts)
+        self._rng, self._counts = rng, tuple(counts)
         self._dimension = 0
 
     def uniform(self) -> FloatArray:
@@ -56,7 +56,7 @@ class EvenDraws:
         """Return vectors of unknown phase, (trials,), of a length for each segment."""
         if self._dimension < len(VECTOR):
             # From tables: a sine and a cosine of each would cost several times as much.
-            vectors = np.concatenate([_phasors(count, self._dimension) for count in self._counts])
+            vectors = _phasors(self._counts, self._dimension)
         else:
             vectors = np.exp(2j * np.pi * np.concatenate([self._places(count) for count in self._counts]))
         self._dimension += 1
@@ -86,7 +86,9 @@ def _places(count: int, dimension: int) -> FloatArray:
     return places
 
 
-@lru_cache(maxsize=256)
-def _phasors(count: int, dimension: int) -> ComplexArray:
-    phasors: ComplexArray = readonly(np.exp(2j * np.pi * _places(count, dimension)), np.complex128)
+@lru_cache(maxsize=64)
+def _phasors(counts: tuple[int, ...], dimension: int) -> ComplexArray:
+    """Return the same of several segments, as vectors round the circle."""
+    places = np.concatenate([_places(count, dimension) for count in counts])
+    phasors: ComplexArray = readonly(np.exp(2j * np.pi * places), np.complex128)
     return phasors

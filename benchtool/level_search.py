@@ -100,14 +100,13 @@ class Levels:
         low, at, high = nodes[middle - 1], nodes[middle], nodes[middle + 1]
         with np.errstate(divide="ignore", invalid="ignore"):
             left, top, right = (np.log(self._power[self._rows, middle + step]) for step in (-1, 0, 1))
-            # The vertex of the parabola through three nodes, and from there Newton's method.
+            # The vertex of the parabola through three nodes, and from there a step of Newton's.
             fall, rise = (top - left) / (at - low), (right - top) / (high - at)
             at = 0.5 * (low + at) + 0.5 * fall * (high - low) / (fall - rise)
             found = (fall > rise) & (at > low) & (at < high)
             at = np.where(found, at, nodes[node])
-            for _ in range(_STEPS):
-                _, slope, bend = self._logarithm(at, 2)
-                at = np.where(bend < 0.0, np.minimum(np.maximum(at - slope / bend, low), high), at)
+            _, slope, bend = self._logarithm(at, 2)
+            at = np.where(bend < 0.0, np.minimum(np.maximum(at - slope / bend, low), high), at)
             (level,) = self._logarithm(at, 0)
         # Where no top is found between the nodes, it is at one.
         best = np.maximum(np.maximum(left, top), right)
