@@ -23,9 +23,11 @@ __all__ = ["LevelSearch", "Levels"]
 _EVERY: Final = 6
 """Of one fit with one hump every so many nodes are looked at; of several fits, or humps that vie, all."""
 _FEW_NODES: Final = 12
+"""So few nodes between the limits are looked at one by one."""
 _VYING: Final = 10.0**-0.3
 """Share of the highest power from which another hump may be the highest of a copy: half of it."""
 _STEPS: Final = 2
+"""Of Newton's method to an edge: a steep skirt needs both."""
 _DB: Final = 10.0 / float(np.log(10.0))
 """Decibels for each unit of the natural logarithm of power."""
 
@@ -95,7 +97,8 @@ class Levels:
         search, nodes, node = self._search, self._search.nodes_hz, self._top
         middle = np.minimum(np.maximum(node, search.first + 1), search.last - 1)
         if search.last - search.first < 2:
-            level = _DB * np.log(self._power[self._rows, node])
+            with np.errstate(divide="ignore"):
+                level = _DB * np.log(self._power[self._rows, node])
             return nodes[node].reshape(self._shape), level.reshape(self._shape)
         low, at, high = nodes[middle - 1], nodes[middle], nodes[middle + 1]
         with np.errstate(divide="ignore", invalid="ignore"):

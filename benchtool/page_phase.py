@@ -37,7 +37,7 @@ def draw_phase(paper: Paper, device: DeviceResult, view: View, panel: Panel) -> 
     frequency, phase = sweep.frequency_hz[shown] / view.factor, _turned(device)[shown]
     straight = _straight_lines(device, view)
     notes = ["ring: the figure"] if _known(device) is not None else []
-    notes += ["dashed: straight"] if straight else []
+    notes += ["dashed: straight line"] if straight else []
     panel.heading_and_note(paper, "Phase, °", f"against {view.unit}", notes)
     area = panel.plot()
     axes = area.axes(paper)

@@ -379,6 +379,16 @@ def test_bound_moves_as_smoothly_as_the_doubt():
     assert np.max(steps) < 3.0 * np.min(steps)
 
 
+@pytest.mark.parametrize("u", [0.02, 0.05, 0.1, 0.2, 0.5])
+@pytest.mark.parametrize("drives", [(-38.0, -28.0), (-48.0, -38.0, -28.0), (-38.0, -33.0)])
+def test_bound_is_where_a_fine_grid_has_it(monkeypatch, drives, u):
+    # The likelihood bends where it crosses the limit: a chord between two nodes would give too high a bound.
+    bound = estimate_onset(table(drives, u=u), "s0.s2p").input_p1db_dbm.value
+    monkeypatch.setattr("benchtool.onset_belief._GRIDS", (6001, 81))
+    fine = estimate_onset(table(drives, u=u), "s0.s2p").input_p1db_dbm.value
+    assert_allclose(bound, fine, rtol=0, atol=0.025)  # dB; a chord is up to 0.06 off
+
+
 def test_suspect_pad_leaves_the_onset_open():
     two = (-38.0, -18.0)
     seen = table(two, offsets=[0.0, -2.0], pads=(pad("a20", 20.0, [-1, 0], [-1, 0]),))

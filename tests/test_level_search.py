@@ -161,6 +161,13 @@ def test_a_trace_without_shape_has_its_level_everywhere(value):
     assert top == expected or abs(top - expected) < 1e-9
 
 
+def test_two_nodes_of_nothing_have_no_level_and_no_warning():
+    nothing = np.zeros(F.size, complex)
+    curve = fit_curve(F, nothing, F0, F0, NOISE_FREE)
+    at, top = LevelSearch(curve, nothing).levels(nothing).highest()
+    assert (float(at), float(top)) == (F0, -np.inf)
+
+
 def test_noisy_copies_agree_with_a_minimiser():
     rng = np.random.default_rng(8)
     s21 = butterworth(2) + 0.02 * (rng.normal(size=F.size) + 1j * rng.normal(size=F.size))
